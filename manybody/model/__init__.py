@@ -1,0 +1,1 @@
+"""What is studied: lattices, energy functions on products of spheres, and their quantization."""

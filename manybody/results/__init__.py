@@ -1,0 +1,1 @@
+"""What came out: the dataset, its scaling, its figures and its report."""

@@ -1,0 +1,1 @@
+"""From a workflow file to finished points."""
