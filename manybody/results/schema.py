@@ -13,13 +13,13 @@ Flags: a record gives the meaning as text (or a bool for no/yes); the dataset st
 "not known", so that flag variables stay integers in memory and need no fill value.
 """
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 CONVENTIONS = "CF-1.11"
 COMPONENTS = ("x", "y", "z")
 
 POINT_KEYS = ("lattice", "sites", "spin", "rule", "parameters")
-"""What identifies a record, beside the variables: lattice (str, "" where there is one), sites, spin, rule, parameters."""
+"""What identifies a record beside its variables; lattice is "" where a study has one."""
 
 RESERVED_NAMES = ("lattice", "sites", "spin", "rule", "site", "other_site", "component", "cut", "stage", "pair", "end")
 """Names that a parameter may not take (nor that of any variable), because they are dimensions of the dataset."""
@@ -102,8 +102,8 @@ _CLUSTER = (
         "how the classical bound was obtained",
         dtype="flag",
         flags=("multipliers", "relaxation", "clusters", "terms", "constant"),
-        meaning="multipliers of the stationary point, optimal multipliers of the semidefinite relaxation, sum of minima "
-        "of small clusters, sum of the minima of single terms, or a constant function",
+        meaning="multipliers of the stationary point, optimal multipliers of the semidefinite relaxation, sum of "
+        "minima of small clusters, sum of the minima of single terms, or a constant function",
     ),
     Variable("classical_mean", "sphere average of the energy function", units="energy", meaning="f_mean"),
     Variable("classical_minima", "distinct minima found", units="1", dtype="count"),
@@ -360,13 +360,9 @@ _GROUPED = (
 )
 
 
-def _with_per(variables, per):
-    from dataclasses import replace
-
-    return tuple(replace(v, per=per) for v in variables)
-
-
-VARIABLES: dict[str, Variable] = {v.name: v for v in (*_with_per(_CLUSTER, "cluster"), *_POINT, *_GROUPED)}
+VARIABLES: dict[str, Variable] = {
+    v.name: v for v in (*(replace(v, per="cluster") for v in _CLUSTER), *_POINT, *_GROUPED)
+}
 """Every dataset variable by name. The scaling group is described where it is made (scaling.py)."""
 
 GROUPS = tuple(dict.fromkeys(v.group for v in VARIABLES.values() if v.group))
