@@ -47,9 +47,7 @@ def biquadratic(sites: int, pairs: np.ndarray, strength: float) -> EnergyFunctio
     # (n.m)^2 = 1/3 + 2/3 P_2(n.m), and P_2(n.m) = sum_q C_2q(n) C_2q(m).
     scalar = strength[:, None, None] / 3
     tensor = strength[:, None, None] * (2 / 3) * np.eye(5)
-    return EnergyFunction(
-        sites, 0.0, [Group(((0, 2), (0, 2)), pairs, scalar), Group(((2, 2), (2, 2)), pairs, tensor)]
-    )
+    return EnergyFunction(sites, 0.0, [Group(((0, 2), (0, 2)), pairs, scalar), Group(((2, 2), (2, 2)), pairs, tensor)])
 
 
 def field(sites: int, where: Sequence[int], vector) -> EnergyFunction:

@@ -223,7 +223,9 @@ class EnergyFunction:
                     matrices = harmonics.rotation_matrix(rank, each)[group.sites[:, slot]]
                 # f(R^-1 n): coefficients c . C(R^-1 n) = c . D^T C(n), so c becomes D c in this slot.
                 moved = np.moveaxis(tensor, slot + 1, -1)
-                moved = np.einsum("t...p,tqp->t...q", moved, np.broadcast_to(matrices, (group.terms, *matrices.shape[1:])))
+                moved = np.einsum(
+                    "t...p,tqp->t...q", moved, np.broadcast_to(matrices, (group.terms, *matrices.shape[1:]))
+                )
                 tensor = np.moveaxis(moved, -1, slot + 1)
             groups.append(Group(group.key, group.sites, tensor))
         return EnergyFunction(self.sites, self.constant, groups)
@@ -251,7 +253,7 @@ class EnergyFunction:
             # Two generators of the rotation group make the third: two kept axes are a borderline third one.
             return np.eye(3) if len(kept) else np.zeros((0, 3))
         axis = kept[0]
-        axis = np.where(np.abs(axis) < 1e-12, 0.0, axis) * np.sign(axis[np.argmax(np.abs(axis))])
+        axis = np.where(np.abs(axis) < 1e-12, 0.0, axis * np.sign(axis[np.argmax(np.abs(axis))]))
         return (axis / np.linalg.norm(axis))[None]
 
     def restricted(self, keep: Sequence[int]) -> "EnergyFunction":
@@ -326,7 +328,9 @@ def _canonical(sites: int, groups: Iterable[Group]) -> tuple[Group, ...]:
 def _check(sites: int, group: Group) -> None:
     numbers, coefficients = np.asarray(group.sites), np.asarray(group.coefficients)
     if numbers.ndim != 2 or numbers.shape[1] != len(group.key):
-        raise ValueError(f"sites of a term with key {group.key} must have shape (terms, {len(group.key)}), got {numbers.shape}")
+        raise ValueError(
+            f"sites of a term with key {group.key} must have shape (terms, {len(group.key)}), got {numbers.shape}"
+        )
     expected = (len(numbers), *[2 * rank + 1 for rank, _ in group.key])
     if coefficients.shape != expected:
         raise ValueError(f"coefficients of key {group.key} must have shape {expected}, got {coefficients.shape}")

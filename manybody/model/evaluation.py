@@ -155,11 +155,19 @@ class Contraction:
             if rank >= 2:
                 outer = self._contract(values, keep=(first,))
                 inner = harmonics(rank - 2, self._at(n, first))
-                yield first, first, np.einsum("tqb,acqp,tbp->tacb", outer, second_derivative(rank), inner, optimize=True)
+                yield (
+                    first,
+                    first,
+                    np.einsum("tqb,acqp,tbp->tacb", outer, second_derivative(rank), inner, optimize=True),
+                )
             for second in range(len(self.ranks)):
                 if second != first:
                     outer = self._contract(values, keep=(first, second))
-                    yield first, second, np.einsum("tqpb,tqab,tpcb->tacb", outer, slopes[first], slopes[second], optimize=True)
+                    yield (
+                        first,
+                        second,
+                        np.einsum("tqpb,tqab,tpcb->tacb", outer, slopes[first], slopes[second], optimize=True),
+                    )
 
     def _at(self, n: np.ndarray, slot: int) -> np.ndarray:
         """Vectors of one slot, (T, B, 3)."""

@@ -42,7 +42,9 @@ def harmonics(rank: int, n: np.ndarray) -> np.ndarray:
             sectoral *= 1.0 if q == 1 else math.sqrt((2 * q - 1) / (2 * q))
         below, legendre = np.zeros_like(x), np.full_like(x, sectoral)
         for k in range(q + 1, rank + 1):
-            step = ((2 * k - 1) * z * legendre - math.sqrt((k - 1) ** 2 - q * q) * r2 * below) / math.sqrt(k * k - q * q)
+            step = ((2 * k - 1) * z * legendre - math.sqrt((k - 1) ** 2 - q * q) * r2 * below) / math.sqrt(
+                k * k - q * q
+            )
             below, legendre = legendre, step
         values[..., rank + q] = legendre * real
         if q > 0:
@@ -72,7 +74,9 @@ def derivative(rank: int) -> np.ndarray:
     points, weights = sphere_quadrature(2 * rank)
     upper, lower = harmonics(rank, points), harmonics(rank - 1, points)
     # n_a C_(k-1,p) = sum_q U[a,p,q] C_kq + lower ranks, and D[a,q,p] = (2k-1)(2k+1) <C_kq n_a C_(k-1,p)>.
-    matrix = (2 * rank - 1) * (2 * rank + 1) * np.einsum("s,sa,sq,sp->aqp", weights, points, upper, lower, optimize=True)
+    matrix = (
+        (2 * rank - 1) * (2 * rank + 1) * np.einsum("s,sa,sq,sp->aqp", weights, points, upper, lower, optimize=True)
+    )
     return _without_noise(matrix)
 
 
@@ -133,7 +137,9 @@ def expand_polynomial(polynomial: Mapping[Monomial, float]) -> dict[tuple[int, i
     return {key: vector for key, vector in cleaned.items() if vector.any()}
 
 
-def expand_function(function: Callable[[np.ndarray], np.ndarray], rank: int, oversampling: int = 32) -> list[np.ndarray]:
+def expand_function(
+    function: Callable[[np.ndarray], np.ndarray], rank: int, oversampling: int = 32
+) -> list[np.ndarray]:
     """Harmonic coefficients [(1,), (3,), ... (2 rank + 1,)] of any function of one unit vector, points (P, 3) -> (P,).
 
     Projection by a quadrature exact to degree 2 rank + `oversampling`; a function that is not smooth needs more.
