@@ -58,7 +58,7 @@ def field(sites: int, where: Sequence[int], vector) -> EnergyFunction:
 
 
 def anisotropy(sites: int, where: Sequence[int], axis: Sequence[float], strength: float) -> EnergyFunction:
-    """+ K (n_i.axis)^2. The axis (3,) is normalized here; a zero axis is an error. K: a number or one per site listed."""
+    """+ K (n_i.axis)^2. The axis (3,) is normalized here, zero is an error. K: a number or one per site listed."""
     where = _numbers(where, 1)
     axis = np.asarray(axis, dtype=float)
     length = np.linalg.norm(axis)
@@ -70,7 +70,10 @@ def anisotropy(sites: int, where: Sequence[int], axis: Sequence[float], strength
 
 
 def product(sites: int, where: np.ndarray, polynomials: Sequence[Mapping[Monomial, float]]) -> EnergyFunction:
-    """Sum over rows of `where` (T, m) of p_1(n_i) p_2(n_j) ..., m site polynomials {(a, b, c): coefficient of x^a y^b z^c}."""
+    """Sum over the rows (i, j, ...) of `where` (T, m) of p_1(n_i) p_2(n_j) ...
+
+    Each of the m site polynomials is a mapping {(a, b, c): coefficient of x^a y^b z^c}.
+    """
     where = _numbers(where, len(polynomials))
     groups = []
     for factors in itertools.product(*[expand_polynomial(p).items() for p in polynomials]):

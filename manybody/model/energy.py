@@ -1,8 +1,9 @@
 """Energy functions on a product of spheres: one object that both branches read.
 
-An EnergyFunction is f(n_1, ..., n_N) = constant + sum of groups, for N unit vectors. A group holds all terms that touch the
-same number of sites with the same ranks: site numbers (T, m) and coefficients (T, 2 k_1 + 1, ..., 2 k_m + 1) over the real
-spherical harmonics of manybody.model.harmonics. Evaluation is compiled once per function in manybody.model.evaluation.
+An EnergyFunction is f(n_1, ..., n_N) = constant + sum of groups, for N unit vectors. A group holds all terms that
+touch the same number of sites with the same ranks: site numbers (T, m) and coefficients
+(T, 2 k_1 + 1, ..., 2 k_m + 1) over the real spherical harmonics of manybody.model.harmonics. Evaluation is compiled
+once per function in manybody.model.evaluation.
 """
 
 import functools
@@ -23,8 +24,8 @@ Key = tuple[tuple[int, int], ...]
 class Group:
     """Terms of one kind.
 
-    key: ((rank, degree), ...), one pair per site of a term. The degree is that of the polynomial as written and matters to
-    the rule `substitution` alone; rank <= degree, both of the same parity, for polynomials.
+    key: ((rank, degree), ...), one pair per site of a term. The degree is that of the polynomial as written and
+    matters to the rule `substitution` alone; rank <= degree, both of the same parity, for polynomials.
     sites: (T, m) site numbers; coefficients: (T, 2 k_1 + 1, ..., 2 k_m + 1).
     """
 
@@ -150,7 +151,7 @@ class EnergyFunction:
         return values.reshape(shape)[()], self._rows(gradients, shape)
 
     def hessian(self, n: np.ndarray) -> np.ndarray:
-        """Riemannian Hessian (..., 3 N, 3 N) at n (..., N, 3), in ambient coordinates with normal directions annihilated."""
+        """Riemannian Hessian (..., 3 N, 3 N) at n (..., N, 3), ambient, with normal directions annihilated."""
         n = self._checked(n)
         flat = n.reshape(-1, self.sites, 3)
         dense = np.empty((len(flat), 3 * self.sites, 3 * self.sites))
@@ -257,7 +258,7 @@ class EnergyFunction:
         return (axis / np.linalg.norm(axis))[None]
 
     def restricted(self, keep: Sequence[int]) -> "EnergyFunction":
-        """The terms wholly inside the sites `keep`, renumbered 0 ... len(keep) - 1 in that order; the constant is left out."""
+        """The terms wholly inside the sites `keep`, renumbered in that order; the constant is left out."""
         keep = np.asarray(keep, dtype=np.int64)
         number = np.full(self.sites, -1)
         number[keep] = np.arange(len(keep))
@@ -269,7 +270,7 @@ class EnergyFunction:
         return EnergyFunction(len(keep), 0.0, groups)
 
     def components(self) -> list[np.ndarray]:
-        """Sorted site numbers of each connected cluster, in the order of their smallest site; uncoupled sites stand alone."""
+        """Sorted site numbers of each connected cluster, ordered by smallest site; uncoupled sites stand alone."""
         links = [g.sites[:, [0, slot]] for g in self.groups for slot in range(1, g.sites.shape[1])]
         links = np.concatenate(links) if links else np.zeros((0, 2), dtype=np.int64)
         graph = sparse.csr_array((np.ones(len(links)), (links[:, 0], links[:, 1])), shape=(self.sites, self.sites))

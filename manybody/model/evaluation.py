@@ -1,8 +1,8 @@
 """Fast values and derivatives of an energy function.
 
-Everything of total degree at most 2 becomes one sparse matrix and one vector in the Cartesian components, so that a batch
-costs one sparse product. Terms of higher rank or with more sites are contracted over the harmonics of their sites.
-Configurations come as columns (N, 3, B): B is the batch.
+Everything of total degree at most 2 becomes one sparse matrix and one vector in the Cartesian components, so that a
+batch costs one sparse product. Terms of higher rank or with more sites are contracted over the harmonics of their
+sites. Configurations come as columns (N, 3, B): B is the batch.
 """
 
 from dataclasses import dataclass
@@ -73,7 +73,7 @@ class Evaluation:
         return values, field
 
     def hessian(self, configuration: np.ndarray) -> sparse.csr_array:
-        """Riemannian Hessian (3 N, 3 N) at one configuration (N, 3): P H P - (n . gradient) P with P the tangent projection."""
+        """Riemannian Hessian (3 N, 3 N) at (N, 3): P H P - (n . gradient) P, P the tangent projection."""
         n = configuration[..., None]
         _, field = self._value_and_euclidean(n)
         radial = np.einsum("nab,nab->n", n, field)

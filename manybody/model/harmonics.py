@@ -1,12 +1,12 @@
 """Real spherical harmonics of one unit vector, and site polynomials expanded in them.
 
-Normalization (Schmidt semi-normalized): sum_q C_kq(n)^2 = 1 for every unit vector n and rank k, hence the sphere average of
-C_kq C_k'q' is delta_kk' delta_qq' / (2k + 1). Order q = -k ... k without the Condon-Shortley sign: C_kq is proportional to
-Re (x + iy)^q for q > 0 and to Im (x + iy)^|q| for q < 0, with a positive leading coefficient in z. So C_0 = 1 and
-C_1 = (y, z, x).
+Normalization (Schmidt semi-normalized): sum_q C_kq(n)^2 = 1 for every unit vector n and rank k, hence the sphere
+average of C_kq C_k'q' is delta_kk' delta_qq' / (2k + 1). Order q = -k ... k without the Condon-Shortley sign: C_kq is
+proportional to Re (x + iy)^q for q > 0 and to Im (x + iy)^|q| for q < 0, with a positive leading coefficient in z. So
+C_0 = 1 and C_1 = (y, z, x).
 
-Off the unit sphere the functions here are the solid harmonics r^k C_k(n / r): harmonic polynomials, homogeneous of degree k,
-whose derivatives are solid harmonics of rank k - 1.
+Off the unit sphere the functions here are the solid harmonics r^k C_k(n / r): harmonic polynomials, homogeneous of
+degree k, whose derivatives are solid harmonics of rank k - 1.
 """
 
 import functools
@@ -54,7 +54,7 @@ def harmonics(rank: int, n: np.ndarray) -> np.ndarray:
 
 @functools.cache
 def sphere_quadrature(degree: int) -> tuple[np.ndarray, np.ndarray]:
-    """Points (P, 3) and weights (P,), summing to 1, that average every polynomial up to `degree` over the sphere exactly.
+    """Points (P, 3) and weights (P,), summing to 1, that average polynomials up to `degree` exactly.
 
     Gauss-Legendre in z, equally spaced in azimuth.
     """
@@ -82,7 +82,7 @@ def derivative(rank: int) -> np.ndarray:
 
 @functools.cache
 def generators(rank: int) -> np.ndarray:
-    """G (3, 2 rank + 1, 2 rank + 1), antisymmetric: d/dt C_k(R_a(t) n) at t = 0 is G[a] C_k(n), R_a a rotation about axis a."""
+    """Antisymmetric G (3, 2 rank + 1, 2 rank + 1): d/dt C_k(R_a(t) n) at t = 0 is G[a] C_k(n), R_a about axis a."""
     size = 2 * rank + 1
     if rank == 0:
         return np.zeros((3, 1, 1))
@@ -119,9 +119,9 @@ def _expand_monomial(exponents: Monomial) -> dict[int, np.ndarray]:
 def expand_polynomial(polynomial: Mapping[Monomial, float]) -> dict[tuple[int, int], np.ndarray]:
     """Expand a polynomial {(a, b, c): coefficient of x^a y^b z^c} of one unit vector in harmonics.
 
-    Returns {(rank, degree): coefficients (2 rank + 1,)}. Each homogeneous part keeps the degree as written, which only the
-    rule `substitution` reads: x^2 + y^2 + z^2 is rank 0 of degree 2. Raises ValueError for exponents that are not
-    non-negative integers.
+    Returns {(rank, degree): coefficients (2 rank + 1,)}. Each homogeneous part keeps the degree as written, which
+    only the rule `substitution` reads: x^2 + y^2 + z^2 is rank 0 of degree 2. Raises ValueError for exponents that
+    are not non-negative integers.
     """
     parts: dict[tuple[int, int], np.ndarray] = {}
     for exponents, coefficient in polynomial.items():

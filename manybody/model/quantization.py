@@ -1,16 +1,16 @@
 """From an energy function to a spin operator: four quantization rules, and the symbols that lead back.
 
 A rule multiplies every harmonic C_kq of a site with spin S by one number and reads it as the operator W_kq of
-manybody.model.spin_matrices. With the Berezin factor b_k(S), the lower symbol of W_kq is sqrt(b_k) C_kq and its upper symbol
-is C_kq / sqrt(b_k), so that
+manybody.model.spin_matrices. With the Berezin factor b_k(S), the lower symbol of W_kq is sqrt(b_k) C_kq and its upper
+symbol is C_kq / sqrt(b_k), so that
 
     wick          f is the lower (Q, Husimi) symbol          factor 1 / sqrt(b_k)      undefined for k > 2S
     weyl          f is the Stratonovich-Weyl symbol          factor 1
     toeplitz      f is the upper (P) symbol                  factor sqrt(b_k)
     substitution  n -> S / S, symmetrized at each site       by the polynomial as written
 
-Sources: Berezin 1975, Commun. Math. Phys. 40, 153; Lieb 1973, Commun. Math. Phys. 31, 327; Varilly and Gracia-Bondia 1989,
-Ann. Phys. 190, 107; Bordemann, Meinrenken, Schlichenmaier 1994, Commun. Math. Phys. 165, 281.
+Sources: Berezin 1975, Commun. Math. Phys. 40, 153; Lieb 1973, Commun. Math. Phys. 31, 327; Varilly and Gracia-Bondia
+1989, Ann. Phys. 190, 107; Bordemann, Meinrenken, Schlichenmaier 1994, Commun. Math. Phys. 165, 281.
 """
 
 import functools
@@ -41,7 +41,8 @@ def substitution_factor(rank: int, degree: int, spin: float) -> float:
     """The number g with: n -> S / S, symmetrized, sends |n|^(degree - rank) C_kq(n) to g W_kq.
 
     The map commutes with rotations, so the number follows from one case: z^degree becomes S_z^degree / S^degree, and
-    z^degree = sum_k a_k |n|^(degree - k) C_k0 with a_k = (2k + 1) degree! / (2^j j! (degree + k + 1)!!), j = (degree - k) / 2.
+    z^degree = sum_k a_k |n|^(degree - k) C_k0, a_k = (2k + 1) degree! / (2^j j! (degree + k + 1)!!) with
+    j = (degree - k) / 2.
     """
     if (degree - rank) % 2 or degree < rank:
         raise ValueError(f"rank {rank} cannot come from a homogeneous polynomial of degree {degree}")
@@ -59,7 +60,7 @@ def substitution_factor(rank: int, degree: int, spin: float) -> float:
 
 
 def rule_factor(rule: str, rank: int, degree: int, spin: float) -> float:
-    """Number by which `rule` multiplies W_kq for C_kq. Raises UndefinedQuantization (wick, rank > 2S) and ValueError."""
+    """Number by which `rule` multiplies W_kq. Raises UndefinedQuantization (wick, rank > 2S) and ValueError."""
     if rule == "substitution":
         return substitution_factor(rank, degree, spin)
     b = berezin_factor(rank, spin)
@@ -78,8 +79,9 @@ def rule_factor(rule: str, rank: int, degree: int, spin: float) -> float:
 class SpinOperator:
     """A Hermitian operator on N spins: its Stratonovich-Weyl symbol, read with W_kq in place of C_kq.
 
-    spins (N,): the spin of every site. The operator is symbol.constant + sum over terms of coefficients times the product
-    of W_kq at the term's sites. Sums of operators of the same spins are operators: operator + operator, number * operator.
+    spins (N,): the spin of every site. The operator is symbol.constant + sum over terms of coefficients times the
+    product of W_kq at the term's sites. Sums of operators of the same spins are operators: operator + operator,
+    number * operator.
     """
 
     spins: np.ndarray
@@ -137,8 +139,8 @@ class SpinOperator:
 def quantize(f: EnergyFunction, spin, rule: str = "substitution") -> SpinOperator:
     """The operator of energy function f for one spin, or one per site (N,), under a rule.
 
-    Raises ValueError for a spin that is no positive multiple of 1/2 and for an unknown rule; UndefinedQuantization, naming
-    the term, where the rule has no operator.
+    Raises ValueError for a spin that is no positive multiple of 1/2 and for an unknown rule; UndefinedQuantization,
+    naming the term, where the rule has no operator.
     """
     spins = np.broadcast_to(np.asarray([spin_number(s) for s in np.atleast_1d(spin)]), (f.sites,))
     if rule not in RULES:

@@ -18,12 +18,12 @@ def spin_number(spin) -> float:
 def harmonic_diagonals(spin: float, rank: int) -> tuple[np.ndarray, ...]:
     """The raising parts of the operators W_kq of rank k, q = 0 ... k, each the one diagonal on which it lives.
 
-    Entry q is the vector t (2S + 1 - q,) with <m + q| T_q |m> > 0 at the highest m: the matrix T_q has T_q[i, i + q] = t[i].
+    Entry q is the vector t (2S + 1 - q,) with <m + q| T_q |m> > 0 at the highest m: T_q[i, i + q] = t[i].
     W_k0 = T_0, and for q > 0: W_kq = (T_q + T_q^T) / 2, W_k,-q = (T_q - T_q^T) / 2i. For k > 2S all are zero.
 
     On the q-th diagonal the tensor operators of rank q, q + 1, ... are polynomials in m, orthogonal under the trace
-    (discrete Chebyshev and Hahn polynomials), so a three-term recurrence with reorthogonalization gives them to rounding
-    error for every S, where repeated commutators lose digits.
+    (discrete Chebyshev and Hahn polynomials), so a three-term recurrence with reorthogonalization gives them to
+    rounding error for every S, where repeated commutators lose digits.
     """
     size = round(2 * spin) + 1
     m = spin - np.arange(size)
@@ -54,10 +54,10 @@ def harmonic_diagonals(spin: float, rank: int) -> tuple[np.ndarray, ...]:
 
 @functools.lru_cache(maxsize=256)
 def harmonic_operators(spin: float, rank: int) -> np.ndarray:
-    """W_kq (2k + 1, 2S + 1, 2S + 1) complex, q = -k ... k: Hermitian, trace(W_kq W_kq') = delta_qq' (2S + 1) / (2k + 1).
+    """Hermitian W_kq (2k + 1, 2S + 1, 2S + 1), q = -k ... k: trace(W_kq W_kq') = delta_qq' (2S + 1) / (2k + 1).
 
-    The operators whose Stratonovich-Weyl symbols are the real harmonics C_kq (Varilly, Gracia-Bondia 1989, Ann. Phys. 190,
-    107): q >= 0 real and symmetric, q < 0 imaginary and antisymmetric. W_1 = (S_y, S_z, S_x) / sqrt(S(S+1)).
+    The operators whose Stratonovich-Weyl symbols are the real harmonics C_kq (Varilly, Gracia-Bondia 1989, Ann. Phys.
+    190, 107): q >= 0 real and symmetric, q < 0 imaginary and antisymmetric. W_1 = (S_y, S_z, S_x) / sqrt(S(S+1)).
     """
     size = round(2 * spin) + 1
     operators = np.zeros((2 * rank + 1, size, size), dtype=complex)
