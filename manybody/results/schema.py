@@ -21,7 +21,23 @@ COMPONENTS = ("x", "y", "z")
 POINT_KEYS = ("lattice", "sites", "spin", "rule", "parameters")
 """What identifies a record beside its variables; lattice is "" where a study has one."""
 
-RESERVED_NAMES = ("lattice", "sites", "spin", "rule", "site", "other_site", "component", "cut", "stage", "pair", "end")
+RESERVED_NAMES = (
+    *(
+        "lattice",
+        "sites",
+        "spin",
+        "rule",
+        "site",
+        "other_site",
+        "component",
+        "cut",
+        "stage",
+        "pair",
+        "end",
+        "direction",
+    ),
+    *("parity", "power", "other_power", "tolerance"),
+)
 """Names that a parameter may not take (nor that of any variable), because they are dimensions of the dataset."""
 
 
@@ -30,7 +46,8 @@ class Variable:
     """One dataset variable.
 
     units: "energy" (the user's unit), "energy2" (its square), "1", "s", "bytes", or "" for flags and text.
-    dtype: "float", "count" (whole number, stored as int32; missing -> NaN in memory), "flag", "text".
+    dtype: "float"; "count" (whole number, stored as int32; missing -> NaN in memory); "index" (whole number padded
+    with -1, stays an integer); "flag"; "text".
     group: "" for the root of the tree, else the group's name.
     """
 
@@ -259,8 +276,28 @@ _GROUPED = (
         "sites of a pair",
         per="lattice",
         units="1",
-        dtype="count",
+        dtype="index",
         dims=("pair", "end"),
+        group="configuration",
+        meaning="-1 is padding; the order within a pair is that of the energy function",
+    ),
+    Variable(
+        "extent",
+        "extent of the cluster in unit cells, by direction",
+        per="lattice",
+        units="1",
+        dtype="index",
+        dims=("direction",),
+        group="configuration",
+        meaning="-1 is padding; missing for tables of pairs",
+    ),
+    Variable(
+        "periodic",
+        "cluster closed on itself in this direction",
+        per="lattice",
+        dtype="flag",
+        flags=_NO_YES,
+        dims=("direction",),
         group="configuration",
     ),
     Variable(
