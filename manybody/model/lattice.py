@@ -10,7 +10,7 @@ from dataclasses import dataclass
 import numpy as np
 from scipy import sparse
 
-from manybody.model.lattice_cells import CELLS, SHELLS, cell_pairs, cell_positions
+from manybody.model.lattice_cells import CELLS, SHELLS, cell_pairs, cell_positions, count_cell_pairs
 from manybody.model.lattice_table import PairTable
 
 SHAPES = (
@@ -82,8 +82,7 @@ class Lattice:
         "all" is every pair of sites i < j; of a table, every pair it lists. Each two sites come at most once.
         ValueError: a name unknown here, a torus too small, or a table that lists a pair under two labels ("all").
         """
-        if name not in self.selections:
-            raise ValueError(f"'{name}' selects no pairs of {self.describe()}; it has {', '.join(self.selections)}")
+        self.count_pairs(name)
         if self.table is not None:
             pairs = np.array(self.table.pairs, dtype=np.int64)[self.table.rows(name)]
             if name == "all":
@@ -96,8 +95,6 @@ class Lattice:
                     )
             return pairs
         if name == "all" or self.shape == "complete":
-            if self.sites * (self.sites - 1) // 2 > MAX_PAIRS:
-                raise ValueError(f"all pairs of {self.sites} sites are more than {MAX_PAIRS}")
             return np.stack(np.triu_indices(self.sites, 1), axis=1).astype(np.int64)
         if self.shape == "star":
             return np.stack([np.zeros(self.sites - 1, int), np.arange(1, self.sites)], axis=1).astype(np.int64)
@@ -105,6 +102,22 @@ class Lattice:
             first, second = self.extent
             return np.stack([np.repeat(np.arange(first), second), first + np.tile(np.arange(second), first)], axis=1)
         return cell_pairs(self.cell, self.extent, self.periodic, name)
+
+    def count_pairs(self, name: str = "nearest") -> int:
+        """How many pairs a name selects, without making them. ValueError as of `pairs`, or if there are too many."""
+        if name not in self.selections:
+            raise ValueError(f"'{name}' selects no pairs of {self.describe()}; it has {', '.join(self.selections)}")
+        if self.table is not None:
+            return len(self.table.rows(name))
+        if name == "all" or self.shape == "complete":
+            count = self.sites * (self.sites - 1) // 2
+        elif self.cell:
+            count = count_cell_pairs(self.cell, self.extent, self.periodic, name)
+        else:
+            count = self.sites - 1 if self.shape == "star" else self.extent[0] * self.extent[1]
+        if count > MAX_PAIRS:
+            raise ValueError(f"'{name}' selects {count} pairs of {self.describe()}; at most {MAX_PAIRS} are allowed")
+        return count
 
     def exchange(self, name: str = "all") -> np.ndarray:
         """The table's own exchange matrices (P, 3, 3), in the order of `pairs(name)`."""

@@ -7,6 +7,7 @@ and their direction names are part of what a workflow file may rely on.
 
 import functools
 import itertools
+import math
 from dataclasses import dataclass
 
 import numpy as np
@@ -122,6 +123,19 @@ def cell_pairs(shape: str, extent: tuple[int, ...], periodic: tuple[bool, ...], 
     return pairs[np.stack(inside, 1)].astype(np.int64)
 
 
+def count_cell_pairs(shape: str, extent: tuple[int, ...], periodic: tuple[bool, ...], name: str) -> int:
+    """How many pairs `cell_pairs` would give, without making them; the same ValueError."""
+    kinds = kinds_of(shape, name)
+    _check_torus(shape, extent, periodic, name, kinds)
+    return sum(
+        math.prod(
+            length if wraps else max(0, length - abs(x))
+            for x, length, wraps in zip(step, extent, periodic, strict=True)
+        )
+        for _, _, step in kinds
+    )
+
+
 def _grid(extent: tuple[int, ...]) -> np.ndarray:
     return np.indices(extent).reshape(len(extent), -1).T
 
@@ -149,9 +163,8 @@ def _check_torus(shape: str, extent: tuple[int, ...], periodic: tuple[bool, ...]
             f"sites {i + s} and {j + t} {reason}; enlarge the extent or open that direction"
         )
 
-    nearer = {} if name not in SHELLS else {
-        min(both_ways(kind)): shell for shell in SHELLS[: SHELLS.index(name)] for kind in shells(shape)[shell] if fits(kind)
-    }  # fmt: skip
+    closer = SHELLS[: SHELLS.index(name)] if name in SHELLS else ()
+    nearer = {min(both_ways(kind)): shell for shell in closer for kind in shells(shape)[shell] if fits(kind)}
     seen = set()
     for kind in filter(fits, kinds):
         forward, back = both_ways(kind)
