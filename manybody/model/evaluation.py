@@ -197,7 +197,8 @@ class Contraction:
 
 def second_derivative(rank: int) -> np.ndarray:
     """(3, 3, 2 rank + 1, 2 rank - 3): d2 C_rank / dn_a dn_b = D[a, b] C_(rank-2) as solid harmonics; rank >= 2."""
-    return np.einsum("aqp,bpr->abqr", derivative(rank), derivative(rank - 1))
+    matrix = np.einsum("aqp,bpr->abqr", derivative(rank), derivative(rank - 1))
+    return (matrix + matrix.swapaxes(0, 1)) / 2
 
 
 def _tangential(n: np.ndarray, v: np.ndarray) -> np.ndarray:
