@@ -36,7 +36,8 @@ def sector_index(spins: np.ndarray, sector: float) -> int:
 class Basis:
     """States of one sector, S^z = `sector`, or of the whole space (None), in ascending order of their digits.
 
-    dimension: number of states. cut: the sites 0 ... cut - 1 form the left half.
+    dimension: number of states. cut: the sites 0 ... cut - 1 form the left half. left_start, left_counts: where the states
+    of each left code start and how many there are; they pair it with right_order[right_first[left]], ... in this order.
     Raises TooLarge where the tables or numbers would not fit, ValueError for a sector that does not exist.
     """
 
@@ -68,7 +69,7 @@ class Basis:
         self.left_counts = counts
         self.left_start = np.concatenate([[0], np.cumsum(counts)])
         self.dimension = int(self.left_start[-1])
-        self._right_first = first[need]
+        self.right_first = first[need]
 
     def codes(self, start: int, stop: int) -> tuple[np.ndarray, np.ndarray]:
         """Left and right code (int64) of the states start ... stop - 1."""
@@ -79,7 +80,7 @@ class Basis:
         edges = np.clip(self.left_start[low : high + 1], start, stop)
         left = np.repeat(lefts, np.diff(edges))
         rank = np.arange(start, stop) - self.left_start[left]
-        return left, self.right_order[self._right_first[left] + rank].astype(np.int64)
+        return left, self.right_order[self.right_first[left] + rank].astype(np.int64)
 
     def index(self, left: np.ndarray, right: np.ndarray) -> np.ndarray:
         """State numbers of codes that belong to the sector (not checked)."""

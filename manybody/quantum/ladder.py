@@ -13,7 +13,7 @@ import numpy as np
 from manybody.model.quantization import SpinOperator
 from manybody.model.spin_matrices import harmonic_diagonals
 
-NOISE = 1e-15
+NOISE = 1e-14
 """Ladder coefficients below this fraction of the largest are taken for rounding errors of a rotation."""
 
 

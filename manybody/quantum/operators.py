@@ -98,6 +98,19 @@ def matrix_bytes(parts: Shifts, sector: float | None) -> int:
     return entries * ((8 if parts.real else 16) + (4 if entries < 2**31 else 8)) + 4 * int(dims)
 
 
+def diagonal_of(parts: Shifts, basis: Basis) -> np.ndarray:
+    """The diagonal of the matrix, (dimension,) real."""
+    terms = [term for term in parts.terms if term.diagonal]
+    diagonal = np.empty(basis.dimension)
+    for start in range(0, basis.dimension, _CHUNK // 16):
+        left, right = basis.codes(start, start + _CHUNK // 16)
+        values = np.full(len(left), parts.constant)
+        for term in terms:
+            values += _look_up(term, basis, left, right).real
+        diagonal[start : start + len(left)] = values
+    return diagonal
+
+
 def _without(counts: np.ndarray, removed: tuple[int, ...]) -> np.ndarray:
     """Sector dimensions after taking sites of the given dimensions away: polynomial division by 1 + x + ... + x^(d-1)."""
     for d in removed:

@@ -1,0 +1,311 @@
+"""Exact ground states: dense diagonalization of small sectors, Lanczos iteration in large ones.
+
+The ground state is looked for in every sector of a conserved total spin component where that is affordable, otherwise from
+the classical magnetization downhill until both neighbouring sectors lie higher. Under full rotation symmetry the sector of
+lowest |S^z| holds a member of every multiplet.
+"""
+
+import math
+from collections.abc import Callable, Iterable
+from dataclasses import dataclass, replace
+
+import numpy as np
+import scipy.linalg
+from scipy.sparse.linalg import ArpackNoConvergence, eigsh
+
+from manybody.model.quantization import SpinOperator
+from manybody.quantum.basis import Basis, TooLarge, sector_dimensions
+from manybody.quantum.frame import Frame, natural_frame
+from manybody.quantum.ladder import Shifts, shifts
+from manybody.quantum.operators import assemble, entry_count
+from manybody.quantum.result import GroundState, QuantumSettings
+from manybody.quantum.split_operator import SplitOperator, split_bytes
+
+LARGEST_DIMENSION = 2_200_000
+"""Sectors beyond this are left to matrix-product states, whatever the memory."""
+
+_DENSE = 300  # up to here LAPACK is faster than starting an iteration
+_VECTORS = 20  # Lanczos vectors kept between restarts
+_TOLERANCE = 1e-12  # residual relative to the norm bound
+_COARSE = 1e-4  # the same, for a first look at a sector
+_SCAN_ALL = 200_000  # total dimension up to which every sector is solved outright
+_SCAN_COARSE = 4_000_000  # and up to which every sector gets at least a coarse look
+_ROUNDING = 8 * np.finfo(float).eps  # of the norm bound: floor of the error
+
+
+@dataclass(frozen=True)
+class SectorState:
+    """An exact ground state: amplitudes `vector` over the states of `basis`, in the frame given by rotations (N, 3, 3).
+
+    Site vectors of the original frame are R_i^T times those of this frame.
+    """
+
+    vector: np.ndarray
+    basis: Basis
+    rotations: np.ndarray
+
+    def to_full(self) -> np.ndarray:
+        """The vector over the whole space, numpy.kron order, still in the turned frame."""
+        full = np.zeros(math.prod(self.basis.dims), dtype=self.vector.dtype)
+        full[self.basis.full_codes()] = self.vector
+        return full
+
+
+@dataclass(frozen=True)
+class Estimate:
+    """What an exact solve will take, from counting states: the sector of greatest cost, seconds and bytes."""
+
+    dimension: int
+    entries: int
+    seconds: float
+    bytes: int
+    matrix_free: bool
+
+
+@dataclass
+class _Solved:
+    sector: float | None
+    energy: float  # of the shifted, scaled operator
+    residual: float
+    vector: np.ndarray
+    basis: Basis
+
+
+def exact_ground_state(
+    op: SpinOperator,
+    settings: QuantumSettings | None = None,
+    start: np.ndarray | None = None,
+    scale: float = 0.0,
+    progress: Callable[[dict], None] | None = None,
+) -> GroundState:
+    """Ground state by exact diagonalization.
+
+    start (N, 3): classical unit vectors, which sector to try first and which to prefer among degenerate ones. scale:
+    |f_min - f_mean|, to which settings.accuracy is relative; 0 takes the norm bound of the operator.
+
+    error: the residual norm |H v - E v| (an eigenvalue lies that close), what was neglected as rounding errors in the
+    operator, and a rounding floor of 8 machine epsilons of the norm bound. Raises TooLarge where dimension or
+    settings.memory forbid it.
+    """
+    settings = settings or QuantumSettings()
+    frame = natural_frame(op)
+    parts = shifts(frame.op, conserve=frame.conserved)
+    if not math.isfinite(parts.norm):
+        raise ValueError("the couplings are too large: their sum is not a finite number")
+    problem = _Problem(parts, settings, progress)
+    if not parts.terms:
+        best = _trivial(parts, frame)
+    elif not frame.conserved:
+        best = problem.solve(None)
+    else:
+        best = _search(problem, frame, _classical_magnetization(op, frame, start))
+    energy = parts.constant + parts.norm * (best.energy + 1.0)
+    error = parts.norm * (best.residual + _ROUNDING) + parts.dropped + abs(parts.constant) * np.finfo(float).eps
+    converged = error <= settings.accuracy * (scale or parts.norm or 1.0)
+    advice = "" if converged else f"Lanczos stopped at a residual of {error:.1e}; ask for less accuracy than that"
+    state = SectorState(best.vector, best.basis, frame.rotations)
+    observables = {}
+    if settings.observables:
+        from manybody.quantum.observables import exact_observables
+
+        observables = exact_observables(state, settings.observables)
+    return GroundState(
+        energy=float(energy),
+        error=float(error),
+        status="converged" if converged else "not_converged",
+        advice=advice,
+        method="exact",
+        sector=float("nan") if best.sector is None else float(best.sector),
+        sector_axis=frame.axis,
+        energy_variance=float((parts.norm * best.residual) ** 2),
+        observables=observables,
+        state=state,
+    )
+
+
+def estimate_exact(op: SpinOperator, frame: Frame | None = None, memory: float = math.inf) -> Estimate:
+    """Cost of an exact solve without building a matrix: time is for one core of a present-day machine, to a factor of 2."""
+    frame = frame or natural_frame(op)
+    parts = shifts(frame.op, conserve=frame.conserved)
+    if frame.conserved:
+        dimensions = sector_dimensions(parts.spins)
+        largest = len(dimensions) // 2
+        sector = float(np.sum(parts.spins)) - largest
+        dimension = float(dimensions[largest])
+        total = dimension if frame.isotropic else float(dimensions.sum()) / (2 if frame.mirrored else 1)
+    else:
+        sector, dimension = None, float(np.prod([float(d) for d in parts.dims]))
+        total = dimension
+    if dimension > 50 * LARGEST_DIMENSION:
+        return Estimate(int(min(dimension, 2**62)), 0, math.inf, 2**62, True)
+    entries = dimension + entry_count(parts, sector)
+    if dimension <= _DENSE:
+        work = total / dimension * (1e-4 + 5e-10 * dimension**3)
+        return Estimate(int(dimension), round(entries), 2e-3 + work, round(3 * 16 * dimension**2) + 2**20, False)
+    item = 8 if parts.real else 16
+    vectors = (_VECTORS + 6) * item * dimension
+    matrix = entries * (item + 4) + 2**26
+    half = math.prod(parts.dims) ** 0.5
+    matrix_free = matrix + vectors + 24 * half > memory
+    scanned = min(total, _SCAN_COARSE if total <= _SCAN_COARSE else 3 * dimension) / dimension
+    steps = 60 + 12 * math.log(dimension)
+    per_step = (2e-9 if parts.real else 3e-9) * entries + 4 * _VECTORS * item / 8 * dimension * 0.5e-9
+    seconds = scanned * (8e-8 * entries + (3 if matrix_free else 1) * steps * per_step)
+    if matrix_free:
+        matrix = split_bytes(dimension, half, parts.real)
+    return Estimate(int(dimension), round(entries), 0.01 + seconds, round(matrix + vectors + 24 * half), matrix_free)
+
+
+class _Problem:
+    """Solves sectors of one operator, scaled to norm at most 1 and shifted by -1, so that all energies lie in [-2, 0]."""
+
+    def __init__(self, parts: Shifts, settings: QuantumSettings, progress):
+        terms = tuple(replace(term, amplitude=term.amplitude / parts.norm) for term in parts.terms)
+        self.parts = replace(parts, terms=terms, constant=-1.0)
+        self.settings, self.progress = settings, progress
+
+    def solve(self, sector: float | None, tolerance: float = _TOLERANCE) -> _Solved:
+        basis = Basis(self.parts.spins, sector)
+        if basis.dimension > LARGEST_DIMENSION:
+            raise TooLarge(f"dimension {basis.dimension} is above {LARGEST_DIMENSION}")
+        matrix = self._matrix(basis)
+        energy, residual, vector = lowest_state(matrix, self.settings.seed, tolerance)
+        if self.progress:
+            self.progress({"stage": "exact", "sector": sector, "dimension": basis.dimension, "residual": residual})
+        return _Solved(sector, energy, residual, vector, basis)
+
+    def _matrix(self, basis: Basis):
+        item = 8 if self.parts.real else 16
+        vectors = (_VECTORS + 6) * item * basis.dimension
+        if vectors > self.settings.memory:
+            raise TooLarge(f"Lanczos vectors of {vectors / 2**30:.1f} GiB do not fit the memory allowed")
+        entries = basis.dimension + entry_count(self.parts, basis.sector)
+        if entries * (item + 4) + vectors + 2**26 <= max(self.settings.memory, 2**28):
+            return assemble(self.parts, basis)
+        return SplitOperator(self.parts, basis)
+
+
+def lowest_state(matrix, seed: int, tolerance: float = _TOLERANCE) -> tuple[float, float, np.ndarray]:
+    """Lowest eigenvalue, residual norm and normalized vector of a Hermitian matrix (scipy CSR or LinearOperator).
+
+    The matrix is expected to have its lowest eigenvalue near -1 ... -2 in size, since the tolerance is relative to it.
+    Repeatable: the start vector is drawn from `seed`.
+    """
+    dimension = matrix.shape[0]
+    if dimension == 1:
+        value = float(np.real(matrix @ np.ones(1))[0])
+        return value, 0.0, np.ones(1, dtype=matrix.dtype)
+    sparse_matrix = hasattr(matrix, "nnz")
+    if sparse_matrix and matrix.nnz == dimension:
+        # Nothing but the diagonal, which is always stored.
+        diagonal = matrix.diagonal().real
+        vector = np.zeros(dimension, dtype=matrix.dtype)
+        vector[np.argmin(diagonal)] = 1.0
+        return float(diagonal.min()), 0.0, vector
+    if dimension <= _DENSE:
+        dense = matrix.toarray() if sparse_matrix else matrix @ np.eye(dimension, dtype=matrix.dtype)
+        _, vectors = scipy.linalg.eigh(dense, subset_by_index=[0, 0])
+        return _measured(matrix, vectors[:, 0])
+    random = np.random.default_rng(seed)
+    start = random.standard_normal(dimension).astype(matrix.dtype)
+    if np.issubdtype(matrix.dtype, np.complexfloating):
+        start += 1j * random.standard_normal(dimension)
+    for vectors in (_VECTORS, 3 * _VECTORS):
+        try:
+            _, found = eigsh(matrix, k=1, which="SA", v0=start, tol=tolerance, ncv=min(vectors, dimension - 1))
+            start = found[:, 0]
+            break
+        except ArpackNoConvergence as failure:
+            if failure.eigenvectors.shape[1]:
+                start = failure.eigenvectors[:, 0]
+    return _measured(matrix, start)
+
+
+def _measured(matrix, vector: np.ndarray) -> tuple[float, float, np.ndarray]:
+    vector = vector / np.linalg.norm(vector)
+    image = matrix @ vector
+    energy = float(np.vdot(vector, image).real)
+    return energy, float(np.linalg.norm(image - energy * vector)), vector
+
+
+def _search(problem: _Problem, frame: Frame, lead: float | None) -> _Solved:
+    """The lowest sector; among sectors that tie the classical one where it is among them, else the smallest |S^z|."""
+    spins = problem.parts.spins
+    dimensions = sector_dimensions(spins)
+    top = float(np.sum(spins))
+    lowest = top - len(dimensions) // 2 if len(dimensions) % 2 else 0.5
+    solved: dict[float, _Solved] = {}
+
+    def energy(sector: float) -> float:
+        if sector not in solved:
+            solved[sector] = problem.solve(sector)
+            # Only the best and the preferred sector keep their vectors.
+            best = min(solved.values(), key=lambda s: s.energy)
+            for key, state in solved.items():
+                if state is not best and key != lead and key != lowest and len(state.vector) > _SCAN_ALL:
+                    state.vector = state.basis = None
+        return solved[sector].energy
+
+    if frame.isotropic:
+        for sector in {lowest, top if lead is None else lead}:
+            energy(sector)
+        return _preferred(problem, solved, lead)
+    sectors = [top - n for n in range(len(dimensions)) if not frame.mirrored or top - n >= 0]
+    counts = dict(zip(sectors, dimensions, strict=False))
+    if frame.mirrored and lead is not None:
+        lead = abs(lead)
+    total = sum(counts.values())
+    if total <= _SCAN_ALL:
+        for sector in sectors:
+            energy(sector)
+        return _preferred(problem, solved, lead)
+    for sector in {lowest, sectors[0], sectors[-1]} | ({lead} if lead is not None else set()):
+        energy(sector)
+    _descend(energy, solved, sectors)
+    if total <= _SCAN_COARSE:
+        for sector in sectors:
+            if sector not in solved:
+                look = problem.solve(sector, _COARSE)
+                if look.energy - look.residual < min(s.energy for s in solved.values()):
+                    energy(sector)
+        _descend(energy, solved, sectors)
+    return _preferred(problem, solved, lead)
+
+
+def _descend(energy: Callable[[float], float], solved: dict[float, _Solved], sectors: Iterable[float]) -> None:
+    """Solve neighbours of the lowest sector until both lie higher."""
+    allowed = set(sectors)
+    while True:
+        best = min(solved, key=lambda sector: solved[sector].energy)
+        open_ones = [s for s in (best - 1.0, best + 1.0) if s in allowed and s not in solved]
+        if not open_ones:
+            return
+        for sector in open_ones:
+            energy(sector)
+
+
+def _preferred(problem: _Problem, solved: dict[float, _Solved], lead: float | None) -> _Solved:
+    low = min(state.energy for state in solved.values())
+    tied = [s for s in solved.values() if s.energy - low <= 100 * _TOLERANCE and s.vector is not None]
+    if lead is not None and any(state.sector == lead for state in tied):
+        return solved[lead]
+    return min(tied, key=lambda state: (abs(state.sector), -state.sector))
+
+
+def _classical_magnetization(op: SpinOperator, frame: Frame, start: np.ndarray | None) -> float | None:
+    """S^z of the sector nearest the classical configuration; under full rotation symmetry the length of its total spin."""
+    if start is None:
+        return None
+    start = np.asarray(start, dtype=float)
+    if start.shape != (op.sites, 3):
+        raise ValueError(f"start must be unit vectors of shape ({op.sites}, 3), got {start.shape}")
+    moment = np.asarray(op.spins) @ start
+    along = float(np.linalg.norm(moment)) if frame.isotropic else float(moment @ frame.axis)
+    top = float(np.sum(op.spins))
+    return float(np.clip(top - round(top - along), -top, top))
+
+
+def _trivial(parts: Shifts, frame: Frame) -> _Solved:
+    """Any state is a ground state of a constant: all spins up."""
+    top = float(np.sum(parts.spins))
+    return _Solved(top, -1.0, 0.0, np.ones(1), Basis(parts.spins, top))
