@@ -1,0 +1,71 @@
+"""The rooms of the house: imports run only downwards, the two branches never meet but in pairing, and importing is light."""
+
+import ast
+import subprocess
+import sys
+import time
+from pathlib import Path
+
+import pytest
+
+PACKAGE = Path(__file__).parent.parent / "manybody"
+
+ALLOWED = {
+    "model": {"model"},
+    "classical": {"model", "classical"},
+    "quantum": {"model", "quantum"},
+    "pairing": {"model", "classical", "quantum", "pairing"},
+    "workflow": {"model", "classical", "quantum", "pairing", "results", "workflow"},
+    "results": {"results"},
+    "command": {"model", "classical", "quantum", "pairing", "workflow", "results", "command"},
+    "__init__": {"model", "classical", "quantum", "pairing", "workflow", "results"},
+}
+HEAVY = {"xarray", "distributed", "dask", "quimb", "matplotlib", "numba", "pandas", "h5netcdf", "jinja2", "rich", "cvxpy"}
+
+
+def room(path: Path) -> str:
+    parts = path.relative_to(PACKAGE).parts
+    return parts[0].removesuffix(".py")
+
+
+def imported(tree: ast.AST):
+    for node in ast.walk(tree):
+        if isinstance(node, ast.Import):
+            yield from (alias.name for alias in node.names)
+        elif isinstance(node, ast.ImportFrom):
+            assert node.level == 0, "imports are absolute, so that this test can read them"
+            yield node.module
+            if node.module == "manybody":
+                yield from (f"manybody.{alias.name}" for alias in node.names)
+
+
+@pytest.mark.parametrize("path", sorted(PACKAGE.rglob("*.py")), ids=lambda p: str(p.relative_to(PACKAGE)))
+def test_imports_run_only_downwards(path):
+    for name in imported(ast.parse(path.read_text(encoding="utf-8"))):
+        parts = name.split(".")
+        if parts[0] == "manybody" and len(parts) > 1 and parts[1] != "__version__":
+            assert parts[1] in ALLOWED[room(path)], f"{room(path)} must not import {name}"
+
+
+@pytest.mark.parametrize("path", sorted(PACKAGE.rglob("*.py")), ids=lambda p: str(p.relative_to(PACKAGE)))
+def test_heavy_libraries_are_imported_where_they_are_used(path):
+    for node in ast.parse(path.read_text(encoding="utf-8")).body:
+        if isinstance(node, ast.Import | ast.ImportFrom):
+            for name in imported(ast.Module([node], [])):
+                assert name.split(".")[0] not in HEAVY, f"import {name} inside the functions that use it"
+
+
+def test_importing_the_package_loads_no_library():
+    code = "import sys; before = set(sys.modules); import manybody; print(*{m.split('.')[0] for m in set(sys.modules) - before})"
+    loaded = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True).stdout.split()
+    assert not {"numpy", "scipy", *HEAVY} & set(loaded)
+
+
+def test_help_answers_at_once():
+    # 0.4 s is what a user feels; the least of a few runs, and twice that here, since test machines are busy
+    took = []
+    for _ in range(3):
+        start = time.perf_counter()
+        subprocess.run([sys.executable, "-m", "manybody.command", "--help"], check=True, capture_output=True)
+        took.append(time.perf_counter() - start)
+    assert min(took) < 0.8
