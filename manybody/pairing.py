@@ -173,7 +173,9 @@ def assemble(spin: float, classical: dict, harmonic: dict, quantum: dict, bounds
         record["harmonic_energy"] = classical["classical_energy"] + harmonic["harmonic_coefficient"] / spin
     if "configuration" in classical:
         record["classical_configuration"] = harmonic.get("selected", classical["configuration"])
-    record["seconds"] = sum(part.get(f"{name}_seconds", 0.0) for name, part in zip(PARTS[1:], (harmonic, quantum, bounds)))
+    record["seconds"] = sum(
+        part.get(f"{name}_seconds", 0.0) for name, part in zip(PARTS[1:], (harmonic, quantum, bounds))
+    )
     return record
 
 

@@ -20,7 +20,19 @@ ALLOWED = {
     "command": {"model", "classical", "quantum", "pairing", "workflow", "results", "command"},
     "__init__": {"model", "classical", "quantum", "pairing", "workflow", "results"},
 }
-HEAVY = {"xarray", "distributed", "dask", "quimb", "matplotlib", "numba", "pandas", "h5netcdf", "jinja2", "rich", "cvxpy"}
+HEAVY = {
+    "xarray",
+    "distributed",
+    "dask",
+    "quimb",
+    "matplotlib",
+    "numba",
+    "pandas",
+    "h5netcdf",
+    "jinja2",
+    "rich",
+    "cvxpy",
+}
 
 
 def room(path: Path) -> str:
@@ -49,10 +61,13 @@ def test_imports_run_only_downwards(path):
 
 @pytest.mark.parametrize("path", sorted(PACKAGE.rglob("*.py")), ids=lambda p: str(p.relative_to(PACKAGE)))
 def test_heavy_libraries_are_imported_where_they_are_used(path):
+    # numba's own modules, named ...compiled, are the exception; nobody imports those at the top either
+    heavy = HEAVY - {"numba"} if path.stem.endswith("compiled") else HEAVY
     for node in ast.parse(path.read_text(encoding="utf-8")).body:
         if isinstance(node, ast.Import | ast.ImportFrom):
             for name in imported(ast.Module([node], [])):
-                assert name.split(".")[0] not in HEAVY, f"import {name} inside the functions that use it"
+                late = name.split(".")[0] in heavy or (name.startswith("manybody") and name.endswith("compiled"))
+                assert not late or path.stem.endswith("compiled"), f"import {name} inside the functions that use it"
 
 
 def test_importing_the_package_loads_no_library():
