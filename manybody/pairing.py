@@ -1,15 +1,16 @@
 """One energy function, both branches: parts of a point computed and put together under the names of the dataset.
 
-A point is an energy function f, a spin and a rule. Its work falls into parts, so that what does not depend on spin or rule
-is done once:
+A point is an energy function f, a spin and a rule. Its work falls into parts, so that what does not depend on spin or
+rule is done once:
 
     classical   f                      minimum, proof, distinct minima
     harmonic    f, rule                first quantum correction and the minimum it selects
     quantum     f, spin, rule          ground energy with error
     bounds      f, spin, rule          the other rungs of the energy ladder
 
-Every part is a pure function of its arguments and returns a flat dict: names of the dataset's variables where the number is
-a result, other names for what later parts need. A rung that cannot be had is left out and its reason goes into a message.
+Every part is a pure function of its arguments and returns a flat dict: names of the dataset's variables where the
+number is a result, other names for what later parts need. A rung that cannot be had is left out and its reason goes into
+a message.
 """
 
 import time
@@ -188,7 +189,7 @@ def _stop(state) -> str:
 
 
 def _observables(found: dict, n: np.ndarray) -> dict:
-    """Observables of the quantum branch under the dataset's names, with the classical values of configuration n (N, 3)."""
+    """Observables under the dataset's names, beside the classical values of configuration n (N, 3)."""
     part = {}
     if "entanglement" in found:
         part["entanglement_entropy"] = found["entanglement"]

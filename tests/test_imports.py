@@ -1,4 +1,4 @@
-"""The rooms of the house: imports run only downwards, the two branches never meet but in pairing, and importing is light."""
+"""Imports run only downwards, the two branches never meet but in pairing, and importing the package is light."""
 
 import ast
 import subprocess
@@ -71,7 +71,7 @@ def test_heavy_libraries_are_imported_where_they_are_used(path):
 
 
 def test_importing_the_package_loads_no_library():
-    code = "import sys; before = set(sys.modules); import manybody; print(*{m.split('.')[0] for m in set(sys.modules) - before})"
+    code = "import sys; old = {*sys.modules}; import manybody; print(*{m.split('.')[0] for m in {*sys.modules} - old})"
     loaded = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True).stdout.split()
     assert not {"numpy", "scipy", *HEAVY} & set(loaded)
 
