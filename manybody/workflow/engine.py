@@ -1,0 +1,452 @@
+"""Runs the parts of a study: what is missing, longest first, nothing lost, nothing twice.
+
+`run_tasks` is generic: it knows tasks (tasks.py), a journal and an executor (inprocess.py, cluster.py), not what the
+parts compute. It is the only writer. Parts whose estimates are small travel in batches, so that ten thousand of them cost little,
+yet each is journaled for itself. A part counts as finished once the journal has it on disk.
+"""
+
+from __future__ import annotations
+
+import contextlib
+import heapq
+import signal
+import threading
+import time
+from collections import Counter, defaultdict, deque
+from collections.abc import Sequence
+from dataclasses import replace
+
+from manybody.workflow.costs import CostModel, gigabytes
+from manybody.workflow.journal import Journal
+from manybody.workflow.progress import Display
+from manybody.workflow.tasks import Batch, Counts, EngineError, Interrupted, Outcome, RunPart, Slot, Task
+
+ATTEMPTS = 3  # how often a part may be in hand when its worker dies
+BATCH_SECONDS = 0.3  # expected length of a batch of short parts
+SLICE_SECONDS = 1.0  # a batch that takes longer than this hands back what it has
+BATCH_PARTS = 200
+UNKNOWN_PARTS = 8  # parts per batch while nothing of their kind has been measured
+PREFETCH_SECONDS = 2.0  # a worker gets its next batch ahead of time while its present ones are shorter than this
+GRACE = 30.0  # seconds that parts in hand are given after the first Ctrl-C
+CACHE = 64e6  # bytes of results kept at hand for the parts that need them
+LEFT_EVERY = 3.0  # seconds between estimates of the time left
+SKIP = 64  # parts looked at for one that fits a worker's free memory
+
+
+def pending(tasks: Sequence[Task], journal: Journal, retry_failed: bool = False) -> list[Task]:
+    """The tasks that a run would still have to do."""
+    entries = journal.entries()
+    done = {"finished"} if retry_failed else {"finished", "failed"}
+    return [task for task in tasks if not (task.key in entries and entries[task.key].status in done)]
+
+
+def run_tasks(
+    tasks: Sequence[Task],
+    run_part: RunPart,
+    journal: Journal,
+    executor,
+    display: Display | None = None,
+    attempts: int = ATTEMPTS,
+    retry_failed: bool = False,
+    save_calibration: CostModel | None = None,
+) -> Counts:
+    """Run every task that the journal does not have yet; return how the study stands.
+
+    Raises Interrupted after a first Ctrl-C (a second one raises KeyboardInterrupt at once), EngineError when no cluster can
+    be had or it is lost, JournalError when the disk fails; whatever was finished before is in the journal.
+    """
+    run = _Run(tasks, run_part, journal, executor, display or Display(), attempts, retry_failed)
+    if save_calibration is not None:
+        run.costs = save_calibration
+    return run.go()
+
+
+class _Run:
+    def __init__(self, tasks, run_part, journal, executor, display, attempts, retry_failed):
+        self.tasks = {task.key: task for task in tasks}
+        self.run_part, self.journal, self.executor, self.display = run_part, journal, executor, display
+        self.attempts_allowed = attempts
+        self.costs = CostModel()
+        self.tries: dict[str, int] = defaultdict(int)
+        self.slots: dict[str, Slot] = {}
+        self.busy: dict[str, deque[Batch]] = {}
+        self.batches: dict[int, Batch] = {}
+        self.numbers = 0
+        self.ready: list[tuple[float, int, str]] = []
+        self.suspects: deque[str] = deque()
+        self.order = {key: place for place, key in enumerate(self.tasks)}
+        self.blockers: dict[str, int] = {}
+        self.dependents: dict[str, list[str]] = defaultdict(list)
+        self.users: dict[str, int] = defaultdict(int)
+        self.cache: dict[str, bytes] = {}
+        self.cached = 0
+        self.stop = False
+        self.deadline = float("inf")
+        self._sort_out(retry_failed)
+
+    # what there is to do
+
+    def _sort_out(self, retry_failed: bool) -> None:
+        entries = self.journal.entries()
+        self.status: dict[str, str] = {}
+        for key, task in self.tasks.items():
+            entry = entries.get(key)
+            if entry is None:
+                continue
+            if entry.status == "finished":
+                self.costs.measured(task.kind, task.seconds, entry.seconds, task.bytes, entry.peak_bytes)
+                self.status[key] = "finished"
+            elif entry.status == "failed" and not retry_failed:
+                self.status[key] = "failed"
+        self.reused = sum(status == "finished" for status in self.status.values())
+        self.tally = Counter(self.status.values())
+        self.left, self.left_at = 0.0, float("-inf")
+        self.tail = dict.fromkeys(self.tasks, 0.0)
+        blocked = []
+        for key, task in self.tasks.items():
+            if key in self.status:
+                continue
+            missing = [name for name in task.depends if self.status.get(name) != "finished"]
+            for name in missing:
+                if name not in self.tasks:
+                    raise ValueError(f"{task.label} depends on {name}, which is no task of this study")
+                self.dependents[name].append(key)
+                self.tail[name] = max(self.tail[name], task.seconds)
+            for name in task.depends:
+                self.users[name] += 1
+            self.blockers[key] = len(missing)
+            if any(self.status.get(name) == "failed" for name in missing):
+                blocked.append(key)
+        self._blocked_at_start = blocked
+
+    def _push(self, key: str) -> None:
+        task = self.tasks[key]
+        seconds = self.costs.seconds(task.kind, task.seconds) + self.tail[key]
+        heapq.heappush(self.ready, (-seconds, self.order[key], key))
+
+    def missing(self) -> list[str]:
+        return [key for key in self.tasks if key not in self.status]
+
+    # the run
+
+    def go(self) -> Counts:
+        if self._blocked_at_start:
+            self._finish([(key, self._because(key)) for key in self._blocked_at_start])
+        missing = self.missing()
+        if not missing:
+            return self._count()
+        started = False
+        with self._signals():
+            try:
+                slots = self.executor.start(len(missing))
+                started = True
+                self._set_slots(slots)
+                self._refuse()
+                for key in self.missing():
+                    if self.blockers[key] == 0:
+                        self._push(key)
+                self.display.start(self._count(), self.executor.dashboard, len(self.tasks))
+                self._loop()
+            except BaseException:
+                self.display.stop()
+                self.executor.close(at_once=True)
+                raise
+            finally:
+                if started:
+                    self.display.stop()
+            self.executor.close(at_once=self.stop)
+        if self.missing():
+            raise Interrupted("stopped")
+        return self._count()
+
+    def _loop(self) -> None:
+        idle_since = time.monotonic()
+        while True:
+            if self.stop and self.deadline == float("inf"):
+                self.deadline = time.monotonic() + GRACE
+                self.executor.ask_to_stop()
+                self.display.say(
+                    f"Stopping: waiting up to {GRACE:.0f} s for {self._in_hand()} parts in hand; Ctrl-C again stops at once."
+                )
+            if not self.stop:
+                self._dispatch()
+            if not self.batches and (self.stop or not (self.ready or self.suspects)):
+                return
+            if time.monotonic() > self.deadline:
+                return
+            events = self.executor.events(0.2)
+            self._handle(events)
+            self._show()
+            self.journal.touch()
+            if events or self.slots:
+                idle_since = time.monotonic()
+            elif time.monotonic() - idle_since > 60:
+                self.display.say("There are no workers; waiting for some. Ctrl-C stops.")
+                idle_since = time.monotonic()
+
+    def _refuse(self) -> None:
+        """Mark what no worker could hold, before anything starts."""
+        most = max(slot.memory for slot in self.slots.values())
+        refused = []
+        for key in self.missing():
+            task = self.tasks[key]
+            need = self.costs.bytes(task.kind, task.bytes)
+            if need > most:
+                message = f"needs {gigabytes(need)} of memory; a worker can give {gigabytes(max(most, 0.0))}"
+                refused.append((key, Outcome(key, "refused", message=message, attempts=0)))
+        self._finish(refused)
+
+    # sending parts out
+
+    def _dispatch(self) -> None:
+        for place in sorted(self.slots, key=lambda place: len(self.busy[place])):
+            while batch := self._next_batch(place):
+                self._send(batch)
+
+    def _next_batch(self, place: str) -> Batch | None:
+        slot, busy = self.slots[place], self.busy[place]
+        if busy and busy[0].alone:
+            return None
+        if self.suspects:
+            # a part that was in hand when a worker died gets a worker for itself, so that no other pays for it
+            if not busy:
+                return self._batch(place, [self.suspects.popleft()], alone=True)
+            fewest = min(self.slots, key=lambda name: (len(self.busy[name]), name))
+            if place == fewest or len(busy) >= slot.threads:
+                return None
+        if not self.ready or len(busy) >= 2 * slot.threads:
+            return None
+        if len(busy) >= slot.threads:
+            longest = max(batch.seconds for batch in busy)
+            known = all(self.costs.known(task.kind) for batch in busy for task in batch.tasks)
+            if longest > PREFETCH_SECONDS or not known:
+                return None
+        free = slot.memory - sum(batch.bytes for batch in busy)
+        return self._batch(place, self._choose(free), alone=False)
+
+    def _choose(self, free: float) -> list[str]:
+        """The longest part that fits, with as many more as make a batch worth sending."""
+        chosen: list[str] = []
+        skipped = []
+        seconds, limit = 0.0, BATCH_PARTS
+        share = max(1, len(self.ready) // (2 * max(sum(slot.threads for slot in self.slots.values()), 1)))
+        while self.ready and len(chosen) < limit and len(skipped) < SKIP:
+            item = heapq.heappop(self.ready)
+            task = self.tasks[item[2]]
+            if self.costs.bytes(task.kind, task.bytes) > free:
+                skipped.append(item)
+                continue
+            length = self.costs.seconds(task.kind, task.seconds)
+            if chosen and seconds + length > BATCH_SECONDS:
+                heapq.heappush(self.ready, item)
+                break
+            chosen.append(item[2])
+            seconds += length
+            limit = min(limit, share, BATCH_PARTS if self.costs.known(task.kind) >= UNKNOWN_PARTS else UNKNOWN_PARTS)
+        for item in skipped:
+            heapq.heappush(self.ready, item)
+        return chosen
+
+    def _batch(self, place: str, keys: list[str], alone: bool) -> Batch | None:
+        if not keys:
+            return None
+        tasks = [self.tasks[key] for key in keys]
+        self.numbers += 1
+        seconds = sum(self.costs.seconds(task.kind, task.seconds) for task in tasks)
+        need = max(self.costs.bytes(task.kind, task.bytes) for task in tasks)
+        return Batch(self.numbers, tasks, alone, seconds, need, place, time.monotonic())
+
+    def _send(self, batch: Batch) -> None:
+        needed = {name for task in batch.tasks for name in task.depends}
+        inputs = {name: self.cache[name] for name in needed if name in self.cache}
+        inputs.update(self.journal.data(needed - inputs.keys()))
+        states = {}
+        for task in batch.tasks:
+            state = self.journal.state(task.key)
+            if state is not None:
+                states[task.key] = state
+        for task in batch.tasks:
+            for name in task.depends:
+                self.users[name] -= 1
+                if self.users[name] <= 0 and name in self.cache:
+                    self.cached -= len(self.cache.pop(name))
+        self.batches[batch.number] = batch
+        self.busy[batch.place].append(batch)
+        self.executor.submit(batch, self.run_part, inputs, states, SLICE_SECONDS)
+
+    # taking results in
+
+    def _handle(self, events: list[tuple]) -> None:
+        done: list[tuple[str, Outcome]] = []
+        for event in events:
+            what = event[0]
+            if what == "done":
+                batch = self._take_back(event[1])
+                if batch is None:
+                    continue
+                outcomes = {outcome.key: outcome for outcome in event[2]}
+                for task in batch.tasks:
+                    if task.key in outcomes:
+                        done.append((task.key, replace(outcomes[task.key], attempts=self.tries[task.key] + 1)))
+                    else:
+                        self._again(task.key)
+            elif what == "broken":
+                batch = self._take_back(event[1])
+                if batch is not None:
+                    done += self._blame(batch, event[2])
+            elif what == "lost":
+                done += self._lose(event[1], event[2])
+            elif what == "slots":
+                done += self._set_slots(event[1])
+            elif what == "report":
+                self.display.report(event[1], event[2])
+            elif what == "state":
+                if event[1] in self.tasks and event[1] not in self.status:
+                    self.journal.store_state(event[1], event[2])
+            elif what == "gone":
+                raise EngineError(
+                    f"{event[1]}. Everything finished so far is safe; run the same command again to go on."
+                )
+        self._finish(done)
+
+    def _take_back(self, number: int) -> Batch | None:
+        batch = self.batches.pop(number, None)
+        if batch is not None and batch.place in self.busy:
+            self.busy[batch.place].remove(batch)
+        return batch
+
+    def _again(self, key: str) -> None:
+        for name in self.tasks[key].depends:
+            self.users[name] += 1
+        if self.tries[key]:
+            self.suspects.append(key)
+        else:
+            self._push(key)
+
+    def _blame(self, batch: Batch, reason: str) -> list[tuple[str, Outcome]]:
+        """Count a try against every part of a batch; those out of tries have failed, the others get another."""
+        failed = []
+        for task in batch.tasks:
+            self.tries[task.key] += 1
+            if self.tries[task.key] >= self.attempts_allowed:
+                message = f"given up after {self.tries[task.key]} tries: {reason}"
+                failed.append((task.key, Outcome(task.key, "failed", message=message, attempts=self.tries[task.key])))
+            else:
+                self._again(task.key)
+        return failed
+
+    def _lose(self, place: str, expected: bool) -> list[tuple[str, Outcome]]:
+        slot = self.slots.pop(place, None)
+        if slot is None:
+            return []
+        failed = []
+        for position, batch in enumerate(self.busy.pop(place)):
+            self.batches.pop(batch.number, None)
+            self.executor.forget(batch.number)
+            if position < slot.threads and not expected:
+                failed += self._blame(batch, "the worker died while this part was in hand (out of memory, or killed)")
+            else:
+                for task in batch.tasks:
+                    self._again(task.key)
+        if not self.stop and not expected:
+            self.display.say(f"A worker on {slot.host} died; its parts will be tried again elsewhere.")
+        return failed
+
+    def _set_slots(self, slots: list[Slot]) -> list[tuple[str, Outcome]]:
+        failed = []
+        found = {slot.place: slot for slot in slots}
+        for place in [place for place in self.slots if place not in found]:
+            failed += self._lose(place, False)
+        for place, slot in found.items():
+            self.slots.setdefault(place, slot)
+            self.busy.setdefault(place, deque())
+        return failed
+
+    def _because(self, key: str) -> Outcome:
+        task = self.tasks[key]
+        bad = next(name for name in task.depends if self.status.get(name) in ("failed", "refused"))
+        verb = "was refused" if self.status[bad] == "refused" else "failed"
+        message = f"needs the {self.tasks[bad].kind} part of {self.tasks[bad].label}, which {verb}"
+        return Outcome(key, self.status[bad], message=message, attempts=0)
+
+    def _finish(self, outcomes: list[tuple[str, Outcome]]) -> None:
+        """Journal outcomes, then count them, then let their dependents go."""
+        while outcomes:
+            outcomes = [(key, outcome) for key, outcome in outcomes if key not in self.status]
+            self.journal.store([(self.tasks[key], outcome) for key, outcome in outcomes])
+            self.journal.drop_states([key for key, outcome in outcomes if outcome.status == "finished"])
+            following = {}
+            for key, outcome in outcomes:
+                task = self.tasks[key]
+                self.status[key] = outcome.status
+                self.tally[outcome.status] += 1
+                self.display.finished(task, outcome)
+                if outcome.status == "finished":
+                    self.costs.measured(task.kind, task.seconds, outcome.seconds, task.bytes, outcome.peak_bytes)
+                    if self.users[key] and self.cached + len(outcome.data) < CACHE:
+                        self.cache[key] = outcome.data
+                        self.cached += len(outcome.data)
+                for name in self.dependents.pop(key, []):
+                    self.blockers[name] -= 1
+                    if name in self.status:
+                        continue
+                    if outcome.status != "finished":
+                        following[name] = self._because(name)
+                    elif self.blockers[name] == 0 and name not in following:
+                        self._push(name)
+            outcomes = list(following.items())
+
+    # telling
+
+    def _in_hand(self) -> int:
+        return sum(len(batch.tasks) for batch in self.batches.values())
+
+    def _count(self) -> Counts:
+        tally, done = self.tally, len(self.status)
+        return Counts(
+            finished=tally["finished"],
+            failed=tally["failed"],
+            refused=tally["refused"],
+            waiting=len(self.tasks) - done,
+            running=self._in_hand(),
+            reused=self.reused,
+            seconds_left=self.left,
+        )
+
+    def _show(self) -> None:
+        if not self.display.due():
+            return
+        now = time.monotonic()
+        if now - self.left_at > LEFT_EVERY:
+            self.left, self.left_at = self._seconds_left(now), now
+        batches = [(self.slots[batch.place], batch) for batch in self.batches.values() if batch.place in self.slots]
+        self.display.update(self._count(), batches)
+
+    def _seconds_left(self, now: float) -> float:
+        threads = max(sum(slot.threads for slot in self.slots.values()), 1)
+        running = {task.key for batch in self.batches.values() for task in batch.tasks}
+        lengths = [max(batch.seconds - (now - batch.started), 0.1 * batch.seconds) for batch in self.batches.values()]
+        for key in self.missing():
+            if key not in running:
+                lengths.append(self.costs.seconds(self.tasks[key].kind, self.tasks[key].seconds))
+        return max(sum(lengths) / threads, max(lengths, default=0.0))
+
+    @contextlib.contextmanager
+    def _signals(self):
+        """First Ctrl-C (or SIGTERM): stop in good order. Second: at once."""
+        if threading.current_thread() is not threading.main_thread():
+            yield
+            return
+
+        def handle(number, frame):
+            if self.stop:
+                raise KeyboardInterrupt
+            self.stop = True
+
+        names = [signal.SIGINT, signal.SIGTERM]
+        old = {name: signal.signal(name, handle) for name in names}
+        try:
+            yield
+        finally:
+            for name, handler in old.items():
+                signal.signal(name, handler)
