@@ -9,8 +9,8 @@ rule is done once:
     bounds      f, spin, rule          the other rungs of the energy ladder
 
 Every part is a pure function of its arguments and returns a flat dict: names of the dataset's variables where the
-number is a result, other names for what later parts need. A rung that cannot be had is left out and its reason goes into
-a message.
+number is a result, other names for what later parts need. A rung that cannot be had is left out and its reason goes
+into a message.
 """
 
 import time

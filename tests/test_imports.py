@@ -59,21 +59,19 @@ def test_imports_run_only_downwards(path):
             assert parts[1] in ALLOWED[room(path)], f"{room(path)} must not import {name}"
 
 
-@pytest.mark.parametrize("path", sorted(PACKAGE.rglob("*.py")), ids=lambda p: str(p.relative_to(PACKAGE)))
-def test_heavy_libraries_are_imported_where_they_are_used(path):
-    # numba's own modules, named ...compiled, are the exception; nobody imports those at the top either
-    heavy = HEAVY - {"numba"} if path.stem.endswith("compiled") else HEAVY
-    for node in ast.parse(path.read_text(encoding="utf-8")).body:
-        if isinstance(node, ast.Import | ast.ImportFrom):
-            for name in imported(ast.Module([node], [])):
-                late = name.split(".")[0] in heavy or (name.startswith("manybody") and name.endswith("compiled"))
-                assert not late or path.stem.endswith("compiled"), f"import {name} inside the functions that use it"
+def loaded_by(module: str) -> set[str]:
+    code = f"import sys; old = set(sys.modules); import {module}; print(*(set(sys.modules) - old))"
+    run = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
+    return {name.split(".")[0] for name in run.stdout.split()}
 
 
 def test_importing_the_package_loads_no_library():
-    code = "import sys; old = {*sys.modules}; import manybody; print(*{m.split('.')[0] for m in {*sys.modules} - old})"
-    loaded = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True).stdout.split()
-    assert not {"numpy", "scipy", *HEAVY} & set(loaded)
+    assert not {"numpy", "scipy", *HEAVY} & loaded_by("manybody")
+
+
+def test_the_command_and_the_model_load_no_heavy_library():
+    assert not HEAVY & loaded_by("manybody.command")
+    assert not HEAVY & loaded_by("manybody.model.quantization")
 
 
 def test_help_answers_at_once():
