@@ -18,10 +18,9 @@ def run_fake(payload, inputs, report, checkpoint):
         time.sleep(payload["sleep"])
     if payload.get("error"):
         raise ValueError(payload["error"])
-    if flag := payload.get("die_once"):
-        if not os.path.exists(flag):
-            open(flag, "w").close()
-            os.kill(os.getpid(), 9)
+    if (flag := payload.get("die_once")) and not os.path.exists(flag):
+        open(flag, "w").close()
+        os.kill(os.getpid(), 9)
     if payload.get("die"):
         os.kill(os.getpid(), 9)
     if steps := payload.get("steps"):

@@ -1,8 +1,8 @@
 """Parts on dask.distributed: local processes, an existing cluster, or batch jobs.
 
 Every batch is sent to one chosen worker, so the run knows what is where: which part a dying worker was busy with, how
-much memory is spoken for, and that nothing waits for a worker that no longer exists. Security (TLS) is whatever dask's own
-configuration says.
+much memory is spoken for, and that nothing waits for a worker that no longer exists. Security (TLS) is whatever dask's
+own configuration says.
 """
 
 from __future__ import annotations
@@ -86,10 +86,15 @@ class DaskExecutor:
 
     def submit(self, batch: Batch, run_part, inputs: dict, states: dict, slice_seconds: float) -> None:
         items = [(task.key, task.payload, task.depends) for task in batch.tasks]
+        channel = remote.DaskChannel(self.topic, self.threads)
         future = self._client.submit(
-            remote.run_on_dask, run_part, items, inputs, states, remote.DaskChannel(self.topic, self.threads),
-            slice_seconds, key=f"{self.topic}-{batch.number}", workers=[batch.place], allow_other_workers=False, pure=False,
-        )  # fmt: skip
+            remote.run_on_dask,
+            *(run_part, items, inputs, states, channel, slice_seconds),
+            key=f"{self.topic}-{batch.number}",
+            workers=[batch.place],
+            allow_other_workers=False,
+            pure=False,
+        )
         self._futures[batch.number] = future
         self._spawn(self._collect(batch.number, future))
 
@@ -219,8 +224,8 @@ class DaskExecutor:
         versions = {answer["manybody"] for answer in answers.values()} - {manybody.__version__}
         if versions:
             raise EngineError(
-                f"workers have manybody {', '.join(sorted(versions))}, this run has {manybody.__version__}: install the "
-                "same version everywhere."
+                f"workers have manybody {', '.join(sorted(versions))}, this run has {manybody.__version__}: install "
+                "the same version everywhere."
             )
 
 
@@ -259,7 +264,7 @@ class LocalProcesses(DaskExecutor):
 
 
 class ExistingCluster(DaskExecutor):
-    """A cluster that is there already: `address` such as tcp://host:8786 or tls://host:8786, or the path of a scheduler file."""
+    """A cluster that is there already: `address` such as tcp://host:8786 or tls://host:8786, or a scheduler file."""
 
     def __init__(self, address: str | None = None, scheduler_file: str | Path | None = None):
         super().__init__()

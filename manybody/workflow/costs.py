@@ -18,8 +18,8 @@ class CostModel:
     """Turns expected seconds into likely seconds through the parts measured so far.
 
     Per kind, log(measured) = a + b log(expected) by least squares with b between 0.3 and 1.5; with fewer than eight
-    measurements, or expectations within a factor 10 of each other, b = 1. Memory: the largest ratio measured/expected seen
-    where it matters (above 100 MB), never below 1: too small a guess kills a worker, too large a one only delays.
+    measurements, or expectations within a factor 10 of each other, b = 1. Memory: the largest ratio measured/expected
+    seen where it matters (above 100 MB), never below 1: too small a guess kills a worker, too large a one only delays.
     """
 
     def __init__(self) -> None:

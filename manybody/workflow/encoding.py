@@ -1,6 +1,6 @@
 """Results as bytes and back, without pickle: a JSON header followed by the raw buffers of the arrays.
 
-Layout: the four bytes ``MBR1``, the header's length (8 bytes, little endian), the header, the buffers one after another.
+Layout: the four bytes ``MBR1``, the header's length (8 bytes, little endian), the header, the buffers in order.
 In the header an array stands as ``{"array": [dtype, shape, offset, bytes]}`` and a dict as ``{"dict": {...}}``. Reading
 checks every length, so truncated bytes raise and never give wrong numbers; nothing read can run code.
 """
@@ -32,7 +32,7 @@ def pack(result: dict) -> bytes:
 
     def plain(value, where):
         nonlocal offset
-        if value is None or isinstance(value, (bool, str, int, float)) and not isinstance(value, np.generic):
+        if value is None or (isinstance(value, (bool, str, int, float)) and not isinstance(value, np.generic)):
             return value
         if isinstance(value, np.generic) and value.dtype.kind in "biufU":
             return value.item()

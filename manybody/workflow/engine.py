@@ -1,8 +1,8 @@
 """Runs the parts of a study: what is missing, longest first, nothing lost, nothing twice.
 
 `run_tasks` is generic: it knows tasks (tasks.py), a journal and an executor (inprocess.py, cluster.py), not what the
-parts compute. It is the only writer. Parts whose estimates are small travel in batches, so that ten thousand of them cost little,
-yet each is journaled for itself. A part counts as finished once the journal has it on disk.
+parts compute. It is the only writer. Parts whose estimates are small travel in batches, so that ten thousand of them
+cost little, yet each is journaled for itself. A part counts as finished once the journal has it on disk.
 """
 
 from __future__ import annotations
@@ -52,8 +52,8 @@ def run_tasks(
 ) -> Counts:
     """Run every task that the journal does not have yet; return how the study stands.
 
-    Raises Interrupted after a first Ctrl-C (a second one raises KeyboardInterrupt at once), EngineError when no cluster can
-    be had or it is lost, JournalError when the disk fails; whatever was finished before is in the journal.
+    Raises Interrupted after a first Ctrl-C (a second one raises KeyboardInterrupt at once), EngineError when no cluster
+    can be had or it is lost, JournalError when the disk fails; whatever was finished before is in the journal.
     """
     run = _Run(tasks, run_part, journal, executor, display or Display(), attempts, retry_failed)
     if save_calibration is not None:
@@ -165,9 +165,8 @@ class _Run:
             if self.stop and self.deadline == float("inf"):
                 self.deadline = time.monotonic() + GRACE
                 self.executor.ask_to_stop()
-                self.display.say(
-                    f"Stopping: waiting up to {GRACE:.0f} s for {self._in_hand()} parts in hand; Ctrl-C again stops at once."
-                )
+                wait = f"waiting up to {GRACE:.0f} s for {self._in_hand()} parts in hand"
+                self.display.say(f"Stopping: {wait}; Ctrl-C again stops at once.")
             if not self.stop:
                 self._dispatch()
             if not self.batches and (self.stop or not (self.ready or self.suspects)):
@@ -304,9 +303,7 @@ class _Run:
                 if event[1] in self.tasks and event[1] not in self.status:
                     self.journal.store_state(event[1], event[2])
             elif what == "gone":
-                raise EngineError(
-                    f"{event[1]}. Everything finished so far is safe; run the same command again to go on."
-                )
+                raise EngineError(f"{event[1]}. Everything finished is safe; run the same command again to go on.")
         self._finish(done)
 
     def _take_back(self, number: int) -> Batch | None:

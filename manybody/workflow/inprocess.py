@@ -1,4 +1,4 @@
-"""Parts in this very process, one after another, in a thread beside the run, which so stays free to report and to stop."""
+"""Parts in this very process, one after another, in a thread beside the run, which so stays free to stop."""
 
 from __future__ import annotations
 

@@ -11,6 +11,7 @@ States of long parts live in ``states.sqlite`` beside it, so that storing a larg
 
 from __future__ import annotations
 
+import contextlib
 import hashlib
 import os
 import sqlite3
@@ -70,7 +71,7 @@ def _explain(error: Exception, folder: Path) -> str:
     if not folder.is_dir():
         return f"the folder {folder} has been removed while the run was going on. Finished parts in it are gone."
     tail = "Everything finished so far is safe; run the same command again to go on."
-    if "disk is full" in text or isinstance(error, OSError) and error.errno == 28:
+    if "disk is full" in text or (isinstance(error, OSError) and error.errno == 28):
         return f"no space left for {folder} ({text}). {tail}"
     if "readonly" in text or "unable to open" in text or isinstance(error, PermissionError):
         return f"{folder} cannot be written any more ({text}). {tail}"
@@ -160,13 +161,11 @@ class Journal:
                 database.executemany("delete from parts where key is ?", [(key,) for key in self.dropped])
 
     def close(self) -> None:
-        """Close the files and free the folder. States of parts that are finished are gone by now; an empty file goes."""
+        """Close the files and free the folder; a file of states that holds none goes."""
         if self._states is not None:
             empty = False
-            try:
+            with contextlib.suppress(sqlite3.Error):
                 empty = self._states.execute("select 1 from states limit 1").fetchone() is None
-            except sqlite3.Error:
-                pass
             self._states.close()
             self._states = None
             if empty and self.folder is not None:
@@ -216,7 +215,7 @@ class Journal:
     # parts
 
     def store(self, outcomes: Iterable[tuple[Task, Outcome]]) -> None:
-        """Put finished (or failed, or refused) parts on disk, all or none; replaces earlier entries of the same keys."""
+        """Put parts on disk, all or none, whatever became of them; replaces earlier entries of the same keys."""
         now = time.time()
         rows = [
             (

@@ -7,6 +7,7 @@ recorded host, process and heartbeat decide.
 
 from __future__ import annotations
 
+import contextlib
 import json
 import os
 import socket
@@ -122,8 +123,6 @@ class FolderLock:
 
     def release(self) -> None:
         if not self._handle.closed:
-            try:
+            with contextlib.suppress(OSError):  # the folder is gone or full: closing frees the lock all the same
                 self._write(None)
-            except OSError:
-                pass  # the folder is gone or full: closing frees the lock all the same
             self._handle.close()

@@ -80,7 +80,7 @@ class Slot:
 
 @dataclass(frozen=True)
 class Counts:
-    """How a run stands, in parts; `waiting` ones are neither finished nor failed nor refused, `reused` finished before."""
+    """How a run stands, in parts; `waiting`: no outcome yet, `reused`: finished by an earlier run."""
 
     finished: int = 0
     failed: int = 0
