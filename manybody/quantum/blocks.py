@@ -1,0 +1,270 @@
+"""Charge blocks in flat buffers: where every block of a site tensor and of an environment lies.
+
+A bond is a pair of arrays (charges, dims): distinct integers (twice the S^z summed over the sites to its left) in any order, and how
+many states carry each. A site has one integer charge per local state. The block (i, s) of a site tensor joins left charge i and local
+state s to the right charge charges[i] + local[s]; a block whose right charge is not on the bond does not exist.
+
+Layout `by left` of a site tensor: for every left charge one row-major matrix, rows its states, columns (s, right states).
+Layout `by right`: for every right charge one matrix, rows (s, left states), columns its states.
+
+An environment holds one matrix E[a][bra, ket] per operator channel a of charge delta[a], non-zero where bra = ket + delta[a].
+Layout `by bra`: for every bra charge one matrix, rows (a, ket states), columns bra states; `by ket`: rows (a, bra states), columns ket
+states. One channel, whose matrix is the identity by orthonormality, is skipped and never stored.
+
+Looking from the other end of the chain (`mirror`) replaces every bond charge q by total - q, keeping the order of the arrays: the
+environments need no copy then, site tensors are transposed block by block. So sweeps are written for one direction only.
+"""
+
+import numpy as np
+
+from manybody.quantum.compiled import compiled
+
+
+@compiled
+def lookup(charges):
+    """Table and lowest charge such that table[q - low] is the index of charge q, -1 where absent."""
+    low = charges.min()
+    table = np.full(charges.max() - low + 1, -1, np.int64)
+    for index in range(charges.size):
+        table[charges[index] - low] = index
+    return table, low
+
+
+@compiled
+def find(table, low, charge):
+    position = charge - low
+    if position < 0 or position >= table.size:
+        return -1
+    return table[position]
+
+
+@compiled
+def by_left(left, left_dims, right, right_dims, local):
+    """Layout by left: right charge index and first column per (i, s), width and first element per i, total size."""
+    table, low = lookup(right)
+    target = np.full((left.size, local.size), -1, np.int64)
+    column = np.zeros((left.size, local.size), np.int64)
+    width = np.zeros(left.size, np.int64)
+    start = np.zeros(left.size, np.int64)
+    size = 0
+    for i in range(left.size):
+        start[i] = size
+        for s in range(local.size):
+            j = find(table, low, left[i] + local[s])
+            if j >= 0:
+                target[i, s] = j
+                column[i, s] = width[i]
+                width[i] += right_dims[j]
+        size += left_dims[i] * width[i]
+    return target, column, width, start, size
+
+
+@compiled
+def by_right(left, left_dims, right, local):
+    """Layout by right: first row per (i, s), -1 where absent, and height per right charge."""
+    table, low = lookup(left)
+    row = np.full((left.size, local.size), -1, np.int64)
+    height = np.zeros(right.size, np.int64)
+    for j in range(right.size):
+        for s in range(local.size):
+            i = find(table, low, right[j] - local[s])
+            if i >= 0:
+                row[i, s] = height[j]
+                height[j] += left_dims[i]
+    return row, height
+
+
+@compiled
+def by_bra(charges, dims, delta, skip):
+    """Environment by bra: ket index and first row per (channel, bra), height and first element per bra, total size."""
+    table, low = lookup(charges)
+    partner = np.full((delta.size, charges.size), -1, np.int64)
+    row = np.zeros((delta.size, charges.size), np.int64)
+    height = np.zeros(charges.size, np.int64)
+    start = np.zeros(charges.size, np.int64)
+    size = 0
+    for j in range(charges.size):
+        start[j] = size
+        for b in range(delta.size):
+            k = find(table, low, charges[j] - delta[b])
+            if b != skip and k >= 0:
+                partner[b, j] = k
+                row[b, j] = height[j]
+                height[j] += dims[k]
+        size += height[j] * dims[j]
+    return partner, row, height, start, size
+
+
+@compiled
+def by_ket(charges, dims, delta, skip):
+    """Environment by ket: the same as by_bra with bra and ket exchanged."""
+    return by_bra(charges, dims, -delta, skip)
+
+
+@compiled
+def to_ket(environment, charges, dims, delta, skip):
+    """Copy of an environment stored by bra into the layout by ket."""
+    bra_partner, bra_row, _, bra_start, size = by_bra(charges, dims, delta, skip)
+    ket_partner, ket_row, _, ket_start, _ = by_ket(charges, dims, delta, skip)
+    result = np.empty(size, environment.dtype)
+    for k in range(charges.size):
+        for a in range(delta.size):
+            j = ket_partner[a, k]
+            if j >= 0:
+                source = bra_start[j] + bra_row[a, j] * dims[j]
+                target = ket_start[k] + ket_row[a, k] * dims[k]
+                for x in range(dims[j]):
+                    for y in range(dims[k]):
+                        result[target + x * dims[k] + y] = environment[source + y * dims[j] + x]
+    return result
+
+
+@compiled
+def mirror_tensor(tensor, left, left_dims, right, right_dims, local, total):
+    """Site tensor (by left) as seen from the other end of a chain with the given total charge (by left there)."""
+    target, column, width, start, size = by_left(left, left_dims, right, right_dims, local)
+    _, other_column, other_width, other_start, _ = by_left(total - right, right_dims, total - left, left_dims, local)
+    result = np.empty(size, tensor.dtype)
+    for i in range(left.size):
+        for s in range(local.size):
+            j = target[i, s]
+            if j >= 0:
+                source = start[i] + column[i, s]
+                goal = other_start[j] + other_column[j, s]
+                for x in range(left_dims[i]):
+                    for y in range(right_dims[j]):
+                        result[goal + y * other_width[j] + x] = tensor[source + x * width[i] + y]
+    return result
+
+
+@compiled
+def gather_right(tensor, left, left_dims, right, right_dims, local):
+    """Site tensor by left -> by right; groups follow each other in the order of the right charges."""
+    target, column, width, start, size = by_left(left, left_dims, right, right_dims, local)
+    row, height = by_right(left, left_dims, right, local)
+    first = offsets(height * right_dims)
+    result = np.empty(size, tensor.dtype)
+    for i in range(left.size):
+        for s in range(local.size):
+            j = target[i, s]
+            if j >= 0:
+                source = start[i] + column[i, s]
+                goal = first[j] + row[i, s] * right_dims[j]
+                for x in range(left_dims[i]):
+                    for y in range(right_dims[j]):
+                        result[goal + x * right_dims[j] + y] = tensor[source + x * width[i] + y]
+    return result
+
+
+@compiled
+def scatter_left(grouped, left, left_dims, right, right_dims, local):
+    """Site tensor by right -> by left, the inverse of gather_right."""
+    target, column, width, start, size = by_left(left, left_dims, right, right_dims, local)
+    row, height = by_right(left, left_dims, right, local)
+    first = offsets(height * right_dims)
+    result = np.empty(size, grouped.dtype)
+    for i in range(left.size):
+        for s in range(local.size):
+            j = target[i, s]
+            if j >= 0:
+                goal = start[i] + column[i, s]
+                source = first[j] + row[i, s] * right_dims[j]
+                for x in range(left_dims[i]):
+                    for y in range(right_dims[j]):
+                        result[goal + x * width[i] + y] = grouped[source + x * right_dims[j] + y]
+    return result
+
+
+@compiled
+def offsets(sizes):
+    """First element of each of several pieces that follow each other."""
+    first = np.zeros(sizes.size, np.int64)
+    for index in range(1, sizes.size):
+        first[index] = first[index - 1] + sizes[index - 1]
+    return first
+
+
+@compiled
+def reachable(left, right, first_local, second_local):
+    """Charges of the middle bond that both sides can reach: left + first and right - second, ascending."""
+    wanted = np.zeros(right.size * second_local.size, np.int64)
+    count = 0
+    for j in range(right.size):
+        for s in range(second_local.size):
+            wanted[count] = right[j] - second_local[s]
+            count += 1
+    table, low = lookup(np.unique(wanted))
+    offered = np.zeros(left.size * first_local.size, np.int64)
+    count = 0
+    for i in range(left.size):
+        for s in range(first_local.size):
+            charge = left[i] + first_local[s]
+            if find(table, low, charge) >= 0:
+                offered[count] = charge
+                count += 1
+    return np.unique(offered[:count])
+
+
+@compiled
+def join_pair(grouped, middle, left, left_dims, right, right_dims, first_local, second_local):
+    """Matrices per middle charge, rows (s1, left states), columns (s2, right states) -> pair tensor by left with local states
+    s1 * d2 + s2 of charge first_local[s1] + second_local[s2]; blocks whose middle charge is not listed are zero."""
+    return _regroup(grouped, middle, left, left_dims, right, right_dims, first_local, second_local, True)
+
+
+@compiled
+def cut_pair(pair, middle, left, left_dims, right, right_dims, first_local, second_local):
+    """The inverse of join_pair, for any list of middle charges."""
+    return _regroup(pair, middle, left, left_dims, right, right_dims, first_local, second_local, False)
+
+
+@compiled
+def pair_charges(first_local, second_local):
+    """Charges of the local states s1 * d2 + s2 of two sites."""
+    result = np.empty(first_local.size * second_local.size, np.int64)
+    for s in range(first_local.size):
+        for t in range(second_local.size):
+            result[s * second_local.size + t] = first_local[s] + second_local[t]
+    return result
+
+
+@compiled
+def pair_shapes(middle, left, left_dims, right, right_dims, first_local, second_local):
+    """(n, 2) rows and columns of the matrices of cut_pair."""
+    _, height = by_right(left, left_dims, middle, first_local)
+    _, _, width, _, _ = by_left(middle, np.ones_like(middle), right, right_dims, second_local)
+    return np.stack((height, width), axis=1)
+
+
+@compiled
+def _regroup(source, middle, left, left_dims, right, right_dims, first_local, second_local, joining):
+    target, column, width, start, size = by_left(
+        left, left_dims, right, right_dims, pair_charges(first_local, second_local)
+    )
+    row, height = by_right(left, left_dims, middle, first_local)
+    _, mid_column, mid_width, _, _ = by_left(middle, np.ones_like(middle), right, right_dims, second_local)
+    first = offsets(height * mid_width)
+    table, low = lookup(middle)
+    if joining:
+        result = np.zeros(size, source.dtype)
+    else:
+        result = np.empty((height * mid_width).sum(), source.dtype)
+    for i in range(left.size):
+        for s in range(first_local.size):
+            m = find(table, low, left[i] + first_local[s])
+            if m < 0:
+                continue
+            for t in range(second_local.size):
+                j = target[i, s * second_local.size + t]
+                if j < 0:
+                    continue
+                pair = start[i] + column[i, s * second_local.size + t]
+                group = first[m] + row[i, s] * mid_width[m] + mid_column[m, t]
+                for x in range(left_dims[i]):
+                    if joining:
+                        for y in range(right_dims[j]):
+                            result[pair + x * width[i] + y] = source[group + x * mid_width[m] + y]
+                    else:
+                        for y in range(right_dims[j]):
+                            result[group + x * mid_width[m] + y] = source[pair + x * width[i] + y]
+    return result

@@ -1,0 +1,190 @@
+"""The state of a sweep: site tensors, bonds and environments of a chain, seen from the end where the sweep started.
+
+Every sweep runs from site 0 to the right; `mirror` then turns the chain round. Left of the centre all tensors are orthonormal towards
+the right, right of it towards the left, and both environments of the centre are up to date.
+"""
+
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from manybody.quantum import blocks, contraction, split
+from manybody.quantum.matrix_product_operator import OperatorSite, composite
+
+
+@dataclass
+class Bond:
+    """charges (n,) distinct integers and dims (n,) states of each."""
+
+    charges: np.ndarray
+    dims: np.ndarray
+
+    @property
+    def dimension(self) -> int:
+        return int(self.dims.sum())
+
+    @property
+    def pair(self) -> tuple[np.ndarray, np.ndarray]:
+        return self.charges, self.dims
+
+    def mirrored(self, total: int) -> "Bond":
+        return Bond(total - self.charges, self.dims)
+
+
+@dataclass
+class Chain:
+    """Sites in the order of the present view.
+
+    local: charges of the local states; operators; bonds (length + 1); tensors, site tensors by left; turned: whether a tensor is
+    still stored as seen from the other end; left[l], right[l]: environments by bra of bond l; total: charge of the whole chain; reverse:
+    the view is from the far end.
+    """
+
+    local: list[np.ndarray]
+    operators: list[OperatorSite]
+    bonds: list[Bond]
+    tensors: list[np.ndarray]
+    total: int
+    turned: list[bool] = field(default_factory=list)
+    left: list[np.ndarray | None] = field(default_factory=list)
+    right: list[np.ndarray | None] = field(default_factory=list)
+    reverse: bool = False
+    other_operators: list[OperatorSite] = field(default_factory=list)
+    composites: dict[tuple[int, int], OperatorSite] = field(default_factory=dict)
+
+    def __post_init__(self) -> None:
+        length = len(self.local)
+        self.turned = self.turned or [False] * length
+        if not self.other_operators:
+            known = {id(site): site.mirrored() for site in self.operators}
+            self.other_operators = [known[id(site)] for site in reversed(self.operators)]
+        edge = np.zeros(1, self.dtype)
+        self.left = self.left or [edge, *[None] * length]
+        self.right = self.right or [*[None] * length, edge]
+
+    @property
+    def length(self) -> int:
+        return len(self.local)
+
+    @property
+    def dtype(self) -> np.dtype:
+        return self.tensors[0].dtype
+
+    @property
+    def bond_dimension(self) -> int:
+        return max(bond.dimension for bond in self.bonds)
+
+    def mirror(self) -> None:
+        self.local.reverse()
+        self.operators, self.other_operators = self.other_operators, self.operators
+        self.bonds = [bond.mirrored(self.total) for bond in reversed(self.bonds)]
+        self.tensors.reverse()
+        self.turned = [not turned for turned in reversed(self.turned)]
+        self.left, self.right = self.right[::-1], self.left[::-1]
+        self.reverse = not self.reverse
+
+    def tensor(self, site: int) -> np.ndarray:
+        """Site tensor by left in the present view."""
+        if self.turned[site]:
+            right, left = (self.bonds[k].mirrored(self.total).pair for k in (site, site + 1))
+            self.tensors[site] = blocks.mirror_tensor(self.tensors[site], *left, *right, self.local[site], self.total)
+            self.turned[site] = False
+        return self.tensors[site]
+
+    def turned_tensor(self, site: int) -> np.ndarray:
+        """Site tensor by left as seen from the other end."""
+        if not self.turned[site]:
+            left, right = self.bonds[site].pair, self.bonds[site + 1].pair
+            self.tensors[site] = blocks.mirror_tensor(self.tensors[site], *left, *right, self.local[site], self.total)
+            self.turned[site] = True
+        return self.tensors[site]
+
+    def put(self, site: int, tensor: np.ndarray) -> None:
+        self.tensors[site] = tensor
+        self.turned[site] = False
+
+    def left_by_ket(self, site: int) -> np.ndarray:
+        """Environment left of a site in the layout the products need."""
+        operator = self.operators[site]
+        return blocks.to_ket(self.left[site], *self.bonds[site].pair, operator.delta_left, operator.start)
+
+    def pair_operator(self, site: int) -> OperatorSite:
+        first, second = self.operators[site], self.operators[site + 1]
+        key = (id(first), id(second))
+        if key not in self.composites:
+            self.composites[key] = composite(first, second, (self.local[site].size, self.local[site + 1].size))
+        return self.composites[key]
+
+    def plan(
+        self,
+        operator: OperatorSite,
+        left: Bond,
+        right: Bond,
+        local: np.ndarray,
+        end: int,
+        skip: int,
+        bra: Bond | None = None,
+    ):
+        """contraction.plan for one site (or a pair) between two bonds."""
+        weights = operator.weights.astype(self.dtype, copy=False)
+        return contraction.plan(
+            *left.pair, *right.pair, local, operator.delta_left, operator.delta_right, operator.start, end, skip, operator.entries,
+            weights, *(bra or right).pair,
+        )  # fmt: skip
+
+    def advance(self, site: int) -> None:
+        """Left environment of the next bond from the one of this bond and the (orthonormal) tensor of the site."""
+        self.left[site + 1] = self._environment(
+            self.operators[site],
+            self.left[site],
+            self.bonds[site],
+            self.bonds[site + 1],
+            self.local[site],
+            self.tensor(site),
+        )
+
+    def retreat(self, site: int) -> None:
+        """Right environment of the bond before a site, likewise."""
+        left, right = (self.bonds[k].mirrored(self.total) for k in (site + 1, site))
+        operator = self.other_operators[self.length - 1 - site]
+        tensor = self.turned_tensor(site)
+        self.right[site] = self._environment(operator, self.right[site + 1], left, right, self.local[site], tensor)
+
+    def _environment(
+        self, operator: OperatorSite, before: np.ndarray, left: Bond, right: Bond, local, tensor
+    ) -> np.ndarray:
+        steps = self.plan(operator, left, right, local, -1, operator.start)
+        by_ket = blocks.to_ket(before, *left.pair, operator.delta_left, operator.start)
+        stacked = contraction.half(tensor, by_ket, steps)
+        return contraction.close(
+            stacked, blocks.gather_right(tensor, *left.pair, *right.pair, local), steps, right.dims
+        )
+
+    def shift(self, site: int) -> None:
+        """Orthonormalize a site without any cut and move the centre to the next."""
+        left, right = self.bonds[site], self.bonds[site + 1]
+        grouped = blocks.gather_right(self.tensor(site), *left.pair, *right.pair, self.local[site])
+        _, height = blocks.by_right(*left.pair, right.charges, self.local[site])
+        isometry, carry, kept = split.orthonormal(grouped, np.stack((height, right.dims), axis=1))
+        self.pass_on(site, isometry, carry, kept)
+
+    def pass_on(self, site: int, isometry: np.ndarray, carry: np.ndarray, kept: np.ndarray) -> None:
+        """Put an isometry grouped by right charge in place of a site tensor and multiply the carry into the next one."""
+        left, right, after = self.bonds[site], self.bonds[site + 1], self.bonds[site + 2]
+        tensor = self.tensor(site + 1)
+        widths = blocks.by_left(*right.pair, *after.pair, self.local[site + 1])[2]
+        tensor = split.carry_over(carry, kept, right.dims, tensor, widths)
+        stay = kept > 0
+        self.bonds[site + 1] = Bond(right.charges[stay], kept[stay])
+        self.put(site, blocks.scatter_left(isometry, *left.pair, *self.bonds[site + 1].pair, self.local[site]))
+        self.put(site + 1, tensor)
+
+    def prepare(self) -> None:
+        """Normalize, centre at site 0, all right environments: from any tensors in the present view."""
+        self.mirror()
+        for site in range(self.length - 1):
+            self.shift(site)
+            self.advance(site)
+        self.mirror()
+        centre = self.tensor(0)
+        self.put(0, centre / np.linalg.norm(centre))
