@@ -39,6 +39,11 @@ class CostModel:
         if peak > 1e8 and expected_bytes > 0:
             self._memory[kind] = max(self._memory.get(kind, 1.0), min(peak / expected_bytes, 10.0))
 
+    @property
+    def total(self) -> int:
+        """How many parts have been measured."""
+        return sum(self._seen.values())
+
     def known(self, kind: str) -> int:
         """How many parts of this kind have been measured."""
         return self._seen.get(kind, 0)

@@ -74,6 +74,7 @@ class _Run:
         self.numbers = 0
         self.ready: list[tuple[float, int, str]] = []
         self.suspects: deque[str] = deque()
+        self.sorted_with = 0  # measurements behind the present order
         self.order = {key: place for place, key in enumerate(self.tasks)}
         self.blockers: dict[str, int] = {}
         self.dependents: dict[str, list[str]] = defaultdict(list)
@@ -101,7 +102,6 @@ class _Run:
         self.reused = sum(status == "finished" for status in self.status.values())
         self.tally = Counter(self.status.values())
         self.left, self.left_at = 0.0, float("-inf")
-        self.tail = dict.fromkeys(self.tasks, 0.0)
         blocked = []
         for key, task in self.tasks.items():
             if key in self.status:
@@ -111,7 +111,6 @@ class _Run:
                 if name not in self.tasks:
                     raise ValueError(f"{task.label} depends on {name}, which is no task of this study")
                 self.dependents[name].append(key)
-                self.tail[name] = max(self.tail[name], task.seconds)
             for name in task.depends:
                 self.users[name] += 1
             self.blockers[key] = len(missing)
@@ -121,7 +120,9 @@ class _Run:
 
     def _push(self, key: str) -> None:
         task = self.tasks[key]
-        seconds = self.costs.seconds(task.kind, task.seconds) + self.tail[key]
+        following = (self.tasks[name] for name in self.dependents.get(key, ()))
+        tail = max((self.costs.seconds(other.kind, other.seconds) for other in following), default=0.0)
+        seconds = self.costs.seconds(task.kind, task.seconds) + tail
         heapq.heappush(self.ready, (-seconds, self.order[key], key))
 
     def missing(self) -> list[str]:
@@ -198,6 +199,11 @@ class _Run:
     # sending parts out
 
     def _dispatch(self) -> None:
+        if self.costs.total >= 1.2 * self.sorted_with + 1:
+            self.sorted_with = self.costs.total
+            keys, self.ready = [key for *_, key in self.ready], []
+            for key in keys:
+                self._push(key)
         for place in sorted(self.slots, key=lambda place: len(self.busy[place])):
             while batch := self._next_batch(place):
                 self._send(batch)

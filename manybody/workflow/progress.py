@@ -56,9 +56,7 @@ class Display:
         """One line about a part that failed or was refused; "" after the first few."""
         self._failures += 1
         if self._failures > FAILURES:
-            return (
-                "further failures are not shown here; see `manybody status`" if self._failures == FAILURES + 1 else ""
-            )
+            return "further failures: see `manybody status`" if self._failures == FAILURES + 1 else ""
         first = outcome.message.splitlines()[0] if outcome.message else ""
         return f"{outcome.status}: {task.label} ({task.kind}): {first}"
 
