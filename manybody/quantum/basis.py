@@ -1,7 +1,7 @@
 """The states of a total-S^z sector (or of the whole space), numbered without ever listing the whole space.
 
-A state is a tuple of digits s_i = S_i - m_i, read as a number with site 0 slowest. The sites are cut into a left and a right
-half; a state's number is then start[left] + rank[right], two look-ups in tables of the size of a half.
+A state is a tuple of digits s_i = S_i - m_i, read as a number with site 0 slowest. The sites are cut into a left and
+a right half; a state's number is then start[left] + rank[right], two look-ups in tables of the size of a half.
 """
 
 import functools
@@ -20,7 +20,7 @@ def sector_dimensions(spins: np.ndarray) -> np.ndarray:
     """Dimension of every sector as floats (exact below 2^53); entry n is total S^z = sum S_i - n."""
     counts = np.ones(1)
     for spin in spins:
-        counts = np.convolve(counts, np.ones(int(round(2 * spin)) + 1))
+        counts = np.convolve(counts, np.ones(round(2 * spin) + 1))
     return counts
 
 
@@ -36,15 +36,16 @@ def sector_index(spins: np.ndarray, sector: float) -> int:
 class Basis:
     """States of one sector, S^z = `sector`, or of the whole space (None), in ascending order of their digits.
 
-    dimension: number of states. cut: the sites 0 ... cut - 1 form the left half. left_start, left_counts: where the states
-    of each left code start and how many there are; they pair it with right_order[right_first[left]], ... in this order.
-    Raises TooLarge where the tables or numbers would not fit, ValueError for a sector that does not exist.
+    dimension: number of states. cut: the sites 0 ... cut - 1 form the left half. left_start, left_counts: where the
+    states of each left code start and how many there are; they pair it with right_order[right_first[left]], ... in
+    this order. Raises TooLarge where the tables or numbers would not fit, ValueError for a sector that does not
+    exist.
     """
 
     def __init__(self, spins: np.ndarray, sector: float | None = None):
         self.spins = np.asarray(spins, dtype=float)
         self.sector = sector
-        self.dims = tuple(int(round(2 * s)) + 1 for s in self.spins)
+        self.dims = tuple(round(2 * s) + 1 for s in self.spins)
         sizes = [math.prod(self.dims[:k]) for k in range(len(self.dims) + 1)]
         self.cut = min(range(len(self.dims) + 1), key=lambda k: max(sizes[k], sizes[-1] // sizes[k]))
         self.left_size, self.right_size = sizes[self.cut], math.prod(self.dims[self.cut :])

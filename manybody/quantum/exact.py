@@ -1,8 +1,8 @@
 """Exact ground states: dense diagonalization of small sectors, Lanczos iteration in large ones.
 
-The ground state is looked for in every sector of a conserved total spin component where that is affordable, otherwise from
-the classical magnetization downhill until both neighbouring sectors lie higher. Under full rotation symmetry the sector of
-lowest |S^z| holds a member of every multiplet.
+The ground state is looked for in every sector of a conserved total spin component where that is affordable, otherwise
+from the classical magnetization downhill until both neighbouring sectors lie higher. Under full rotation symmetry the
+sector of lowest |S^z| holds a member of every multiplet.
 """
 
 import math
@@ -30,6 +30,8 @@ _TOLERANCE = 1e-12  # residual relative to the norm bound
 _COARSE = 1e-4  # the same, for a first look at a sector
 _SCAN_ALL = 200_000  # total dimension up to which every sector is solved outright
 _SCAN_COARSE = 4_000_000  # and up to which every sector gets at least a coarse look
+_SCAN_COUNT = 100  # if there are no more sectors than these
+_GRID = 8  # sectors over the whole range from which the way down starts
 _ROUNDING = 8 * np.finfo(float).eps  # of the norm bound: floor of the error
 
 
@@ -93,12 +95,13 @@ def exact_ground_state(
     if not math.isfinite(parts.norm):
         raise ValueError("the couplings are too large: their sum is not a finite number")
     problem = _Problem(parts, settings, progress)
+    lead = _classical_magnetization(op, frame, start)
     if not parts.terms:
-        best = _trivial(parts, frame)
+        best = _trivial(parts, lead)
     elif not frame.conserved:
         best = problem.solve(None)
     else:
-        best = _search(problem, frame, _classical_magnetization(op, frame, start))
+        best = _search(problem, frame, lead)
     energy = parts.constant + parts.norm * (best.energy + 1.0)
     error = parts.norm * (best.residual + _ROUNDING) + parts.dropped + abs(parts.constant) * np.finfo(float).eps
     converged = error <= settings.accuracy * (scale or parts.norm or 1.0)
@@ -108,7 +111,7 @@ def exact_ground_state(
     if settings.observables:
         from manybody.quantum.observables import exact_observables
 
-        observables = exact_observables(state, settings.observables)
+        observables = exact_observables(state, settings.observables, start, settings.seed)
     return GroundState(
         energy=float(energy),
         error=float(error),
@@ -124,7 +127,9 @@ def exact_ground_state(
 
 
 def estimate_exact(op: SpinOperator, frame: Frame | None = None, memory: float = math.inf) -> Estimate:
-    """Cost of an exact solve without building a matrix: time is for one core of a present-day machine, to a factor of 2."""
+    """Cost of an exact solve without building a matrix: time is for one core of a present-day machine, to a factor of
+    2.
+    """
     frame = frame or natural_frame(op)
     parts = shifts(frame.op, conserve=frame.conserved)
     if frame.conserved:
@@ -157,7 +162,9 @@ def estimate_exact(op: SpinOperator, frame: Frame | None = None, memory: float =
 
 
 class _Problem:
-    """Solves sectors of one operator, scaled to norm at most 1 and shifted by -1, so that all energies lie in [-2, 0]."""
+    """Solves sectors of one operator, scaled to norm at most 1 and shifted by -1, so that all energies lie in [-2,
+    0].
+    """
 
     def __init__(self, parts: Shifts, settings: QuantumSettings, progress):
         terms = tuple(replace(term, amplitude=term.amplitude / parts.norm) for term in parts.terms)
@@ -233,7 +240,7 @@ def _search(problem: _Problem, frame: Frame, lead: float | None) -> _Solved:
     spins = problem.parts.spins
     dimensions = sector_dimensions(spins)
     top = float(np.sum(spins))
-    lowest = top - len(dimensions) // 2 if len(dimensions) % 2 else 0.5
+    lowest = top % 1.0
     solved: dict[float, _Solved] = {}
 
     def energy(sector: float) -> float:
@@ -249,7 +256,7 @@ def _search(problem: _Problem, frame: Frame, lead: float | None) -> _Solved:
     if frame.isotropic:
         for sector in {lowest, top if lead is None else lead}:
             energy(sector)
-        return _preferred(problem, solved, lead)
+        return _preferred(solved, lead)
     sectors = [top - n for n in range(len(dimensions)) if not frame.mirrored or top - n >= 0]
     counts = dict(zip(sectors, dimensions, strict=False))
     if frame.mirrored and lead is not None:
@@ -258,33 +265,40 @@ def _search(problem: _Problem, frame: Frame, lead: float | None) -> _Solved:
     if total <= _SCAN_ALL:
         for sector in sectors:
             energy(sector)
-        return _preferred(problem, solved, lead)
-    for sector in {lowest, sectors[0], sectors[-1]} | ({lead} if lead is not None else set()):
+        return _preferred(solved, lead)
+    grid = {sectors[0], sectors[-1], lowest} | set(sectors[:: max(1, len(sectors) // _GRID)])
+    for sector in grid if total <= _SCAN_COARSE else {lowest, sectors[0], sectors[-1]}:
         energy(sector)
+    if lead is not None:
+        energy(lead)
     _descend(energy, solved, sectors)
-    if total <= _SCAN_COARSE:
+    if total <= _SCAN_COARSE and len(sectors) <= _SCAN_COUNT:
         for sector in sectors:
             if sector not in solved:
                 look = problem.solve(sector, _COARSE)
                 if look.energy - look.residual < min(s.energy for s in solved.values()):
                     energy(sector)
         _descend(energy, solved, sectors)
-    return _preferred(problem, solved, lead)
+    return _preferred(solved, lead)
 
 
 def _descend(energy: Callable[[float], float], solved: dict[float, _Solved], sectors: Iterable[float]) -> None:
-    """Solve neighbours of the lowest sector until both lie higher."""
+    """Solve sectors about the lowest, at distances halved from a quarter of the range to 1, until both neighbours lie
+    higher."""
     allowed = set(sectors)
+    distance = float(2 ** max(0, (len(allowed) // 4).bit_length() - 1)) if len(allowed) > _SCAN_COUNT else 1.0
     while True:
         best = min(solved, key=lambda sector: solved[sector].energy)
-        open_ones = [s for s in (best - 1.0, best + 1.0) if s in allowed and s not in solved]
-        if not open_ones:
-            return
+        open_ones = [s for s in (best - distance, best + distance) if s in allowed and s not in solved]
         for sector in open_ones:
             energy(sector)
+        if not open_ones or best == min(solved, key=lambda sector: solved[sector].energy):
+            if distance == 1.0:
+                return
+            distance /= 2
 
 
-def _preferred(problem: _Problem, solved: dict[float, _Solved], lead: float | None) -> _Solved:
+def _preferred(solved: dict[float, _Solved], lead: float | None) -> _Solved:
     low = min(state.energy for state in solved.values())
     tied = [s for s in solved.values() if s.energy - low <= 100 * _TOLERANCE and s.vector is not None]
     if lead is not None and any(state.sector == lead for state in tied):
@@ -293,8 +307,10 @@ def _preferred(problem: _Problem, solved: dict[float, _Solved], lead: float | No
 
 
 def _classical_magnetization(op: SpinOperator, frame: Frame, start: np.ndarray | None) -> float | None:
-    """S^z of the sector nearest the classical configuration; under full rotation symmetry the length of its total spin."""
-    if start is None:
+    """S^z of the sector nearest the classical configuration; under full rotation symmetry the length of its total
+    spin.
+    """
+    if start is None or not frame.conserved:
         return None
     start = np.asarray(start, dtype=float)
     if start.shape != (op.sites, 3):
@@ -305,7 +321,10 @@ def _classical_magnetization(op: SpinOperator, frame: Frame, start: np.ndarray |
     return float(np.clip(top - round(top - along), -top, top))
 
 
-def _trivial(parts: Shifts, frame: Frame) -> _Solved:
-    """Any state is a ground state of a constant: all spins up."""
-    top = float(np.sum(parts.spins))
-    return _Solved(top, -1.0, 0.0, np.ones(1), Basis(parts.spins, top))
+def _trivial(parts: Shifts, lead: float | None) -> _Solved:
+    """Any state is a ground state of a constant; take the classical sector or that of lowest |S^z|."""
+    sector = (float(np.sum(parts.spins)) % 1.0) if lead is None else lead
+    basis = Basis(parts.spins, sector)
+    vector = np.zeros(basis.dimension)
+    vector[0] = 1.0
+    return _Solved(sector, -1.0, 0.0, vector, basis)

@@ -1,7 +1,7 @@
 """The frame in which an operator is easiest: its conserved axis along z, its matrix real.
 
-A matrix in the S^z basis is real exactly when the symbol does not change under n_y -> -n_y at all sites. That can often be
-reached by turning all sites together, or, where S^z is conserved, each site about z.
+A matrix in the S^z basis is real exactly when the symbol does not change under n_y -> -n_y at all sites. That can
+often be reached by turning all sites together, or, where S^z is conserved, each site about z.
 """
 
 from collections import deque
@@ -18,9 +18,10 @@ from manybody.quantum.ladder import NOISE, ladder_terms
 class Frame:
     """op: the operator turned by rotations (N, 3, 3): vectors of the original frame are n = R_i^T n', spins likewise.
 
-    conserved: total S^z of the turned operator is conserved; axis (3,) is that axis in the original frame (NaN otherwise).
-    isotropic: the original operator is symmetric under all common rotations. mirrored: every energy of sector M is one of
-    sector -M. real: the matrix is real.
+    conserved: total S^z of the turned operator is conserved; axis (3,) is that axis in the original frame (NaN
+    otherwise).
+    isotropic: the original operator is symmetric under all common rotations. mirrored: every energy of sector M is
+    one of sector -M. real: the matrix is real.
     """
 
     op: SpinOperator
@@ -33,7 +34,9 @@ class Frame:
 
 
 def natural_frame(op: SpinOperator) -> Frame:
-    """Turn an operator so that a conserved total spin component is S^z and its matrix is real, where that can be had."""
+    """Turn an operator so that a conserved total spin component is S^z and its matrix is real, where that can be
+    had.
+    """
     axes = op.symmetry_axes()
     conserved, isotropic = len(axes) > 0, len(axes) == 3
     rotations = np.broadcast_to(np.eye(3), (op.sites, 3, 3))
@@ -128,7 +131,9 @@ def _mirrors(op: SpinOperator):
         elif group.ranks == (1, 1):
             order = np.argsort(CARTESIAN)
             for matrix in group.coefficients[:, order[:, None], order]:
-                axial = np.array([matrix[1, 2] - matrix[2, 1], matrix[2, 0] - matrix[0, 2], matrix[0, 1] - matrix[1, 0]])
+                axial = np.array(
+                    [matrix[1, 2] - matrix[2, 1], matrix[2, 0] - matrix[0, 2], matrix[0, 1] - matrix[1, 0]]
+                )
                 total += random.normal() * (matrix + matrix.T) + random.normal() * np.outer(axial, axial)
     for normal in np.linalg.eigh(total)[1].T:
         yield rotation_between(normal, np.array([0.0, 1.0, 0.0]))

@@ -1,7 +1,7 @@
 """A spin operator as a sum of shifts: products of site operators that each move S^z by a fixed step.
 
-The rank-k operators W_kq and W_k,-q of one site are the real and the imaginary part of one ladder operator that raises m by q,
-so a term becomes a sum over steps (q_1, ..., q_m). Everything sparse is built from that.
+The rank-k operators W_kq and W_k,-q of one site are the real and the imaginary part of one ladder operator that
+raises m by q, so a term becomes a sum over steps (q_1, ..., q_m). Everything sparse is built from that.
 """
 
 import itertools
@@ -44,7 +44,8 @@ class Shifts:
     """The operator constant + sum of shifts, plus what was left out.
 
     real: all amplitudes are real. dropped: bound on the operator norm of what was left out (rounding errors, and parts
-    that change the total S^z where conservation was demanded). norm: bound on the norm of the operator, constant left out.
+    that change the total S^z where conservation was demanded). norm: bound on the norm of the operator, constant left
+    out.
     """
 
     spins: np.ndarray
@@ -56,13 +57,13 @@ class Shifts:
 
     @property
     def dims(self) -> tuple[int, ...]:
-        return tuple(int(round(2 * s)) + 1 for s in self.spins)
+        return tuple(round(2 * s) + 1 for s in self.spins)
 
 
 def ladder_table(spin: float, rank: int) -> np.ndarray:
     """(2 rank + 1, d): row rank + q holds <m + q| L_q |m> by source state, with W_k0 = L_0 and for q > 0
     W_kq = L_q + L_-q, W_k,-q = -i (L_q - L_-q)."""
-    d = int(round(2 * spin)) + 1
+    d = round(2 * spin) + 1
     table = np.zeros((2 * rank + 1, d))
     for q, diagonal in enumerate(harmonic_diagonals(spin, rank)[:d]):
         # diagonal[p] = <p| T_q |p + q> in state numbers, where p is m = S - p; L_q = T_q / 2 for q > 0.

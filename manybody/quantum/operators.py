@@ -1,6 +1,7 @@
 """Quantized operators as sparse matrices, on the whole space or in one sector of conserved total S^z.
 
-Rows are assembled in chunks straight from the shifts of manybody.quantum.ladder, without sorting and without intermediate
+Rows are assembled in chunks straight from the shifts of manybody.quantum.ladder, without sorting and without
+intermediate
 copies: the number of entries is known beforehand from a count of states.
 """
 
@@ -19,9 +20,9 @@ _CHUNK = 2**22  # entries held at once while assembling
 def sparse_operator(op: SpinOperator, sector: float | None = None) -> sparse.csr_array:
     """The operator as a Hermitian scipy CSR matrix; real (float64) whenever its coefficients allow, else complex.
 
-    sector: total S^z; None for the whole space, in numpy.kron order (site 0 slowest, m = S first at every site). A sector
-    holds the same states in the same order, the others left out. Raises ValueError for a sector that does not exist or an
-    operator that does not conserve the total S^z, TooLarge beyond 2^31 - 1 states.
+    sector: total S^z; None for the whole space, in numpy.kron order (site 0 slowest, m = S first at every site). A
+    sector holds the same states in the same order, the others left out. Raises ValueError for a sector that does not
+    exist or an operator that does not conserve the total S^z, TooLarge beyond 2^31 - 1 states.
     """
     parts = shifts(op)
     if sector is not None:
@@ -93,7 +94,9 @@ def entry_count(parts: Shifts, sector: float | None) -> int:
 
 def matrix_bytes(parts: Shifts, sector: float | None) -> int:
     """Memory of the assembled matrix."""
-    dims = math.prod(parts.dims) if sector is None else sector_dimensions(parts.spins)[sector_index(parts.spins, sector)]
+    dims = (
+        math.prod(parts.dims) if sector is None else sector_dimensions(parts.spins)[sector_index(parts.spins, sector)]
+    )
     entries = int(dims) + entry_count(parts, sector)
     return entries * ((8 if parts.real else 16) + (4 if entries < 2**31 else 8)) + 4 * int(dims)
 
@@ -112,7 +115,9 @@ def diagonal_of(parts: Shifts, basis: Basis) -> np.ndarray:
 
 
 def _without(counts: np.ndarray, removed: tuple[int, ...]) -> np.ndarray:
-    """Sector dimensions after taking sites of the given dimensions away: polynomial division by 1 + x + ... + x^(d-1)."""
+    """Sector dimensions after taking sites of the given dimensions away: polynomial division by 1 + x + ... +
+    x^(d-1).
+    """
     for d in removed:
         # (1 - x) times the counts, divided by 1 - x^d; every step subtracts exact whole numbers below 2^53.
         difference = np.diff(counts, prepend=0.0)[: len(counts) - d + 1]

@@ -1,8 +1,8 @@
 """A quantized operator applied without its matrix, where that would not fit the memory.
 
-Cut into a left and a right half, the operator is H_L + H_R + diagonal + sum_k A_k B_k with sparse matrices on the halves. A
-vector becomes one dense block per left charge (a single block without conservation), and every product acts by small sparse
-times dense multiplications.
+Cut into a left and a right half, the operator is H_L + H_R + diagonal + sum_k A_k B_k with sparse matrices on the
+halves. A vector becomes one dense block per left charge (a single block without conservation), and every product acts
+by small sparse times dense multiplications.
 """
 
 import numpy as np
@@ -26,7 +26,9 @@ class SplitOperator(LinearOperator):
         across = [term for term in moves if term.sites[0] < basis.cut <= term.sites[-1]]
         left_half = _Half(basis.dims[: basis.cut], 0)
         right_half = _Half(basis.dims[basis.cut :], basis.cut)
-        products = [(left_half.matrix(a, self.dtype), right_half.matrix(b, self.dtype)) for a, b in _products(across, basis)]
+        products = [
+            (left_half.matrix(a, self.dtype), right_half.matrix(b, self.dtype)) for a, b in _products(across, basis)
+        ]
         if left:
             products.append((left_half.matrix(left, self.dtype), None))
         if right:
@@ -99,15 +101,17 @@ class _Half:
                 target = target - step * stride
             values = term.amplitude.reshape(-1)[flat]
             kept = values != 0
-            total = total + sparse.csr_array((values[kept], (target[kept], codes[kept])), shape=(size, size), dtype=dtype)
+            total = total + sparse.csr_array(
+                (values[kept], (target[kept], codes[kept])), shape=(size, size), dtype=dtype
+            )
         return sparse.csr_array(total)
 
 
 def _products(across: list[Shift], basis: Basis):
     """Yields ([left shift], [right shifts]) whose products sum to the given shifts, few of them.
 
-    Shifts with the same part in one half are gathered; a singular value decomposition of their amplitudes gives the fewest
-    products.
+    Shifts with the same part in one half are gathered; a singular value decomposition of their amplitudes gives the
+    fewest products.
     """
     left_keys = {_part(term, basis, left=True) for term in across}
     by_left = len(left_keys) <= len({_part(term, basis, left=False) for term in across})
