@@ -10,6 +10,7 @@ from __future__ import annotations
 import asyncio
 import contextlib
 import logging
+import os
 import queue
 import time
 import uuid
@@ -23,6 +24,8 @@ BASE = 0.35e9  # bytes a worker holds before it has any part: interpreter and li
 SHARE = 0.9  # of a worker's limit; dask ends a worker at 0.95
 POLL = 5.0  # seconds between looks at the list of workers; changes are also announced
 PATIENCE = 60.0  # seconds to wait for a scheduler
+
+THREADS = ("OMP_NUM_THREADS", "MKL_NUM_THREADS", "OPENBLAS_NUM_THREADS", "NUMBA_NUM_THREADS")
 
 BATCH_SYSTEMS = {
     "htcondor": "HTCondorCluster",
@@ -48,6 +51,14 @@ def local_memory(workers: int) -> float:
     from distributed.system import MEMORY_LIMIT
 
     return SHARE * MEMORY_LIMIT / max(workers, 1) - BASE
+
+
+def _restore_environment(earlier: dict[str, str | None]) -> None:
+    for name, value in earlier.items():
+        if value is None:
+            os.environ.pop(name, None)
+        else:
+            os.environ[name] = value
 
 
 class DaskExecutor:
@@ -244,10 +255,9 @@ class LocalProcesses(DaskExecutor):
         logging.getLogger("distributed").setLevel(logging.CRITICAL)  # deaths of workers are told in our own words
         workers = max(1, min(self.workers, parts))
         self.threads = max(1, min(self.workers, cores()) // workers) if parts < cores() else 1
-        names = ("OMP_NUM_THREADS", "MKL_NUM_THREADS", "OPENBLAS_NUM_THREADS", "NUMBA_NUM_THREADS")
-        environment = {name: str(self.threads) for name in names}
-        setting = {f"distributed.nanny.pre-spawn-environ.{name}": value for name, value in environment.items()}
-        with dask.config.set(setting):
+        # dask writes these into our own environment and lets what is there win, so it is put back when we are done
+        self._stack.callback(_restore_environment, {name: os.environ.get(name) for name in THREADS})
+        with dask.config.set({f"distributed.nanny.pre-spawn-environ.{name}": self.threads for name in THREADS}):
             cluster = LocalCluster(
                 n_workers=workers,
                 threads_per_worker=1,
@@ -257,7 +267,7 @@ class LocalProcesses(DaskExecutor):
                 silence_logs=logging.CRITICAL,
             )
         self._stack.callback(cluster.close, timeout=10)
-        client = Client(cluster)
+        client = Client(cluster, set_as_default=False)
         self._stack.callback(client.close, timeout=10)
         client.run(remote.ignore_interrupts)
         return client

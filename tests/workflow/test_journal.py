@@ -149,7 +149,8 @@ def test_full_disk_stops_with_a_message_and_keeps_what_was_there(tmp_path):
         "journal = Journal(sys.argv[1]); n = 0\n"
         "try:\n"
         "    while True:\n"
-        "        task = Task(str(n), 'exact', 'x'); journal.store([(task, Outcome(str(n), 'finished', bytes(20_000)))]); n += 1\n"
+        "        outcome = Outcome(str(n), 'finished', bytes(20_000))\n"
+        "        journal.store([(Task(str(n), 'exact', 'x'), outcome)]); n += 1\n"
         "except JournalError as error:\n"
         "    print(n, error)\n"
     )
@@ -223,7 +224,7 @@ def test_cut_results_are_never_read(data):
 
 
 def test_objects_are_refused_by_name():
-    with pytest.raises(TypeError, match="result.state"):
+    with pytest.raises(TypeError, match=r"result\.state"):
         pack({"state": object()})
     with pytest.raises(TypeError, match=r"result\.array"):
         pack({"array": np.array([object()])})
