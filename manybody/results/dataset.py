@@ -30,6 +30,8 @@ _COORDINATES = {
     "site": {"long_name": "site number, from 0", "units": "1"},
     "other_site": {"long_name": "site number of the partner, from 0", "units": "1"},
     "component": {"long_name": "Cartesian component"},
+    "other_component": {"long_name": "Cartesian component of the partner"},
+    "place": {"long_name": "place in the order of the cuts, from 0", "units": "1"},
     "cut": {"long_name": "cut between neighbouring positions, from 0", "units": "1"},
     "stage": {"long_name": "stage of the quantum branch, from 0", "units": "1"},
 }
@@ -350,7 +352,7 @@ def _group(name, records, axes, places, unit):
     variables = {v.name: _filled(v, records, axes, places, [lengths[d] for d in v.dims], unit) for v in present}
     coords = _coordinates({n: axes[n] for n in axes if any(n in dims for dims, _, _ in variables.values())})
     for dim, length in lengths.items():
-        if dim == "component":
+        if dim in ("component", "other_component"):
             coords[dim] = (dim, np.array(COMPONENTS[:length], dtype=object), _COORDINATES[dim])
         elif dim in _COORDINATES:
             coords[dim] = (dim, np.arange(length), _COORDINATES[dim])

@@ -306,13 +306,30 @@ _GROUPED = (
         units="1",
         dims=("cut",),
         group="entanglement",
-        meaning="von Neumann entropy, natural logarithm; cut c has c + 1 sites, in the engine's order, on its left",
+        meaning="von Neumann entropy, natural logarithm; cut c separates the first c + 1 sites of entanglement_order "
+        "from the others",
+    ),
+    Variable(
+        "entanglement_order",
+        "sites in the order of the cuts",
+        units="1",
+        dtype="index",
+        dims=("place",),
+        group="entanglement",
+        meaning="-1 is padding",
     ),
     Variable(
         "quantum_moment",
         "quantum moment <S_i>/S",
         units="1",
         dims=("site", "component"),
+        group="moments",
+    ),
+    Variable(
+        "quantum_moment_square",
+        "quadratic moment <S_i^a S_i^b>/S^2, symmetrized",
+        units="1",
+        dims=("site", "component", "other_component"),
         group="moments",
     ),
     Variable(
@@ -339,16 +356,16 @@ _GROUPED = (
     ),
     Variable(
         "quantum_correlation_component",
-        "quantum correlation by component <S_i^a S_j^a>/S^2",
+        "quantum correlation by components <S_i^a S_j^b>/S^2",
         units="1",
-        dims=("site", "other_site", "component"),
+        dims=("site", "other_site", "component", "other_component"),
         group="correlations",
     ),
     Variable(
         "classical_correlation_component",
-        "classical correlation by component n_i^a n_j^a",
+        "classical correlation by components n_i^a n_j^b",
         units="1",
-        dims=("site", "other_site", "component"),
+        dims=("site", "other_site", "component", "other_component"),
         group="correlations",
     ),
     Variable(
