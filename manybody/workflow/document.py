@@ -6,7 +6,6 @@ tables that a lattice of shape "table" names.
 
 import os
 import re
-import stat
 import tomllib
 from collections.abc import Mapping
 from dataclasses import dataclass
@@ -22,6 +21,7 @@ from manybody.workflow.entries import (
     read_parameters,
     read_terms,
 )
+from manybody.workflow.files import read_regular
 from manybody.workflow.found import Found
 from manybody.workflow.lattices import read_lattices
 from manybody.workflow.places import Lines
@@ -70,19 +70,9 @@ class Document:
 def read_document(path: str | os.PathLike) -> Document:
     """Read and check a workflow file. DocumentError holds every problem found."""
     source = os.fspath(path)
-    try:
-        handle = os.open(path, os.O_RDONLY | getattr(os, "O_NONBLOCK", 0) | getattr(os, "O_BINARY", 0))
-    except (OSError, ValueError) as error:
-        reason = getattr(error, "strerror", None) or "no such path"
-        raise DocumentError(
-            source, [Problem("the file", "", f"cannot be opened ({reason})", "give its path")]
-        ) from None
-    with os.fdopen(handle, "rb") as file:
-        if not stat.S_ISREG(os.fstat(file.fileno()).st_mode):
-            raise DocumentError(source, [Problem("the file", "", "is not a regular file", "give a workflow file")])
-        content = file.read(MAX_BYTES + 1)
-    if len(content) > MAX_BYTES:
-        raise DocumentError(source, [Problem("the file", "", f"is larger than {MAX_BYTES // 1024} KiB", "split it")])
+    content, fault = read_regular(path, MAX_BYTES)
+    if fault:
+        raise DocumentError(source, [Problem("the file", "", fault, "give the path of a workflow file")])
     try:
         decoded = content.decode("utf-8-sig")
     except UnicodeDecodeError as error:

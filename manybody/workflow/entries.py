@@ -101,15 +101,19 @@ def _term(path: tuple, found: Found) -> TermEntry | None:
 
 
 def check_names(parameters: dict, terms: list, found: Found) -> None:
-    used = set()
+    used, unknown = set(), False
     for path, entry in terms:
         for key, position, expression in _expressions(path, entry, found):
             used |= expression.names
             for name in sorted(expression.names - parameters.keys()):
+                unknown = True
                 listed = nearest(name, parameters) if parameters else "the file has no [parameters]"
                 found.add((*path, key, *position), f'uses "{name[:40]}", which is no parameter', listed)
-    if all(entry is not None for _, entry in terms):
+    # A term that is not understood, or a wrong name, may be where an unused parameter was meant to stand.
+    if not unknown and all(entry is not None for _, entry in terms):
         for name in parameters.keys() - used:
+            if schema.parameter_name_fault(name, RESERVED):
+                continue
             found.add(("parameters", name), "is used by no term", "remove it, or use it in a coupling")
 
 
@@ -141,7 +145,8 @@ def check_selections(lattices: tuple, terms: list, found: Found) -> None:
                 try:
                     count += _count(entry, lattice)
                 except ValueError as error:
-                    found.add(at, str(error), value=value)
+                    wrong, _, remedy = str(error).partition("; ")
+                    found.add(at, wrong, remedy or "correct the selection or the lattice", value)
                     faulty = True
                     break
         if entry.values == TABLE and not faulty:

@@ -64,7 +64,7 @@ def _sizes(block, bad: frozenset[str], path: tuple, folder: Path, found: Found) 
     if shape == "ring" and "periodic" in given and block.periodic not in (True, (True,)):
         found.add((*path, "periodic"), "contradicts the ring, which is the periodic chain", 'use shape = "chain"')
         return ()
-    periodic = block.periodic
+    periodic = block.periodic if "periodic" in allowed else False
     if size == "sites" and isinstance(periodic, tuple):
         if len(periodic) != 1:
             found.add((*path, "periodic"), f"has {len(periodic)} entries for 1 direction", "write true or false")

@@ -11,6 +11,7 @@ import hashlib
 import itertools
 import json
 import math
+from collections import Counter
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, field
 
@@ -71,8 +72,9 @@ class TermRecipe:
         above = [term for term in self.terms if term.rank > 2 * spin and term.count(self.lattice)]
         if rule != "wick" or not above:
             return ""
-        # A single term cannot cancel; of several, the sum has to be built to be sure.
-        if len(above) > 1 and not undefined_reason(self.build().energy, spin, rule):
+        # Terms of two kinds cannot cancel, nor can one alone; of several of a kind the sum has to be built to be sure.
+        alone = 1 in Counter(term.kind for term in above).values()
+        if not alone and not undefined_reason(self.build().energy, spin, rule):
             return ""
         kinds = " and ".join(dict.fromkeys(term.kind for term in above))
         return f"wick has no operator of rank {above[0].rank}, above 2S, for the term {kinds}"

@@ -73,11 +73,11 @@ def whole(low: int, high: int, what: str) -> Callable[[Any], int]:
     def read(value: Any) -> int:
         if isinstance(value, bool) or not isinstance(value, int | float):
             raise Fault(f"is {kind_of(value)}", f"{what} is a whole number from {low} to {high}")
-        if not math.isfinite(value) or value != int(value) or not low <= value <= high:
-            raise Fault(
-                "is out of range" if value == value else "is not finite",
-                f"{what} is a whole number from {low} to {high}",
-            )
+        remedy = f"{what} is a whole number from {low} to {high}"
+        if not low <= value <= high:
+            raise Fault("is out of range" if value == value else "is not finite", remedy)
+        if value != int(value):
+            raise Fault("is no whole number", remedy)
         return int(value)
 
     return read

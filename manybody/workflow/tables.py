@@ -7,12 +7,11 @@ offending cell, so that a wrong path cannot carry the content of another file in
 import csv
 import io
 import math
-import os
 import re
-import stat
 from pathlib import Path
 
 from manybody.model.lattice_table import PairTable, label_fault
+from manybody.workflow.files import read_regular
 from manybody.workflow.problems import Problem, nearest
 
 MAX_BYTES = 64 * 2**20
@@ -108,7 +107,7 @@ def _pairs(folder: Path, name: str, sites: int | None, found: _Found) -> dict | 
             exchange.append(tuple(numbers["exchange"] if k % 4 == 0 else 0.0 for k in range(9)))
         elif couplings:
             exchange.append(tuple(numbers.get(column, 0.0) for column in MATRIX))
-    if not lines:
+    if not lines and not found.problems:
         found.add("lists no pair", "write one pair of sites a line")
     if found.problems:
         return None
@@ -178,23 +177,9 @@ def _text(folder: Path, name: str, found: _Found) -> str | None:
     if not name.lower().endswith(".csv") or "\0" in name:
         found.add("is not the name of a .csv file", "tables are read from files that end in .csv")
         return None
-    try:
-        # Without blocking, so that a pipe of that name cannot hold the reader up before it is recognized.
-        handle = os.open(folder / name, os.O_RDONLY | getattr(os, "O_NONBLOCK", 0) | getattr(os, "O_BINARY", 0))
-    except OSError as error:
-        found.add(f"cannot be opened ({error.strerror})", "the path is taken relative to the workflow file")
-        return None
-    except ValueError:
-        found.add("is no path", "the path is taken relative to the workflow file")
-        return None
-    with os.fdopen(handle, "rb") as file:
-        status = os.fstat(file.fileno())
-        if not stat.S_ISREG(status.st_mode):
-            found.add("is not a regular file", "name a CSV file")
-            return None
-        content = file.read(MAX_BYTES + 1)
-    if len(content) > MAX_BYTES:
-        found.add(f"is larger than {MAX_BYTES // 2**20} MiB", "split the study, or drop columns that are not used")
+    content, fault = read_regular(folder / name, MAX_BYTES)
+    if fault:
+        found.add(fault, "name a CSV file, by its path relative to the workflow file")
         return None
     try:
         return content.decode("utf-8-sig")
