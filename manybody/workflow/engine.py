@@ -9,11 +9,12 @@ from __future__ import annotations
 
 import contextlib
 import heapq
+import json
 import signal
 import threading
 import time
 from collections import Counter, defaultdict, deque
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import replace
 
 from manybody.workflow.costs import CostModel, gigabytes
@@ -29,6 +30,8 @@ UNKNOWN_PARTS = 8  # parts per batch while nothing of their kind has been measur
 PREFETCH_SECONDS = 2.0  # a worker gets its next batch ahead of time while its present ones are shorter than this
 GRACE = 30.0  # seconds that parts in hand are given after the first Ctrl-C
 CACHE = 64e6  # bytes of results kept at hand for the parts that need them
+NOTE_EVERY = 10.0  # seconds between notes in the journal on what is running
+MEANWHILE = 900.0  # seconds between writings of the results so far
 LEFT_EVERY = 3.0  # seconds between estimates of the time left
 SKIP = 64  # parts looked at for one that fits a worker's free memory
 
@@ -48,24 +51,25 @@ def run_tasks(
     display: Display | None = None,
     attempts: int = ATTEMPTS,
     retry_failed: bool = False,
-    save_calibration: CostModel | None = None,
+    meanwhile: Callable[[], object] | None = None,
 ) -> Counts:
     """Run every task that the journal does not have yet; return how the study stands.
+
+    meanwhile: called now and then during long runs, when there are new results.
 
     Raises Interrupted after a first Ctrl-C (a second one raises KeyboardInterrupt at once), EngineError when no cluster
     can be had or it is lost, JournalError when the disk fails; whatever was finished before is in the journal.
     """
-    run = _Run(tasks, run_part, journal, executor, display or Display(), attempts, retry_failed)
-    if save_calibration is not None:
-        run.costs = save_calibration
-    return run.go()
+    return _Run(tasks, run_part, journal, executor, display or Display(), attempts, retry_failed, meanwhile).go()
 
 
 class _Run:
-    def __init__(self, tasks, run_part, journal, executor, display, attempts, retry_failed):
+    def __init__(self, tasks, run_part, journal, executor, display, attempts, retry_failed, meanwhile):
         self.tasks = {task.key: task for task in tasks}
         self.run_part, self.journal, self.executor, self.display = run_part, journal, executor, display
         self.attempts_allowed = attempts
+        self.meanwhile, self.meanwhile_at = meanwhile, time.monotonic() + MEANWHILE
+        self.noted_at, self.new = float("-inf"), 0
         self.costs = CostModel()
         self.tries: dict[str, int] = defaultdict(int)
         self.slots: dict[str, Slot] = {}
@@ -139,7 +143,8 @@ class _Run:
         started = False
         with self._signals():
             try:
-                slots = self.executor.start(len(missing))
+                widest = Counter(self.tasks[key].kind for key in missing).most_common(1)[0][1]
+                slots = self.executor.start(widest)
                 started = True
                 self._set_slots(slots)
                 self._refuse()
@@ -177,7 +182,7 @@ class _Run:
             events = self.executor.events(0.2)
             self._handle(events)
             self._show()
-            self.journal.touch()
+            self._housekeeping()
             if events or self.slots:
                 idle_since = time.monotonic()
             elif time.monotonic() - idle_since > 60:
@@ -383,6 +388,7 @@ class _Run:
                 task = self.tasks[key]
                 self.status[key] = outcome.status
                 self.tally[outcome.status] += 1
+                self.new += 1
                 self.display.finished(task, outcome)
                 if outcome.status == "finished":
                     self.costs.measured(task.kind, task.seconds, outcome.seconds, task.bytes, outcome.peak_bytes)
@@ -433,6 +439,29 @@ class _Run:
             if key not in running:
                 lengths.append(self.costs.seconds(self.tasks[key].kind, self.tasks[key].seconds))
         return max(sum(lengths) / threads, max(lengths, default=0.0))
+
+    def _housekeeping(self) -> None:
+        """Signs of life, what `status` should know, and now and then the results so far."""
+        self.journal.touch()
+        now = time.monotonic()
+        if now - self.noted_at > NOTE_EVERY:
+            self.noted_at = now
+            running = [
+                [
+                    task.label,
+                    task.kind,
+                    self.slots[batch.place].host,
+                    round(now - batch.started),
+                    self.display.reports.get(task.key, {}),
+                ]
+                for batch in self.batches.values()
+                for task in batch.tasks[:1]
+            ]
+            self.journal.set_notes({"running": json.dumps(running[:100])})
+        if self.meanwhile is not None and self.new and now > self.meanwhile_at:
+            self.new = 0
+            self.meanwhile()
+            self.meanwhile_at = time.monotonic() + max(MEANWHILE, 20 * (time.monotonic() - now))
 
     @contextlib.contextmanager
     def _signals(self):

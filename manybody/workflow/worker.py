@@ -41,6 +41,10 @@ class Checkpoint:
     def save(self, state: bytes) -> None:
         self._last = time.monotonic()
         self._channel.state(self._key, bytes(state))
+        self.stop_if_asked()
+
+    def stop_if_asked(self) -> None:
+        """Leave the part, unfinished, if the run is stopping."""
         if self._channel.stopping():
             raise StopPart
 

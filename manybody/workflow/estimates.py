@@ -1,0 +1,104 @@
+"""Time and memory a part is expected to take, before anything of the study has been measured.
+
+The scaling with size, spin and bond dimension is what matters here; the speed of the machine is calibrated away by
+costs.CostModel. Where exact diagonalization is in question, the quantum branch's own count of states is asked.
+"""
+
+from __future__ import annotations
+
+import functools
+import math
+
+from manybody.workflow.document import Settings
+from manybody.workflow.points import Cluster, Point, TermRecipe
+
+SMALL = 3000  # dimension of the whole space below which every solve is quick and small
+HUGE = 1e11  # and above which no sector can be diagonalized
+LIBRARIES = 5e7  # bytes a first solve may add by loading compiled code
+
+
+def classical(cluster: Cluster, settings: Settings) -> tuple[float, float]:
+    """(seconds, bytes) of minimum and proof: batches of starts over the couplings, and one 3N x 3N eigenproblem."""
+    n, couplings = cluster.sites, cluster.couplings
+    seconds = 5e-3 + settings.starts * 300 * (2e-7 * n + 5e-8 * couplings) + 3e-9 * min(3.0 * n, 3000.0) ** 3
+    return seconds, LIBRARIES + settings.starts * n * 3 * 8 * 40 + 8 * 3 * min(3.0 * n, 6000.0) ** 2
+
+
+def harmonic(cluster: Cluster, settings: Settings) -> tuple[float, float]:
+    """(seconds, bytes) of the symplectic eigenvalues at up to sixteen minima."""
+    n = cluster.sites
+    return 2e-3 + 16 * 1e-8 * (2.0 * n) ** 3, LIBRARIES + 8 * 8 * (2.0 * n) ** 2
+
+
+def bounds(point: Point, settings: Settings) -> tuple[float, float]:
+    """(seconds, bytes) of symbols, product state and small clusters."""
+    n, levels = point.cluster.sites, 2 * point.spin + 1
+    seconds, size = classical(point.cluster, settings)
+    seconds = 0.02 + 0.5 * seconds + 30 * n * levels**2 * 1e-6 + 1e-9 * min(levels, 300.0) ** 3
+    return seconds, size + 64 * n * levels**2
+
+
+def quantum(point: Point, settings: Settings) -> tuple[str, float, float]:
+    """("exact" or "sweeps", seconds, bytes) of the ground state."""
+    log10 = point.log10_dimension
+    if log10 <= math.log10(SMALL):
+        dimension = 10**log10
+        return "exact", 3e-3 + 2e-10 * dimension**2.5, LIBRARIES + 16 * 3 * min(dimension, 300.0) ** 2 + 1e4 * dimension
+    if log10 <= math.log10(HUGE):
+        cost = _exact(_AsKind(point), settings.memory, bool(settings.observables))
+        if cost is not None:
+            return "exact", cost[0], LIBRARIES + cost[1]
+    return "sweeps", *_sweeps(point, settings)
+
+
+def _sweeps(point: Point, settings: Settings) -> tuple[float, float]:
+    """Matrix-product sweeps at the largest bond dimension allowed, w operator channels, about 20 sweeps."""
+    n, levels = point.cluster.sites, 2 * point.spin + 1
+    bond = min(float(settings.max_bond), 10 ** min(0.5 * point.log10_dimension, 15.0))
+    width = 2 + 3 * max(1.0, point.cluster.couplings / n)
+    seconds = 0.04 * n + 1e-10 * n * bond**3 * levels * width
+    size = 8 * n * bond**2 * (levels + width) / 2 + 16 * 8 * bond**2 * levels * width / 3
+    return seconds, LIBRARIES + min(size, float(settings.memory))
+
+
+class _AsKind:
+    """A point that compares equal to those of the same structure: the same lattice, spin and rule, and couplings that
+    are zero, or equal to each other, at the same places. Counting states costs milliseconds; parameters do not change it.
+    """
+
+    def __init__(self, point: Point):
+        self.point = point
+        recipe = point.cluster.recipe
+        if isinstance(recipe, TermRecipe):
+            lattice = recipe.lattice
+            terms = tuple((term.kind, term.where, _pattern(term.values), _pattern(term.axis)) for term in recipe.terms)
+            where = (lattice.shape, lattice.extent, lattice.periodic, id(lattice.table), terms)
+        else:
+            where = (recipe.key,)
+        self.key = (*where, point.spin, point.rule)
+
+    def __eq__(self, other):
+        return self.key == other.key
+
+    def __hash__(self):
+        return hash(self.key)
+
+
+def _pattern(values) -> tuple:
+    if isinstance(values, str):
+        return (values,)
+    return tuple(0 if value == 0 else 1 + values.index(value) for value in values)
+
+
+@functools.lru_cache(maxsize=4096)
+def _exact(kind: _AsKind, memory: int, observables: bool) -> tuple[float, float] | None:
+    """(seconds, bytes) of exact diagonalization, None where it is out of reach."""
+    from manybody.model.quantization import quantize
+    from manybody.quantum.ground_state import estimate
+    from manybody.quantum.result import QuantumSettings
+
+    point = kind.point
+    cost = estimate(quantize(point.cluster.build().energy, point.spin, point.rule), QuantumSettings(memory=memory))
+    if not math.isfinite(cost.seconds):
+        return None
+    return cost.seconds, float(cost.bytes)
