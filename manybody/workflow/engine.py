@@ -446,18 +446,12 @@ class _Run:
         now = time.monotonic()
         if now - self.noted_at > NOTE_EVERY:
             self.noted_at = now
-            running = [
-                [
-                    task.label,
-                    task.kind,
-                    self.slots[batch.place].host,
-                    round(now - batch.started),
-                    self.display.reports.get(task.key, {}),
-                ]
-                for batch in self.batches.values()
-                for task in batch.tasks[:1]
-            ]
-            self.journal.set_notes({"running": json.dumps(running[:100])})
+            running = []
+            for batch in list(self.batches.values())[:100]:
+                task, host = batch.tasks[0], self.slots[batch.place].host
+                state = self.display.reports.get(task.key, {})
+                running.append([task.label, task.kind, host, round(now - batch.started), state])
+            self.journal.set_notes({"running": json.dumps(running)})
         if self.meanwhile is not None and self.new and now > self.meanwhile_at:
             self.new = 0
             self.meanwhile()

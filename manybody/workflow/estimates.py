@@ -63,7 +63,7 @@ def _sweeps(point: Point, settings: Settings) -> tuple[float, float]:
 
 class _AsKind:
     """A point that compares equal to those of the same structure: the same lattice, spin and rule, and couplings that
-    are zero, or equal to each other, at the same places. Counting states costs milliseconds; parameters do not change it.
+    are zero, or equal to each other, at the same places. Counting states costs milliseconds and gives the same for all.
     """
 
     def __init__(self, point: Point):

@@ -63,6 +63,16 @@ def read_holder(path: Path) -> dict | None:
         return None
 
 
+def is_held(path: Path) -> bool:
+    """Whether the run that the lock file names seems alive, seen from here; locks nothing."""
+    holder = read_holder(path)
+    if holder is None:
+        return False
+    if holder.get("host") == socket.gethostname():
+        return _alive(int(holder["pid"]), float(holder.get("born", 0.0)))
+    return time.time() - path.stat().st_mtime < SILENCE
+
+
 class FolderLock:
     """Holds the folder from construction to `release`. Raises FolderInUse when another run has it.
 

@@ -219,8 +219,8 @@ def _write_results(study: Study, tasks: list[Task], journal: Journal, folder: Pa
         tree = write_results(path, records, attrs)
     except OSError as error:
         raise JournalError(
-            f"{path} cannot be written: {error.strerror or error}. Every finished part is safe in the journal; run the same "
-            "command again to write the results."
+            f"{path} cannot be written: {error.strerror or error}. Every finished part is safe in the journal; run the "
+            "same command again to write the results."
         ) from error
     journal.set_notes({"results": f"{digest.hexdigest()} {_stamp(path)}"})
     return tree

@@ -135,7 +135,7 @@ def test_unreachable_schedulers_are_told(tmp_path, monkeypatch):
     monkeypatch.setattr(cluster, "PATIENCE", 2.0)
     with pytest.raises(EngineError, match=r"no scheduler file .*nothing\.json"):
         run([fake_task(1)], ExistingCluster(scheduler_file=tmp_path / "nothing.json"))
-    with pytest.raises(EngineError, match="no scheduler answers at tcp://127.0.0.1:1"):
+    with pytest.raises(EngineError, match=r"no scheduler answers at tcp://127\.0\.0\.1:1"):
         run([fake_task(1)], ExistingCluster("tcp://127.0.0.1:1"))
 
 
