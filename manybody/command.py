@@ -4,6 +4,7 @@ Exit status: 0 all points finished, 1 stopped by the outside (disk, cluster), 2 
 3 finished with failed or refused points, 130 interrupted.
 """
 
+import contextlib
 import os
 import sys
 from pathlib import Path
@@ -20,6 +21,7 @@ app = typer.Typer(
 )
 
 File = Annotated[Path, typer.Argument(metavar="FILE", help="The workflow file (TOML).")]
+Workers = Annotated[int | None, typer.Option(help="Local processes; 0 runs in this one. Default: the cores.")]
 Folder = Annotated[Path, typer.Argument(metavar="DIR", help="The folder of a run.")]
 
 
@@ -65,7 +67,10 @@ def run(
     for note in study.notes:
         print(note, file=sys.stderr)
     remote = scheduler or scheduler_file
-    executor = make_executor(0 if remote else _workers(workers), scheduler, scheduler_file, batch)
+    try:
+        executor = make_executor(0 if remote else _workers(workers), scheduler, scheduler_file, batch)
+    except ValueError as error:
+        raise BadInput(str(error)) from None
     try:
         result = run_study(study, out, executor, retry_failed, choose_display())
     except (Interrupted, KeyboardInterrupt):
@@ -98,8 +103,9 @@ def draw(
     """Draw the figures of a dataset."""
     from manybody.results.figures import draw as draw_figures
 
-    for path in draw_figures(folder, out or folder / "figures", form):
-        print(path)
+    with _about(folder):
+        for path in draw_figures(folder, out or folder / "figures", form):
+            print(path)
 
 
 @app.command()
@@ -107,11 +113,24 @@ def report(folder: Folder) -> None:
     """Write DIR/report.html, one self-contained page."""
     from manybody.results.report import write_report
 
-    print(write_report(folder))
+    with _about(folder):
+        print(write_report(folder))
 
 
 class BadInput(ValueError):
     """A wrong combination of options."""
+
+
+@contextlib.contextmanager
+def _about(folder: Path):
+    """What is wrong with a results file is the user's to know; anything else is a fault of ours."""
+    from manybody.results.dataset import open_results
+
+    try:
+        open_results(folder)
+    except ValueError as error:
+        raise BadInput(str(error)) from None
+    yield
 
 
 def _workers(workers: int | None) -> int:
@@ -157,7 +176,7 @@ def _exit_code(error: Exception) -> int | None:
         return 2
     if isinstance(error, (JournalError, EngineError)):
         return 1
-    return 2 if type(error) is ValueError and error.args else None
+    return None
 
 
 if __name__ == "__main__":

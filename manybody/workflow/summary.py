@@ -41,11 +41,10 @@ def plan_text(plan) -> str:
     if plan.reused:
         lines.append(f"{plan.reused} of {len(plan.tasks)} parts are finished already")
     if plan.counts:
-        rows = [
-            [kind, str(plan.counts[kind]), duration(plan.seconds[kind]), duration(plan.longest[kind])]
-            + [gigabytes(plan.largest[kind])]
-            for kind in plan.counts
-        ]
+        rows = []
+        for kind, number in plan.counts.items():
+            times = (duration(plan.seconds[kind]), duration(plan.longest[kind]))
+            rows.append([kind, str(number), *times, gigabytes(plan.largest[kind])])
         lines += ["", table(["part", "number", "time", "longest", "memory"], rows), ""]
         where = f"{plan.workers} workers" if plan.workers > 1 else "one worker"
         basis = "from the times measured so far" if plan.calibrated else "uncalibrated: good to a factor of a few"
@@ -112,7 +111,7 @@ def gap_table(tree, rows: int = ROWS) -> str:
 
     names = ["classical_energy", "quantum_energy", "quantum_energy_error", "gap_per_site", "relative_gap"]
     frame = points_table(tree, [*names, "status", "classical_certified", "ladder"])
-    dims = [name for name in tree["status"].dims]
+    dims = list(tree["status"].dims)
     shown = [name for name in dims if name in ("sites", "spin", "rule") or tree.sizes[name] > 1]
     unit = tree["gap"].attrs.get("units", "1")
     suffix = "" if unit == "1" else f" [{unit}]"
