@@ -1,0 +1,277 @@
+"""Minima of an energy function on the product of spheres: many starts, descent, polishing, distinct minima.
+
+Quadratic functions run through compiled alignment sweeps and Newton steps, one start after the other; functions of higher degree through
+batched quasi-Newton and Newton steps. Starts come in rounds, so that a proof of global minimality can end the search.
+"""
+
+import math
+from collections.abc import Callable, Iterator
+from dataclasses import dataclass
+
+import numpy as np
+
+from manybody.classical import polish, starts
+from manybody.classical.distinct import Comparison, coupled_sites
+from manybody.classical.site_form import SiteForm, site_form
+from manybody.classical.sphere_product import normalized, random_points
+from manybody.model.energy import EnergyFunction
+
+
+@dataclass(frozen=True)
+class MinimizeSettings:
+    """starts: how many starting configurations; seed: of the random ones, equal seeds give equal results.
+
+    tolerance: wanted largest tangential gradient at a site, relative to the strongest sum of couplings at a site.
+    max_site_starts: at most this many sites x starts are spent (but at least two starts): on 10^6 sites fewer starts than asked for are
+    made, and `starts_used` says how many.
+    """
+
+    starts: int = 64
+    seed: int = 1
+    tolerance: float = 1e-10
+    max_site_starts: int = 6_000_000
+    sweeps: int = 400
+    newton_steps: int = 200
+
+    def __post_init__(self):
+        if int(self.starts) != self.starts or self.starts < 1:
+            raise ValueError(f"starts must be a positive integer, got {self.starts!r}")
+        if not 0 < self.tolerance < 1:
+            raise ValueError(f"tolerance must lie between 0 and 1, got {self.tolerance!r}")
+
+
+@dataclass(frozen=True)
+class Minimum:
+    """A local minimum, and how many starts ended in it (up to the rotations that leave f unchanged)."""
+
+    energy: float
+    configuration: np.ndarray  # (N, 3)
+    count: int
+
+
+@dataclass(frozen=True)
+class ClassicalResult:
+    """energy, configuration (N, 3): the lowest minimum found. minima: all distinct ones, lowest first.
+
+    gradient_norm: largest tangential gradient at a site over the strongest sum of couplings at a site, at `configuration`.
+    converged: gradient_norm reached the tolerance. proven: a proof of global minimality ended the search.
+    """
+
+    energy: float
+    configuration: np.ndarray
+    minima: tuple[Minimum, ...]
+    gradient_norm: float
+    converged: bool
+    starts_used: int
+    proven: bool
+
+
+def minimize(
+    f: EnergyFunction,
+    settings: MinimizeSettings | None = None,
+    extra_starts: np.ndarray | None = None,
+    proof: Callable[[np.ndarray], bool] | None = None,
+) -> ClassicalResult:
+    """Search the global minimum of f.
+
+    extra_starts: (r, N, 3) configurations tried first, beside settings.starts. proof: called with the lowest configuration (N, 3) after
+    a round of starts that improved it; True ends the search. f that is constant on the sphere returns at once.
+    Couplings of any size are scaled internally; the results are in the units of f.
+    """
+    settings = settings or MinimizeSettings()
+    if not coupled_sites(f).any():
+        up = np.tile([0.0, 0.0, 1.0], (f.sites, 1))
+        energy = float(f.value(up))
+        return ClassicalResult(energy, up, (Minimum(energy, up, 1),), 0.0, True, 0, True)
+    scaled, exponent = rescaled(f)
+    problem = QuadraticProblem(scaled, settings) if scaled.is_quadratic else GeneralProblem(scaled, settings)
+    pool = _Pool(scaled, problem.strength)
+    best, used, proven = math.inf, 0, False
+    for batch in _rounds(problem, settings, extra_starts):
+        pool.add(*problem.descend(batch))
+        used += len(batch)
+        if pool.energy >= best - 1e-12 * problem.strength:
+            continue
+        best = pool.energy
+        if problem.is_lowest(best) or (proof is not None and proof(pool.configuration)):
+            proven = True
+            break
+    minima = tuple(
+        Minimum(math.ldexp(energy, exponent) + f.constant, configuration, count)
+        for energy, configuration, count in pool.sorted()
+    )
+    residual = pool.gradient / problem.strength
+    return ClassicalResult(
+        energy=minima[0].energy,
+        configuration=minima[0].configuration,
+        minima=minima,
+        gradient_norm=residual,
+        converged=residual <= settings.tolerance,
+        starts_used=used,
+        proven=proven,
+    )
+
+
+def rescaled(f: EnergyFunction) -> tuple[EnergyFunction, int]:
+    """(g, exponent) with f = f.constant + 2^exponent g and the largest coefficient of g between 1/2 and 1."""
+    exponent = math.frexp(f.largest_coefficient)[1]
+    g = f - f.constant
+    # in two steps: 2^-exponent itself may overflow
+    half = -exponent // 2
+    return g * math.ldexp(1.0, half) * math.ldexp(1.0, -exponent - half), exponent
+
+
+class QuadraticProblem:
+    """Descent for a function of degree two."""
+
+    def __init__(self, f: EnergyFunction, settings: MinimizeSettings):
+        self.form: SiteForm = site_form(*f.quadratic_form(), tolerance=1e-15)
+        self.settings = settings
+        self.strength = self.form.strength()
+        self.floor = starts.unfrustrated_bound(self.form)
+        form = self.form
+        self.field = form.field if len(form.field) else np.zeros((form.sites, 3))
+        shifted = form.diagonal if len(form.diagonal) else np.zeros((0 if form.isotropic else form.sites, 3, 3))
+        if len(form.diagonal):
+            shifted = shifted - np.linalg.eigvalsh(shifted)[:, -1, None, None] * np.eye(3)
+        self.shifted = shifted
+
+    def is_lowest(self, energy: float) -> bool:
+        """Whether the energy (constant of the form included) reaches the bound of an unfrustrated function."""
+        bound = self.floor + self.form.constant
+        return energy <= bound + 1e-13 * abs(self.floor)
+
+    def descend(self, configurations: np.ndarray) -> polish.Polished:
+        from manybody.classical import vector_sweeps as compiled
+
+        form, settings, strength = self.form, self.settings, self.strength
+        x = np.array(configurations, dtype=float)
+        energies, gradients = np.empty(len(x)), np.empty(len(x))
+        inner = int(np.clip(4 * np.sqrt(form.sites), 500, 3000))
+        arrays = (form.indptr, form.neighbours, form.weights, form.blocks)
+        for k in range(len(x)):
+            # plain alignment first: it leaves high random states and saddle points fastest; over-relaxation for the long waves
+            compiled.descend(x[k], *arrays, self.shifted, self.field, 1.0, 10, 1e-2 * strength)
+            compiled.descend(x[k], *arrays, self.shifted, self.field, 1.7, settings.sweeps, 5e-3 * strength)
+            energy, gradients[k], _ = compiled.newton(
+                x[k], *arrays, form.diagonal, self.field,
+                settings.tolerance * strength, strength, settings.newton_steps, inner, 10 * inner,
+            )  # fmt: skip
+            energies[k] = energy + form.constant
+        return polish.Polished(x, energies, gradients)
+
+
+class GeneralProblem:
+    """Descent for a function of any degree."""
+
+    BATCH = 2_000_000  # sites x starts held at once
+
+    def __init__(self, f: EnergyFunction, settings: MinimizeSettings):
+        self.f = f
+        self.settings = settings
+        # |d C_kq / d n| <= k for the semi-normalized harmonics
+        strength = np.zeros(f.sites)
+        for group in f.groups:
+            norm = np.sqrt(np.sum(group.coefficients.reshape(group.terms, -1) ** 2, axis=1))
+            for slot, rank in enumerate(group.ranks):
+                strength += np.bincount(group.sites[:, slot], rank * norm, f.sites)
+        self.strength = float(strength.max())
+        quadratic = EnergyFunction(f.sites, 0.0, [g for g in f.groups if any(g.ranks) and sum(g.ranks) <= 2])
+        self.form = site_form(*quadratic.quadratic_form(), tolerance=1e-15)
+
+    def is_lowest(self, energy: float) -> bool:
+        return False
+
+    def descend(self, configurations: np.ndarray) -> polish.Polished:
+        at_once = max(1, self.BATCH // self.f.sites)
+        parts = [self._descend(configurations[k : k + at_once]) for k in range(0, len(configurations), at_once)]
+        return polish.Polished(*(np.concatenate(arrays) for arrays in zip(*parts, strict=True)))
+
+    def _descend(self, configurations: np.ndarray) -> polish.Polished:
+        f, settings, strength = self.f, self.settings, self.strength
+        rough = polish.quasi_newton(f.value_and_gradient, configurations, 1e-5 * strength, 2000, strength)
+        return polish.truncated_newton(
+            f.value_and_gradient, f.hessian_product, rough.configurations, settings.tolerance * strength, strength,
+            settings.newton_steps,
+        )  # fmt: skip
+
+
+def _rounds(problem, settings: MinimizeSettings, extra: np.ndarray | None) -> Iterator[np.ndarray]:
+    """Batches of starts: those handed in, one placed along the bonds, then growing mixtures of eigenvector and random starts."""
+    form = problem.form
+    generator = np.random.default_rng(settings.seed)
+    left = min(settings.starts, max(2, settings.max_site_starts // form.sites))
+    if extra is not None and len(extra):
+        extra = np.asarray(extra, dtype=float)
+        if extra.ndim != 3 or extra.shape[1:] != (form.sites, 3):
+            raise ValueError(f"extra_starts must have shape (r, {form.sites}, 3), got {extra.shape}")
+        yield normalized(extra)
+    yield starts.placed_start(form, generator)[None]
+    left -= 1
+    # half eigenvector starts while they are few, then mostly random ones: these reach minima that the matrix alone does not know
+    size, of_modes = 6, 3
+    while left > 0:
+        size = min(size, left)
+        modes = min(of_modes, size)
+        parts = [starts.lowest_mode_starts(form, generator, modes)] if modes else []
+        if size > modes:
+            parts.append(random_points(generator, form.sites, (size - modes,)))
+        yield np.concatenate(parts)
+        left -= size
+        size, of_modes = 2 * size, max(of_modes - 1, 1)
+
+
+class _Pool:
+    """The distinct minima met so far."""
+
+    def __init__(self, f: EnergyFunction, strength: float):
+        self.comparison = Comparison(f)
+        self.loose = np.flatnonzero(~coupled_sites(f))
+        self.strength = strength
+        self.energies: list[float] = []
+        self.configurations: list[np.ndarray] = []
+        self.counts: list[int] = []
+        self.gradients: list[float] = []
+
+    def add(self, configurations: np.ndarray, energies: np.ndarray, gradients: np.ndarray) -> None:
+        for n, energy, gradient in zip(configurations, energies, gradients, strict=True):
+            n = n.copy()
+            n[self.loose] = [0.0, 0.0, 1.0]
+            tied = [k for k, e in enumerate(self.energies) if abs(e - energy) <= 1e-8 * (self.strength + abs(e))]
+            if tied:
+                distance = self.comparison.distance(n, np.array([self.configurations[k] for k in tied]))
+                nearest = int(np.argmin(distance))
+                if distance[nearest] < 1e-2:
+                    k = tied[nearest]
+                    self.counts[k] += 1
+                    if (gradient, energy) < (self.gradients[k], self.energies[k]):
+                        self.energies[k], self.configurations[k], self.gradients[k] = float(energy), n, float(gradient)
+                    continue
+            self.energies.append(float(energy))
+            self.configurations.append(n)
+            self.counts.append(1)
+            self.gradients.append(float(gradient))
+
+    @property
+    def best(self) -> int:
+        """The lowest; among those equal to rounding the one with the smallest gradient."""
+        lowest = min(self.energies)
+        tied = [k for k, e in enumerate(self.energies) if e <= lowest + 1e-12 * (self.strength + abs(lowest))]
+        return min(tied, key=lambda k: self.gradients[k])
+
+    @property
+    def energy(self) -> float:
+        return self.energies[self.best]
+
+    @property
+    def configuration(self) -> np.ndarray:
+        return self.configurations[self.best]
+
+    @property
+    def gradient(self) -> float:
+        return self.gradients[self.best]
+
+    def sorted(self) -> list[tuple[float, np.ndarray, int]]:
+        best = self.best
+        order = sorted(range(len(self.energies)), key=lambda k: (k != best, self.energies[k]))
+        return [(self.energies[k], self.configurations[k], self.counts[k]) for k in order]
