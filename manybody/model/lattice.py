@@ -188,11 +188,11 @@ def chain(sites: int, periodic: bool = False) -> Lattice:
 def ring(sites: int) -> Lattice:
     """The periodic chain: nearest pairs (i, i + 1 modulo N), at least 3 sites.
 
-      1---0
+      2---1
      /     \\          sites on a circle, counterclockwise from (r, 0, 0), neighbours at distance 1
-    2       5
+    3       0
      \\     /          nearest pairs in order: (0, 1) (1, 2) ... (N-1, 0)
-      3---4
+      4---5
     """
     return Lattice("ring", (_count(sites, 3, "a ring"),), (True,))
 
