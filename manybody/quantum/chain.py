@@ -160,6 +160,16 @@ class Chain:
             stacked, blocks.gather_right(tensor, *left.pair, *right.pair, local), steps, right.dims
         )
 
+    def prune(self, bond: int, charges: np.ndarray) -> None:
+        """Drop the states of a bond, ahead of the centre, whose charge is not among `charges`: nothing on the left reaches them. The right
+        environment of the bond is void afterwards."""
+        before, after = self.bonds[bond], self.bonds[bond + 1]
+        stay = np.isin(before.charges, charges)
+        widths = blocks.by_left(*before.pair, *after.pair, self.local[bond])[2]
+        self.put(bond, self.tensor(bond)[np.repeat(stay, before.dims * widths)])
+        self.bonds[bond] = Bond(before.charges[stay], before.dims[stay])
+        self.right[bond] = None
+
     def shift(self, site: int) -> None:
         """Orthonormalize a site without any cut and move the centre to the next."""
         left, right = self.bonds[site], self.bonds[site + 1]

@@ -9,9 +9,10 @@ import math
 
 import numpy as np
 
-from manybody.quantum import blocks, contraction
+from manybody.quantum import blocks
 from manybody.quantum.chain import Bond, Chain
 from manybody.quantum.compiled import compiled
+from manybody.quantum.variance import residual_halves
 
 NEGLIGIBLE = 1e-14
 """Share of the residual's squared norm, relative to the operator's scale, below which a direction is rounding."""
@@ -20,46 +21,31 @@ NEGLIGIBLE = 1e-14
 def expand(chain: Chain, site: int, fraction: float, limit: int, rng: np.random.Generator) -> None:
     """Add about `fraction` of its dimension (at least 4 states) to the bond after the centre, at most up to `limit`. The state itself is
     unchanged: the centre gets zeros."""
-    left, bond, after = chain.bonds[site : site + 3]
-    local = chain.local[site : site + 2]
-    turned_bond, turned_after = bond.mirrored(chain.total), after.mirrored(chain.total)
-    reach = blocks.reachable(left.charges, after.charges, *local)
-    place = np.searchsorted(reach, bond.charges)
-    dims = np.zeros(reach.size, np.int64)
-    dims[place] = bond.dims
-    bra, turned_bra = Bond(reach, dims), Bond(chain.total - reach, dims)
-    here, there = chain.operators[site], chain.other_operators[chain.length - 2 - site]
-    steps = chain.plan(here, left, bond, local[0], here.end, here.start, bra)
-    turned_steps = chain.plan(there, turned_after, turned_bond, local[1], there.end, there.start, turned_bra)
-    tensor = chain.turned_tensor(site + 1)
-    near = contraction.half(chain.tensor(site), chain.left_by_ket(site), steps)
-    by_ket = blocks.to_ket(chain.right[site + 2], *turned_after.pair, there.delta_left, there.start)
-    far = contraction.half(tensor, by_ket, turned_steps)
-    own = blocks.gather_right(tensor, *turned_after.pair, *turned_bra.pair, local[1])
-
-    rows, turned_rows = steps[5][:, 0], turned_steps[5][:, 0]
-    wanted = max(4, math.ceil(fraction * bond.dimension))
-    wanted = min(wanted, limit - bond.dimension)
+    wanted = min(max(4, math.ceil(fraction * chain.bonds[site + 1].dimension)), limit - chain.bonds[site + 1].dimension)
     if wanted <= 0:
         return
-    probes = np.minimum(np.ceil(1.2 * fraction * dims).astype(np.int64) + 2, np.minimum(rows, turned_rows - dims))
-    probes = np.maximum(probes, 0)
+    near, far, own, groups, turned_groups, dims, reach = residual_halves(chain, site)
+    left, after, local = chain.bonds[site], chain.bonds[site + 2], chain.local[site : site + 2]
+    rows, turned_rows = groups[:, 0], turned_groups[:, 0]
+    probes = np.ceil(1.2 * fraction * dims).astype(np.int64) + 2
+    probes = np.maximum(np.minimum(probes, np.minimum(rows, turned_rows - dims)), 0)
     noise = rng.standard_normal(int((probes * rows).sum())).astype(chain.dtype)
-    found, added = directions(near, far, own, steps[5], turned_steps[5], dims, probes, noise, wanted, NEGLIGIBLE)
-    if not added.any():
-        return
-    larger = dims + added
-    stay = larger > 0
-    new = Bond(reach[stay], larger[stay])
-    turned_new = new.mirrored(chain.total)
-    grouped = append(own, found, turned_rows, dims, added)
-    centre = blocks.gather_right(chain.tensor(site), *left.pair, *bra.pair, local[0])
-    centre = append(centre, np.zeros(int((rows * added).sum()), chain.dtype), rows, dims, added)
-    chain.bonds[site + 1] = new
-    chain.put(site, blocks.scatter_left(centre, *left.pair, *new.pair, local[0]))
-    chain.tensors[site + 1] = blocks.scatter_left(grouped, *turned_after.pair, *turned_new.pair, local[1])
-    chain.turned[site + 1] = True
-    chain.retreat(site + 1)
+    found, added = directions(near, far, own, groups, turned_groups, dims, probes, noise, wanted, NEGLIGIBLE)
+    if added.any():
+        larger = dims + added
+        stay = larger > 0
+        new = Bond(reach[stay], larger[stay])
+        grouped = append(own, found, turned_rows, dims, added)
+        centre = blocks.gather_right(chain.tensor(site), *left.pair, reach, dims, local[0])
+        centre = append(centre, np.zeros(int((rows * added).sum()), chain.dtype), rows, dims, added)
+        chain.bonds[site + 1] = new
+        chain.put(site, blocks.scatter_left(centre, *left.pair, *new.pair, local[0]))
+        pairs = (*after.mirrored(chain.total).pair, *new.mirrored(chain.total).pair)
+        chain.tensors[site + 1] = blocks.scatter_left(grouped, *pairs, local[1])
+        chain.turned[site + 1] = True
+        chain.right[site + 1] = None
+    if chain.right[site + 1] is None:
+        chain.retreat(site + 1)
 
 
 @compiled
