@@ -28,9 +28,7 @@ Folder = Annotated[Path, typer.Argument(metavar="DIR", help="The folder of a run
 @app.command()
 def plan(
     file: File,
-    workers: Annotated[
-        int | None, typer.Option(help="Local processes; 0 runs in this one. Default: the cores.")
-    ] = None,
+    workers: Workers = None,
     out: Annotated[Path | None, typer.Option(help="A folder whose finished parts count and calibrate times.")] = None,
 ) -> None:
     """Show points, expected time and memory, and what would be refused. Runs nothing."""
@@ -44,9 +42,7 @@ def plan(
 def run(
     file: File,
     out: Annotated[Path, typer.Option(help="Folder for results; what it has already is not computed again.")],
-    workers: Annotated[
-        int | None, typer.Option(help="Local processes; 0 runs in this one. Default: the cores.")
-    ] = None,
+    workers: Workers = None,
     scheduler: Annotated[str | None, typer.Option(help="Address of a dask scheduler, or its scheduler file.")] = None,
     scheduler_file: Annotated[Path | None, typer.Option(help="Scheduler file of a dask cluster.")] = None,
     batch: Annotated[

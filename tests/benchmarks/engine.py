@@ -1,4 +1,4 @@
-"""Figures of the engine, as ratios and costs per point: python tests/benchmarks/engine.py [points=10000].
+"""Figures of the engine, as ratios and costs per point: PYTHONPATH=.:tests python tests/benchmarks/engine.py [points=10000].
 
 1. overhead: a study of two-spin points whose parts do nothing, per point, on 1 and 2 local processes and in-process;
 2. memory of the coordinating process over that run;
@@ -10,9 +10,6 @@ import resource
 import sys
 import tempfile
 import time
-from pathlib import Path
-
-sys.path[:0] = [str(Path(__file__).parents[1]), str(Path(__file__).parents[2])]
 
 from fake_parts import fake_task, run_fake
 
@@ -73,8 +70,8 @@ def main(points=10_000):
             took = timed(tasks, executor, folder, watch)
             sizes = list(watch.sizes.values())
             print(
-                f"{name}: {took / points * 1e3:.2f} ms a point ({points} points of 4 parts in {took:.1f} s); coordinator "
-                f"{sizes[0]:.0f} MB after 1000 parts, {sizes[-1]:.0f} MB at the end, "
+                f"{name}: {took / points * 1e3:.2f} ms a point ({points} points of 4 parts in {took:.1f} s); "
+                f"coordinator {sizes[0]:.0f} MB after 1000 parts, {sizes[-1]:.0f} MB at the end, "
                 f"peak {resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1e3:.0f} MB",
                 flush=True,
             )

@@ -1,16 +1,13 @@
-"""Kills at random moments, in full: python tests/benchmarks/faults.py [kills=500] [seed=1].
+"""Kills at random moments, in full: PYTHONPATH=.:tests python tests/benchmarks/faults.py [kills=500] [seed=1].
 
-Every round starts a run of a study of short parts in a process of its own and kills it, or one of its workers, at a random
-moment, and resumes. Checked: nothing that the journal had as finished is computed again, no entry is torn, and the
+Every round starts a run of a study of short parts in a process of its own and kills it, or one of its workers, at a
+random moment, and resumes. Checked: nothing that the journal had as finished is computed again, no entry is torn, and the
 results equal those of an undisturbed run.
 """
 
 import sys
 import tempfile
 import time
-from pathlib import Path
-
-sys.path[:0] = [str(Path(__file__).parents[1]), str(Path(__file__).parents[2])]
 
 from fake_parts import run_fake
 from killed_run import kill_and_resume, study, torn
