@@ -1,4 +1,6 @@
-"""Figures of the engine, as ratios and costs per point: PYTHONPATH=.:tests python tests/benchmarks/engine.py [points=10000].
+"""Figures of the engine, as ratios and costs per point.
+
+PYTHONPATH=.:tests python tests/benchmarks/engine.py [points=10000]
 
 1. overhead: a study of two-spin points whose parts do nothing, per point, on 1 and 2 local processes and in-process;
 2. memory of the coordinating process over that run;

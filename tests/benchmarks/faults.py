@@ -1,8 +1,8 @@
 """Kills at random moments, in full: PYTHONPATH=.:tests python tests/benchmarks/faults.py [kills=500] [seed=1].
 
 Every round starts a run of a study of short parts in a process of its own and kills it, or one of its workers, at a
-random moment, and resumes. Checked: nothing that the journal had as finished is computed again, no entry is torn, and the
-results equal those of an undisturbed run.
+random moment, and resumes. Checked: nothing that the journal had as finished is computed again, no entry is torn, and
+the results equal those of an undisturbed run.
 """
 
 import sys
