@@ -25,6 +25,7 @@ LARGEST_DIMENSION = 2_200_000
 """Sectors beyond this are left to matrix-product states, whatever the memory."""
 
 _DENSE = 300  # up to here LAPACK is faster than starting an iteration
+_ALWAYS_FITS = 20_000  # up to here nobody needs to count entries
 _VECTORS = 20  # Lanczos vectors kept between restarts
 _TOLERANCE = 1e-12  # residual relative to the norm bound
 _COARSE = 1e-4  # the same, for a first look at a sector
@@ -186,6 +187,8 @@ class _Problem:
         vectors = (_VECTORS + 6) * item * basis.dimension
         if vectors > self.settings.memory:
             raise TooLarge(f"Lanczos vectors of {vectors / 2**30:.1f} GiB do not fit the memory allowed")
+        if basis.dimension <= _ALWAYS_FITS:
+            return assemble(self.parts, basis)
         entries = basis.dimension + entry_count(self.parts, basis.sector)
         if entries * (item + 4) + vectors + 2**26 <= max(self.settings.memory, 2**28):
             return assemble(self.parts, basis)

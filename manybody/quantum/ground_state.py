@@ -12,6 +12,9 @@ from manybody.quantum.basis import TooLarge
 from manybody.quantum.exact import LARGEST_DIMENSION, Estimate, estimate_exact, exact_ground_state
 from manybody.quantum.result import GroundState, QuantumSettings
 
+_SMALL = 14
+"""Spaces below 2 to this power need no estimate."""
+
 
 def ground_state(
     op: SpinOperator,
@@ -96,7 +99,8 @@ def _affordable(cost: Estimate, settings: QuantumSettings) -> bool:
 
 
 def _connected(op, settings, start, scale, progress, checkpoint) -> GroundState:
-    if _affordable(estimate_exact(op, memory=settings.memory), settings):
+    small = np.sum(np.log2(2 * op.spins + 1)) < _SMALL
+    if small or _affordable(estimate_exact(op, memory=settings.memory), settings):
         try:
             return exact_ground_state(op, settings, start, scale, progress)
         except TooLarge:
