@@ -206,7 +206,7 @@ def limit_at(tree, index):
 def trust_spin(tree, tolerance=0.05, fits=None):
     """The smallest spin from which on the classical energy is within `tolerance` of the quantum one, relative.
 
-    tolerance: a number or several (then a dimension). Returns a Dataset over clusters, parameters and rule with
+    tolerance: a number or several (then the dimension `within`). Returns a Dataset over clusters, parameters and rule with
     trust_spin, trust_spin_low, trust_spin_high, trust_state (flag, see trust.STATES) and trust_spin_spread (largest
     minus smallest over the rules of the study). None where no spin fit is possible.
     """
@@ -286,7 +286,7 @@ def _trust_dataset(root, lead, verdicts, tolerance, prefix):
 
     several = np.ndim(tolerance) > 0
     tolerances = np.atleast_1d(np.asarray(tolerance, float))
-    dims = [*lead, "tolerance"]
+    dims = [*lead, "within"]
     shape = [*(root.sizes[d] for d in lead), len(tolerances)]
     columns = {name: np.full(shape, np.nan) for name in ("trust_spin", "trust_spin_low", "trust_spin_high")}
     state = np.full(shape, -1, np.int8)
@@ -305,13 +305,13 @@ def _trust_dataset(root, lead, verdicts, tolerance, prefix):
     out = {prefix + n: (dims, columns[n], {"long_name": titles[n], "units": "1"}) for n in columns}
     out[f"{prefix}trust_state"] = (dims, state, _flag(f"how trust_spin is known{where}", STATES))
     coords = _coords(root, lead)
-    coords["tolerance"] = ("tolerance", tolerances, {"long_name": "tolerance on |relative_gap|", "units": "1"})
+    coords["within"] = ("within", tolerances, {"long_name": "tolerance on |relative_gap|", "units": "1"})
     data = xr.Dataset(out, coords=coords)
     value = data[f"{prefix}trust_spin"]
     spread = (value.max("rule") - value.min("rule")).where(value.notnull().sum("rule") > 1)
     spread.attrs = {"long_name": f"spread of trust_spin between quantization rules{where}", "units": "1"}
     data[f"{prefix}trust_spin_spread"] = spread
-    return data if several else data.isel(tolerance=0)
+    return data if several else data.isel(within=0)
 
 
 def _root(tree):

@@ -55,13 +55,19 @@ class SpinFit:
 
 
 def evaluate(coefficients, covariance, spins, shift=0.0):
-    """Value and standard error of the fitted series; arrays as in SpinFit."""
+    """Value and standard error of the fitted series at half-integer and integer spins; arrays as in SpinFit."""
     spins = np.atleast_1d(np.asarray(spins, float))
-    parity = half_integer(spins).astype(int)
-    powers = (spins[:, None] + shift) ** -np.arange(1.0, POWERS + 1)
-    value = np.einsum("sp,sp->s", powers, coefficients[parity])
-    variance = np.einsum("sp,spq,sq->s", powers, covariance[parity], powers)
-    return value, np.sqrt(np.maximum(variance, 0.0))
+    odd = half_integer(spins)
+    even_part = evaluate_class(coefficients[0], covariance[0], spins, shift)
+    odd_part = evaluate_class(coefficients[1], covariance[1], spins, shift)
+    return tuple(np.where(odd, b, a) for a, b in zip(even_part, odd_part))
+
+
+def evaluate_class(coefficients, covariance, spins, shift=0.0):
+    """The same for one class of spin, coefficients (POWERS,), as a function of a continuous spin."""
+    powers = (np.asarray(spins, float)[:, None] + shift) ** -np.arange(1.0, POWERS + 1)
+    variance = np.einsum("sp,pq,sq->s", powers, covariance, powers)
+    return powers @ coefficients, np.sqrt(np.maximum(variance, 0.0))
 
 
 def half_integer(spins):
