@@ -1,7 +1,7 @@
 """The look of all figures: one place for colours, markers, sizes, labels.
 
-Colours differ in lightness as well as in hue, and every curve also has its own marker or dash, so that figures survive a
-black-and-white printer and colour-blind eyes.
+Colours differ in lightness as well as in hue, and every curve also has its own marker or dash, so that figures
+survive a black-and-white printer and colour-blind eyes.
 """
 
 from fractions import Fraction
@@ -75,14 +75,14 @@ def depth_colours():
     return LinearSegmentedColormap.from_list("depth", ["#0b2743", "#5d7285", "#a9b4bd", "#d99a5c", "#d2600a"])
 
 
-def log_ticks(axis):
+def log_ticks(axis, name="{:g}".format):
     """Ticks named 0.2, 0.5, 1, 2, ... where a logarithmic axis spans little, powers of ten otherwise."""
     from matplotlib.ticker import LogFormatterSciNotation, LogLocator, NullLocator
 
     low, high = axis.get_view_interval()
     if high / low < 300:
         axis.set_major_locator(LogLocator(subs=(1, 2, 5)))
-        axis.set_major_formatter(lambda value, _: f"{value:g}")
+        axis.set_major_formatter(lambda value, _: name(value))
         axis.set_minor_locator(NullLocator())
     else:
         axis.set_major_formatter(LogFormatterSciNotation())
@@ -105,10 +105,14 @@ def spin_axis(axis, spins):
     axis.set_label_text("spin S")
 
 
-def below(axes, handles, labels, columns):
-    """One legend under all panels of a figure."""
-    figure = axes.figure
-    unique = dict(zip(labels, handles))
-    figure.legend(
-        unique.values(), unique.keys(), loc="outside lower center", ncols=min(columns, len(unique)), columnspacing=1.4
-    )
+def below(axes, handles):
+    """One legend under all panels of a figure, {label: handle}, in as many columns as fit its width."""
+    widest = max(len(label) for label in handles) * 0.062 + 0.75
+    columns = int(np.clip(axes.figure.get_figwidth() / widest, 1, len(handles)))
+    axes.figure.legend(handles.values(), handles.keys(), loc="outside lower center", ncols=columns, columnspacing=1.4)
+
+
+def value_ticks(axis, values):
+    """Ticks at the swept values themselves, or at some of them."""
+    chosen = even_choice(values, 8)
+    axis.set_ticks(chosen, [f"{value:g}" for value in chosen])

@@ -46,8 +46,8 @@ class DrawOutcome:
 def draw(results_path, out_dir, formats=("png", "svg"), normalization="energy", select=None, only=None) -> DrawOutcome:
     """Draw every figure that the results allow into out_dir (made if missing), as <name>.<format>.
 
-    normalization: "energy", or "spin" for H = sum J S.S. select: {"lattice" or parameter: value} to show, the first value
-    otherwise. only: names of figures, all by default.
+    normalization: "energy", or "spin" for H = sum J S.S. select: {"lattice" or parameter: value} to show, the first
+    value otherwise. only: names of figures, all by default.
     Raises ValueError for an unknown format, figure or choice, NormalizationError where "spin" makes no sense, and what
     dataset.open_results raises.
     """
@@ -70,7 +70,7 @@ def draw(results_path, out_dir, formats=("png", "svg"), normalization="energy", 
 
 
 def figures_of(tree, normalization="energy", select=None, only=None):
-    """([(name, title, matplotlib Figure, caption)], {name: reason it is left out}) of a results tree, nothing written."""
+    """([(name, title, matplotlib Figure, caption)], {name: reason it is left out}) of a tree; writes nothing."""
     import matplotlib
 
     chosen = FIGURES if only is None else {name: FIGURES[name] for name in _known(only)}

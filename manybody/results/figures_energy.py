@@ -2,7 +2,7 @@
 
 import numpy as np
 
-from .figure_style import COLOURS, INK, QUIET, below, new_figure, spin_axis, spin_text, unit_text
+from .figure_style import COLOURS, INK, MARKERS, QUIET, below, new_figure, spin_axis, spin_text, unit_text
 from .figure_view import NotDrawn
 
 _RUNGS = (
@@ -57,11 +57,11 @@ def ladder(view):
         spin_axis(axis.xaxis, view.spins)
     _frame(axes[0, 0], must, may)
     axes[0, 0].set_ylabel(f"energy per site ({unit_text(view.unit)})")
-    below(axes[0, 0], handles.values(), handles.keys(), 3 if len(rules) > 1 else 2)
+    below(axes[0, 0], handles)
     error_note = "Error bars reach down to where the true quantum energy may lie; most are smaller than the symbols."
     caption = (
-        f"Energy ladder per site against spin, {size} sites. {error_note} Bounds and corrections far outside the frame at "
-        f"small spin are cut off.{view.note()}"
+        f"Energy ladder per site against spin, {size} sites. {error_note} Bounds and corrections far outside the frame "
+        f"at small spin are cut off.{view.note()}"
     )
     return figure, caption
 
@@ -70,7 +70,7 @@ def convergence(view):
     """Energy above the best against bond dimension, one curve per point found by matrix-product states."""
     if "convergence" not in view.tree.children:
         raise NotDrawn("no point was solved by matrix-product states with a recorded convergence")
-    data = view.tree["convergence"].dataset.isel({k: v for k, v in view.place.items()})
+    data = view.tree["convergence"].dataset.isel(view.place)
     curves = []
     for size in view.sites[::-1]:
         for spin in view.spins:
@@ -94,11 +94,10 @@ def convergence(view):
         name = f"{label['sites']} sites, S = {spin_text(label['spin'])}"
         if len(view.rules) > 1:
             name += f", {label['rule']}"
-        # the truth lies between the curve's zero and the energy: the bar reaches from there to the value minus nothing
-        lower = np.minimum(above * (1 - 1e-9), np.maximum(above - error * factor / scale, above * 1e-3))
-        axis.errorbar(
-            bond, above, yerr=[above - lower, 0 * above], color=COLOURS[k], marker="osD^vP"[k], ms=4, label=name, lw=1.2
-        )
+        axis.plot(bond, above, color=COLOURS[k], marker=MARKERS[k], ms=4, label=name, lw=1.2)
+        # the last error interval reaches down to zero, which is infinitely far on this axis: an arrow stands for it
+        arrow = [[0.6 * above[-1]], [0]]
+        axis.errorbar(bond[-1:], above[-1:], yerr=arrow, uplims=True, color=COLOURS[k], fmt="none", lw=1.2)
     axis.set_xscale("log", base=2)
     axis.set_yscale("log")
     axis.xaxis.set_major_formatter(lambda value, _: f"{value:g}")
@@ -107,8 +106,9 @@ def convergence(view):
     axis.legend()
     more = f" The first {len(shown)} of {len(curves)} points." if len(curves) > len(shown) else ""
     caption = (
-        "Convergence of the quantum energy with bond dimension: energy minus the final estimate's lower end; the last "
-        f"symbol of a curve stands at its 95 % error.{more}{view.note()}"
+        "Convergence of the quantum energy with bond dimension, measured from the lower end of the final 95 % error: "
+        "the height of the last symbol of a curve is that error, and the arrow says that the true energy lies anywhere "
+        f"below, down to zero on this scale.{more}{view.note()}"
     )
     return figure, caption
 
@@ -120,7 +120,7 @@ def _fullest_size(view, usable):
 
 
 def _frame(axis, must, may):
-    """Show all of `must`, and of `may` what is not far outside: bounds and corrections at small spin would flatten the rest."""
+    """Show all of `must`, and of `may` what is not far outside: bounds at small spin would flatten the rest."""
     values, others = _finite(must), _finite(may)
     low, high = values.min(), values.max()
     spread = high - low or 0.1 * (abs(high) or 1.0)

@@ -70,9 +70,9 @@ def gap_against_spin(view):
         sign = "gap > 0" if (signs > 0).all() else "gap < 0" if (signs < 0).all() else "gap of both signs"
         axis.set_title(f"rule: {rule} ({sign})", loc="left")
         spin_axis(axis.xaxis, view.spins)
-    axes[0, 0].set_ylabel(f"|quantum \N{MINUS SIGN} classical| energy\nper site ({unit_text(view.unit)})")
+    axes[0, 0].set_ylabel(f"|quantum \N{MINUS SIGN} classical|\nenergy per site ({unit_text(view.unit)})")
     names = sorted(handles, key=lambda name: not name.endswith("sites"))
-    below(axes[0, 0], [handles[name] for name in names], names, 4 if len(rules) > 1 else 2)
+    below(axes[0, 0], {name: handles[name] for name in names})
     dropped = int((usable & ~drawable).sum())
     zero = f" {dropped} points with zero gap are not on this logarithmic axis." if dropped else ""
     fitted = (
@@ -129,9 +129,9 @@ def gap_against_sites(view):
         axis.axhline(0, color=INK, lw=0.8)
         axis.set_title(f"rule: {rule}", loc="left")
         axis.set_xlabel("1 / number of sites")
-        axis.set_xlim(left=-0.012)
-    axes[0, 0].set_ylabel(f"quantum \N{MINUS SIGN} classical energy\nper site ({unit_text(view.unit)})")
-    below(axes[0, 0], handles.values(), handles.keys(), 5 if len(rules) > 1 else 3)
+        axis.set_xlim(-0.04 / view.sites.min(), 1.06 / view.sites.min())
+    axes[0, 0].set_ylabel(f"quantum \N{MINUS SIGN} classical\nenergy per site ({unit_text(view.unit)})")
+    below(axes[0, 0], dict(sorted(handles.items(), key=lambda item: not item[0].startswith("S ="))))
     what = (
         " Solid: the form with the largest weight; open symbols at zero: limit of many sites." if extrapolated else ""
     )
@@ -158,7 +158,7 @@ def _size_bars(axis, x, value, error, colour, marker):
 
 
 def _spin_curves(view, place, grid):
-    """(name, dash, gap, standard error) of the recorded fit on a grid of spins: two where the classes of spin differ."""
+    """(name, dash, gap, standard error) of the recorded fit on a grid of spins: two if the classes of spin differ."""
     fits = view.scaling
     if "spin_coefficient" not in fits:
         return

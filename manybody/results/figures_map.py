@@ -1,8 +1,8 @@
-"""Figures over swept parameters: lines over one, maps over two, of the relative gap and of the smallest trusted spin."""
+"""Figures over swept parameters: lines over one, maps over two, of relative gap and trusted spin."""
 
 import numpy as np
 
-from .figure_style import COLOURS, INK, MARKERS, below, even_choice, new_figure, spin_text
+from .figure_style import COLOURS, INK, MARKERS, below, even_choice, log_ticks, new_figure, spin_text, value_ticks
 from .figure_view import NotDrawn
 from .schema import RESERVED_NAMES
 
@@ -28,7 +28,10 @@ def relative_gap_map(view):
         axis.set_title(f"rule: {rule}", loc="left")
     axes[0, 0].set_ylabel(swept[1])
     figure.colorbar(mesh, ax=list(axes[0]), label="gap / |f_min \N{MINUS SIGN} f_mean|")
-    caption = f"Relative gap over {swept[0]} and {swept[1]}, {size} sites, S = {spin_text(spin)} (the smallest spin). Hatched: not known."
+    caption = (
+        f"Relative gap over {swept[0]} and {swept[1]}, {size} sites, S = {spin_text(spin)} (the smallest spin). "
+        "Hatched: not known."
+    )
     return figure, caption
 
 
@@ -61,11 +64,10 @@ def trusted_spin_map(view, tolerance=0.05):
         axis.set_title(f"rule: {rule}", loc="left")
     axes[0, 0].set_ylabel(swept[1])
     bar = figure.colorbar(mesh, ax=list(axes[0]), label="smallest trustworthy spin")
-    bar.ax.yaxis.set_major_formatter(lambda value, _: f"{value:g}")
-    bar.ax.yaxis.set_minor_formatter(lambda value, _: "")
+    log_ticks(bar.ax.yaxis, spin_text)
     caption = (
-        f"Smallest spin from which on the classical energy is within {tolerance:.0%} of the energy scale, {size} sites. "
-        "Numbers in brackets are extrapolated beyond the largest spin computed. Hatched: not known."
+        f"Smallest spin from which on the classical energy is within {tolerance:.0%} of the energy scale, {size} "
+        "sites. Numbers in brackets are extrapolated beyond the largest spin computed. Hatched: not known."
     )
     return figure, caption
 
@@ -99,7 +101,7 @@ def _lines(view, name, values, size):
         axis.set_title(f"rule: {rule}", loc="left")
         axis.set_xlabel(name)
     axes[0, 0].set_ylabel("gap / |f_min \N{MINUS SIGN} f_mean|")
-    below(axes[0, 0], handles.values(), handles.keys(), 6)
+    below(axes[0, 0], handles)
     return figure, f"Relative gap over {name}, {size} sites."
 
 
@@ -119,14 +121,15 @@ def _trusted_lines(view, name, verdict, size, tolerance):
         )
         axis.plot(at[~beyond], value[~beyond], MARKERS[k], color=colour)
         axis.plot(at[beyond], value[beyond], MARKERS[k], mfc="white", color=colour)
-    axis.set_yscale("log", base=2)
-    axis.yaxis.set_major_formatter(lambda value, _: spin_text(value))
+    axis.set_yscale("log")
+    axis.margins(y=0.12)
+    log_ticks(axis.yaxis, spin_text)
     axis.set_xlabel(name)
     axis.set_ylabel("smallest trustworthy spin")
     axis.legend()
     caption = (
-        f"Smallest spin from which on the classical energy is within {tolerance:.0%} of the energy scale, {size} sites; "
-        "open symbols are extrapolated beyond the largest spin computed."
+        f"Smallest spin from which on the classical energy is within {tolerance:.0%} of the energy scale, {size} "
+        "sites; open symbols are extrapolated beyond the largest spin computed."
     )
     return figure, caption
 
@@ -138,6 +141,8 @@ def _mesh(axis, values, swept, **style):
     axis.patch.set_edgecolor("#b9c3cc")
     axis.grid(False)
     axis.set_xlabel(swept[0])
+    value_ticks(axis.xaxis, first)
+    value_ticks(axis.yaxis, second)
     return axis.pcolormesh(first, second, np.ma.masked_invalid(values.values), shading="nearest", **style)
 
 

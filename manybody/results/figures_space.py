@@ -61,12 +61,13 @@ def configuration(view):
         )
     axis.set_aspect("equal")
     axis.grid(False)
-    axis.set_xlabel("position, first axis (lattice constants)")
-    axis.set_ylabel("position, second axis (lattice constants)")
+    turned_view = not np.array_equal(axes_of_view, np.eye(3))
+    for label, name in ((axis.set_xlabel, "x"), (axis.set_ylabel, "y")):
+        label(f"{name}{' as seen' if turned_view else ''} (lattice constants)")
     axis.set_xlim(low[0], high[0])
     axis.set_ylim(low[1], high[1])
     if np.abs(n[:, 2]).max() > 0.02:
-        figure.colorbar(colour, ax=axis, label="component out of the plane")
+        figure.colorbar(colour, cax=axis.inset_axes([1.03, 0, 0.035, 1]), label="component out of the plane")
     proof = _proof(view, size)
     axis.set_title(f"classical minimum, {proof[0]}", loc="left")
     seen = (
@@ -76,8 +77,8 @@ def configuration(view):
     )
     deep = " Sites are seen from the direction in which they spread least." if np.ptp(r[:, 2]) > 1e-9 else ""
     caption = (
-        f"Classical minimum, {size} sites. {proof[1]} Circle: out of the plane towards the reader, cross: away from the "
-        f"reader.{seen}{deep} Other minima of the same energy may exist.{view.note()}"
+        f"Classical minimum, {size} sites. {proof[1]} Circle: out of the plane towards the reader, cross: away from "
+        f"the reader.{seen}{deep} Other minima of the same energy may exist.{view.note()}"
     )
     return figure, caption
 

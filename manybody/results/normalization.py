@@ -74,7 +74,7 @@ def _degree(root, rules):
     others = [rule for rule in rules if rule != "substitution"]
     if others:
         raise NormalizationError(
-            f"under {', '.join(others)} terms with several unit vectors of one site, or more than two sites, do not all "
-            "scale alike with S; only under substitution do they"
+            f"under {', '.join(others)} terms with several unit vectors of one site, or more than two sites, do not "
+            "all scale alike with S; only under substitution do they"
         )
     return degrees[0]

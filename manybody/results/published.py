@@ -1,8 +1,8 @@
 """Published energies that can be laid over a figure where model and spin are the same: published.csv.
 
-Values are energies per site in the limit of many sites of H = sum over nearest pairs of Sx Sx + Sy Sy + anisotropy Sz Sz,
-each with its citation. A dataset is matched by its own workflow text, nothing is guessed: one lattice of a listed shape,
-one term, nearest pairs, one exchange number (or two equal components).
+Values are energies per site in the limit of many sites of H = sum over nearest pairs of Sx Sx + Sy Sy + anisotropy Sz
+Sz, each with its citation. A dataset is matched by its own workflow text, nothing is guessed: one lattice of a listed
+shape, one term, nearest pairs, one exchange number (or two equal components).
 """
 
 import csv
@@ -18,7 +18,7 @@ _SHAPES = {"chain": "chain", "ring": "chain"}
 
 @dataclass(frozen=True)
 class Published:
-    """value and uncertainty: energy per site of the function on unit vectors (the dataset's own), in the user's unit."""
+    """value and uncertainty: energy per site of the function on unit vectors, in the user's unit."""
 
     spin: float
     rule: str

@@ -206,7 +206,7 @@ def limit_at(tree, index):
 def trust_spin(tree, tolerance=0.05, fits=None):
     """The smallest spin from which on the classical energy is within `tolerance` of the quantum one, relative.
 
-    tolerance: a number or several (then the dimension `within`). Returns a Dataset over clusters, parameters and rule with
+    tolerance: a number or several (then the dimension `within`). Returns a Dataset over clusters, parameters and rule:
     trust_spin, trust_spin_low, trust_spin_high, trust_state (flag, see trust.STATES) and trust_spin_spread (largest
     minus smallest over the rules of the study). None where no spin fit is possible.
     """

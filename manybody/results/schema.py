@@ -21,12 +21,13 @@ COMPONENTS = ("x", "y", "z")
 POINT_KEYS = ("lattice", "sites", "spin", "rule", "parameters")
 """What identifies a record beside its variables; lattice is "" where a study has one."""
 
-RESERVED_NAMES = tuple(
-    "lattice sites spin rule site other_site component other_component place cut stage pair end direction "
-    "parity power other_power within "
-    # keywords of xarray's own selections: a dimension of that name could not be selected by keyword
-    "method tolerance drop indexers".split()
-)
+# the last four are keywords of xarray's own selections: such a dimension could not be selected by keyword
+_RESERVED = """
+lattice sites spin rule site other_site component other_component place cut stage pair end direction
+parity power other_power within
+method tolerance drop indexers
+"""
+RESERVED_NAMES = tuple(_RESERVED.split())
 """Names that a parameter may not take (nor that of any variable), because they are dimensions of the dataset."""
 
 
