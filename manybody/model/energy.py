@@ -237,15 +237,18 @@ class EnergyFunction:
         `tolerance` is relative to the norm of the coefficients.
         """
         triangle, norm = np.zeros((0, 3)), 0.0
+        # Couplings of 1e-300 and 1e300 must survive being squared in norms.
+        unit = self.largest_coefficient or 1.0
         for group in self.groups:
-            change = np.zeros((3, *group.coefficients.shape))
+            coefficients = group.coefficients / unit
+            change = np.zeros((3, *coefficients.shape))
             for slot, rank in enumerate(group.ranks):
-                moved = np.moveaxis(group.coefficients, slot + 1, -1)
+                moved = np.moveaxis(coefficients, slot + 1, -1)
                 turned = np.einsum("t...q,aqp->at...p", moved, harmonics.generators(rank))
                 change += np.moveaxis(turned, -1, slot + 2)
             stacked = np.concatenate([triangle, change.reshape(3, -1).T])
             triangle = np.linalg.qr(stacked, mode="r") if len(stacked) > 3 else stacked
-            norm = np.hypot(norm, np.linalg.norm(group.coefficients))
+            norm = np.hypot(norm, np.linalg.norm(coefficients))
         if norm == 0.0:
             return np.eye(3)
         _, strength, axes = np.linalg.svd(np.concatenate([triangle, np.zeros((3, 3))]) / norm)
