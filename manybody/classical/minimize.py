@@ -70,12 +70,13 @@ def minimize(
     f: EnergyFunction,
     settings: MinimizeSettings | None = None,
     extra_starts: np.ndarray | None = None,
-    proof: Callable[[np.ndarray], bool] | None = None,
+    proof: Callable[[np.ndarray], bool | np.ndarray] | None = None,
 ) -> ClassicalResult:
     """Search the global minimum of f.
 
-    extra_starts: (r, N, 3) configurations tried first, beside settings.starts. proof: called with the lowest configuration (N, 3) after
-    a round of starts that improved it; True ends the search. f that is constant on the sphere returns at once.
+    extra_starts: (r, N, 3) configurations tried first, beside settings.starts. proof: called with the lowest
+    configuration (N, 3) after every round of starts; True ends the search, an array (r, N, 3) holds starts to try next
+    (not counted in settings.starts either), anything else lets the search go on. f that is constant returns at once.
     Couplings of any size are scaled internally; the results are in the units of f.
     """
     settings = settings or MinimizeSettings()
@@ -86,14 +87,17 @@ def minimize(
     scaled, exponent = rescaled(f)
     problem = QuadraticProblem(scaled, settings) if scaled.is_quadratic else GeneralProblem(scaled, settings)
     pool = _Pool(scaled, problem.strength)
-    best, used, proven = math.inf, 0, False
-    for batch in _rounds(problem, settings, extra_starts):
+    used, proven = 0, False
+    rounds = _rounds(problem, settings, extra_starts)
+    for batch in rounds:
         pool.add(*problem.descend(batch))
         used += len(batch)
-        if pool.energy >= best - 1e-12 * problem.strength:
-            continue
-        best = pool.energy
-        if problem.is_lowest(best) or (proof is not None and proof(pool.configuration)):
+        answer = problem.is_lowest(pool.energy) or (proof is not None and proof(pool.configuration))
+        if not isinstance(answer, bool) and len(answer):
+            pool.add(*problem.descend(np.asarray(answer)))
+            used += len(answer)
+            answer = proof(pool.configuration)
+        if answer is True:
             proven = True
             break
     minima = tuple(

@@ -1,0 +1,114 @@
+"""A lower bound of any energy function: the sum of the minima of small clusters (Anderson 1951, Phys. Rev. 83, 1260, for classical terms).
+
+f is written as a sum of functions of few sites: every term goes to the clusters that hold all its sites, in equal shares, so that the sum
+is f again. Clusters are the bonds (the sets of sites of the terms) or, where they exist, triangles of bonds. Clusters that are
+equal up to the numbering of sites are minimized once.
+
+The minimum of a cluster is exact up to rounding where it is quadratic (dual bound) or a function of two vectors that common rotations leave
+unchanged (a polynomial in n_1.n_2); otherwise it is the lowest of many starts, and the bound is not rigorous.
+"""
+
+import itertools
+import math
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.polynomial import chebyshev
+
+from manybody.classical.minimize import MinimizeSettings, QuadraticProblem, minimize
+from manybody.classical.multipliers import dual_bound, dual_form, multipliers_at
+from manybody.classical.relaxation import relax
+from manybody.model.energy import EnergyFunction, Group
+
+
+@dataclass(frozen=True)
+class ClusterSum:
+    """bound of f, whether it is rigorous, and the kind of clusters ("bonds" or "triangles")."""
+
+    bound: float
+    rigorous: bool
+    kind: str
+
+
+def cluster_sum(f: EnergyFunction, seed: int = 1) -> ClusterSum:
+    """The best of the cluster bounds of f, a rigorous one where there is one. `f` should be scaled to couplings of order one."""
+    known: dict[str, tuple[float, bool]] = {}
+    sums = [_sum_of(f, kind, clusters, known, seed) for kind, clusters in _coverings(f)]
+    return max(sums, key=lambda s: (s.rigorous, s.bound))
+
+
+def _coverings(f: EnergyFunction) -> list[tuple[str, list[tuple[int, ...]]]]:
+    bonds = {tuple(term) for g in f.groups for term in np.sort(g.sites, axis=1).tolist()}
+    # a bond inside a larger one, and single sites inside bonds, go with those
+    by_site: dict[int, list[tuple[int, ...]]] = {}
+    for bond in bonds:
+        for site in bond:
+            by_site.setdefault(site, []).append(bond)
+    largest = [
+        bond
+        for bond in bonds
+        if not any(len(other) > len(bond) and set(bond) <= set(other) for other in by_site[bond[0]])
+    ]
+    coverings = [("bonds", sorted(largest))]
+    pairs = {bond for bond in largest if len(bond) == 2}
+    neighbours: dict[int, set[int]] = {}
+    for a, b in pairs:
+        neighbours.setdefault(a, set()).add(b)
+        neighbours.setdefault(b, set()).add(a)
+    triangles = {tuple(sorted((a, b, c))) for a, b in pairs for c in neighbours[a] & neighbours[b]}
+    if triangles and len(triangles) <= 200_000:
+        inside = {pair for t in triangles for pair in itertools.combinations(t, 2)}
+        coverings.append(("triangles", sorted(triangles) + sorted(set(largest) - inside)))
+    return coverings
+
+
+def _sum_of(f, kind: str, clusters: list[tuple[int, ...]], known: dict, seed: int) -> ClusterSum:
+    owners: dict[int, list[int]] = {}
+    for number, cluster in enumerate(clusters):
+        for site in cluster:
+            owners.setdefault(site, []).append(number)
+    parts: list[list[Group]] = [[] for _ in clusters]
+    for group in f.groups:
+        for sites, block in zip(group.sites.tolist(), group.coefficients, strict=True):
+            shared = [k for k in owners[sites[0]] if set(sites) <= set(clusters[k])]
+            for k in shared:
+                local = np.array([[clusters[k].index(site) for site in sites]])
+                parts[k].append(Group(group.key, local, block[None] / len(shared)))
+    minima, rigorous = [], True
+    for cluster, groups in zip(clusters, parts, strict=True):
+        piece = EnergyFunction(len(cluster), 0.0, groups)
+        name = piece.fingerprint()
+        if name not in known:
+            known[name] = _cluster_minimum(piece, seed)
+        minima.append(known[name][0])
+        rigorous = rigorous and known[name][1]
+    rounding = 2.0**-50 * math.fsum(abs(m) for m in minima)
+    return ClusterSum(f.constant + math.fsum(minima) - rounding, rigorous, kind)
+
+
+def _cluster_minimum(piece: EnergyFunction, seed: int) -> tuple[float, bool]:
+    """(lower bound or lowest value found, whether it is a rigorous bound)."""
+    size = sum(float(np.abs(g.coefficients).sum()) for g in piece.groups)
+    found = minimize(piece, MinimizeSettings(starts=64, seed=seed))
+    if piece.is_quadratic:
+        form = dual_form(QuadraticProblem(piece, MinimizeSettings()).form)
+        best = dual_bound(form, multipliers_at(form, found.configuration))
+        if found.energy - best > 1e-9 * size:
+            solution = relax(form, np.random.default_rng(seed), found.configuration)
+            best = max(best, dual_bound(form, solution.multipliers))
+        return best, True
+    if piece.sites == 2 and len(piece.symmetry_axes()) == 3:
+        return _function_of_product(piece) - 1e-13 * size, True
+    return found.energy, False
+
+
+def _function_of_product(piece: EnergyFunction) -> float:
+    """Minimum over x = n_1.n_2 in [-1, 1] of a polynomial: its values at the ends and at the zeros of its derivative."""
+    degree = max(group.ranks[0] for group in piece.groups)
+    x = chebyshev.chebpts1(degree + 1)
+    up = np.broadcast_to([0.0, 0.0, 1.0], (len(x), 3))
+    turned = np.stack([np.sqrt(1 - x**2), np.zeros_like(x), x], axis=1)
+    polynomial = chebyshev.Chebyshev.fit(x, piece.value(np.stack([up, turned], axis=1)), degree, domain=[-1, 1])
+    roots = polynomial.deriv().roots() if degree > 1 else np.zeros(0)
+    points = np.clip(np.concatenate([[-1.0, 1.0], roots.real]), -1.0, 1.0)
+    return float(polynomial(points).min())
