@@ -23,7 +23,8 @@ class MinimizeSettings:
 
     tolerance: wanted largest tangential gradient at a site, relative to the strongest sum of couplings at a site.
     max_site_starts: at most this many sites x starts are spent (but at least two starts): on 10^6 sites fewer starts than asked for are
-    made, and `starts_used` says how many.
+    made, and `starts_used` says how many. sweeps: alignment sweeps of a start (quasi-Newton steps: five times as many), newton_steps:
+    polishing steps, at most.
     """
 
     starts: int = 64
@@ -155,7 +156,7 @@ class QuadraticProblem:
         arrays = (form.indptr, form.neighbours, form.weights, form.blocks)
         for k in range(len(x)):
             # plain alignment first: it leaves high random states and saddle points fastest; over-relaxation for the long waves
-            compiled.descend(x[k], *arrays, self.shifted, self.field, 1.0, 10, 1e-2 * strength)
+            compiled.descend(x[k], *arrays, self.shifted, self.field, 1.0, min(10, settings.sweeps), 1e-2 * strength)
             compiled.descend(x[k], *arrays, self.shifted, self.field, 1.7, settings.sweeps, 5e-3 * strength)
             energy, gradients[k], _ = compiled.newton(
                 x[k], *arrays, form.diagonal, self.field,
@@ -193,7 +194,8 @@ class GeneralProblem:
 
     def _descend(self, configurations: np.ndarray) -> polish.Polished:
         f, settings, strength = self.f, self.settings, self.strength
-        rough = polish.quasi_newton(f.value_and_gradient, configurations, 1e-5 * strength, 2000, strength)
+        steps = 5 * settings.sweeps
+        rough = polish.quasi_newton(f.value_and_gradient, configurations, 1e-5 * strength, steps, strength)
         return polish.truncated_newton(
             f.value_and_gradient, f.hessian_product, rough.configurations, settings.tolerance * strength, strength,
             settings.newton_steps,
