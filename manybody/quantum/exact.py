@@ -121,7 +121,7 @@ def exact_ground_state(
         method="exact",
         sector=float("nan") if best.sector is None else float(best.sector),
         sector_axis=frame.axis,
-        energy_variance=float((parts.norm * best.residual) ** 2),
+        energy_variance=float(parts.norm * best.residual) * float(parts.norm * best.residual),
         observables=observables,
         state=state,
     )
@@ -190,7 +190,7 @@ class _Problem:
         if basis.dimension <= _ALWAYS_FITS:
             return assemble(self.parts, basis)
         entries = basis.dimension + entry_count(self.parts, basis.sector)
-        if entries * (item + 4) + vectors + 2**26 <= max(self.settings.memory, 2**28):
+        if entries * (item + 4) + vectors + 2**26 <= self.settings.memory:
             return assemble(self.parts, basis)
         return SplitOperator(self.parts, basis)
 

@@ -62,13 +62,12 @@ class SplitOperator(LinearOperator):
     def _matvec(self, x: np.ndarray) -> np.ndarray:
         x = np.asarray(x).reshape(-1)
         blocks = [x[where] for where in self._where]
-        results = [self.diagonal[where] * block for where, block in zip(self._where, blocks, strict=True)]
-        if np.iscomplexobj(x) and not np.issubdtype(self.dtype, np.complexfloating):
-            results = [result.astype(complex) for result in results]
+        kind = np.result_type(x, self.dtype)
+        results = [(self.diagonal[w] * block).astype(kind) for w, block in zip(self._where, blocks, strict=True)]
         for target, source, a, b in self._pieces:
             moved = blocks[source] if a is None else a @ blocks[source]
             results[target] += moved if b is None else (b @ moved.T).T
-        y = np.empty(self.shape[0], dtype=np.result_type(x, self.dtype))
+        y = np.empty(self.shape[0], dtype=kind)
         for where, result in zip(self._where, results, strict=True):
             y[where] = result
         return y
