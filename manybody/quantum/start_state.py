@@ -7,7 +7,9 @@ classical order and mixes all charges: sweeps started from it do not crawl as th
 from collections.abc import Sequence
 
 import numpy as np
+from scipy.optimize import minimize
 
+from manybody.model.quantization import SpinOperator
 from manybody.quantum.chain import Bond
 
 WINDOW = 1e-10
@@ -65,3 +67,21 @@ def _distributions(probabilities, local) -> list[dict[int, float]]:
                     following[q + c] = following.get(q + c, 0.0) + p * w
         result.append(following)
     return result
+
+
+def classical_start(operator: SpinOperator, rng: np.random.Generator, starts: int = 8) -> np.ndarray:
+    """(N, 3) unit vectors of low energy of the lower symbol, by projected descent from random directions."""
+    symbol = operator.lower_symbol()
+
+    def value(x: np.ndarray) -> tuple[float, np.ndarray]:
+        v = x.reshape(-1, 3)
+        length = np.linalg.norm(v, axis=1, keepdims=True)
+        energy, gradient = symbol.value_and_gradient(v / length)
+        return float(energy), (gradient / length).reshape(-1)
+
+    best, lowest = None, np.inf
+    for _ in range(starts):
+        found = minimize(value, rng.standard_normal(3 * operator.sites), jac=True, method="L-BFGS-B")
+        if best is None or found.fun < lowest - 1e-9 * abs(lowest):
+            best, lowest = found.x.reshape(-1, 3), found.fun
+    return best / np.linalg.norm(best, axis=1, keepdims=True)

@@ -1,0 +1,131 @@
+"""From a start state to a converged one: sweeps in stages of falling truncation, until the error is small enough or a limit is met."""
+
+from collections.abc import Callable
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from manybody.quantum import expansion, one_site, two_site, variance
+from manybody.quantum.chain import Chain
+from manybody.quantum.extrapolation import Stage, energy_error
+
+FIRST_ALLOWED = 1e-6
+LEAST_ALLOWED = 1e-15
+SWEEPS, MOST_SWEEPS = 8, 24
+CRAWL, MOST_VECTORS = 0.7, 40
+FRACTION = 0.3
+
+
+@dataclass(frozen=True)
+class Limits:
+    """goal: wanted error of the energy, absolute. bond: largest bond dimension; memory_bond: the one that memory allows. floor: rounding
+    error of an energy. vectors: Lanczos products per step. pairs: two-site steps instead of one-site steps with expansion."""
+
+    goal: float
+    bond: int
+    memory_bond: int
+    floor: float
+    norm: float
+    vectors: int = 3
+    pairs: bool = True
+
+    @property
+    def largest(self) -> int:
+        return max(1, min(self.bond, self.memory_bond))
+
+
+@dataclass(eq=False)
+class Run:
+    """A chain on its way. stages: what was reached, the start state first; allowed: relative weight a bond may lose in the present stage; bounded: the last stage
+    wanted more states than the limit."""
+
+    chain: Chain
+    limits: Limits
+    rng: np.random.Generator
+    report: Callable[[dict], None] | None = None
+    stages: list[Stage] = field(default_factory=list)
+    allowed: float = FIRST_ALLOWED
+    sweeps: int = 0
+    bounded: bool = False
+    vectors: int = 0
+
+    def __post_init__(self) -> None:
+        self.vectors = self.vectors or self.limits.vectors
+
+    @property
+    def energy(self) -> float:
+        return self.stages[-1].energy
+
+    @property
+    def error(self) -> float:
+        return energy_error(self.stages, self.limits.floor)
+
+    @property
+    def finished(self) -> bool:
+        """Good enough, or nothing left to try."""
+        if not self.stages:
+            return False
+        done = len(self.stages) > 2 and self.error <= self.limits.goal
+        return done or self.bounded or self.allowed <= LEAST_ALLOWED or self.stages[-1].variance <= self.limits.floor**2
+
+    def advance(self) -> None:
+        """One more stage."""
+        if not self.stages:
+            energy, spread = variance.measure(self.chain)
+            self.stages.append(Stage(self.chain.bond_dimension, energy, spread, 0.0, np.inf, 1.0))
+        else:
+            ratio = self.limits.goal / max(self.error, 1e-300)
+            self.allowed = max(self.allowed * float(np.clip(ratio / 4, 0.03, 0.1)), LEAST_ALLOWED)
+        energies: list[float] = []
+        gains = [np.inf]
+        while len(energies) < MOST_SWEEPS:
+            energy, discarded, bounded = self._half_sweep(FRACTION)
+            energies.append(energy)
+            self._tell(energy, discarded)
+            if len(energies) == 1:
+                continue
+            gains.append(energies[-2] - energies[-1])
+            crawls = gains[-1] > CRAWL * gains[-2]
+            if gains[-1] < max(0.1 * (energies[0] - energies[-1]), 0.05 * self.limits.goal):
+                break
+            if crawls:
+                if len(energies) >= SWEEPS and self.vectors >= MOST_VECTORS:
+                    break
+                self.vectors = min(2 * self.vectors, MOST_VECTORS)
+        energy, spread = variance.measure(self.chain)
+        self.bounded = bounded
+        ratio = gains[-1] / gains[-2] if gains[-2] > 0 else 1.0
+        self.stages.append(Stage(self.chain.bond_dimension, energy, spread, discarded, gains[-1], ratio))
+        self._tell(energy, discarded, spread)
+
+    def _half_sweep(self, fraction: float) -> tuple[float, float, bool]:
+        """Energy at the end, summed discarded weight, whether the bond limit cut more than the allowed weight."""
+        chain, limits = self.chain, self.limits
+        energy, total, bounded = 0.0, 0.0, False
+        tolerance = 1e-3 * np.sqrt(limits.goal * limits.norm / chain.length)
+        for site in range(chain.length - 1):
+            if limits.pairs:
+                energy, lost = two_site.step(chain, site, limits.largest, self.allowed, self.vectors, tolerance)
+            else:
+                if fraction:
+                    ceiling = limits.largest + max(4, int(fraction * limits.largest))
+                    expansion.expand(chain, site, fraction, ceiling, self.rng)
+                energy = one_site.solve(chain, site, self.vectors, tolerance)
+                lost = one_site.move(chain, site, limits.largest, self.allowed)
+            total += lost
+            bounded |= lost > 1.001 * self.allowed
+        chain.mirror()
+        self.sweeps += 1
+        return energy, total, bounded
+
+    def _tell(self, energy: float, discarded: float, spread: float | None = None) -> None:
+        if self.report:
+            self.report(
+                {
+                    "sweep": self.sweeps,
+                    "bond_dimension": self.chain.bond_dimension,
+                    "energy": energy,
+                    "variance": spread if spread is not None else (self.stages[-1].variance if self.stages else float("nan")),
+                    "discarded_weight": discarded,
+                }
+            )

@@ -1,0 +1,106 @@
+"""Start states for every sector of total S^z, and the search for the sector of the ground state."""
+
+from collections.abc import Callable
+
+import numpy as np
+from scipy.optimize import brentq
+
+from manybody.model.spin_matrices import coherent_states
+from manybody.quantum.chain import Chain
+from manybody.quantum.problem import Problem
+from manybody.quantum.schedule import Run
+from manybody.quantum.start_state import projected_product
+
+SMEAR = 0.97
+"""A start along the conserved axis is opened by arccos(SMEAR), so that all charges near the wanted one take part."""
+
+
+def start_chain(problem: Problem, directions: np.ndarray, total: int) -> Chain:
+    """Chain in a projected coherent product state of the given total charge, ready for sweeps.
+
+    directions (N, 3) in sweep order and solved frame; their z-components are shifted so that the mean charge is the wanted one.
+    """
+    if problem.conserved:
+        directions = magnetized(directions, problem.spins, total - problem.spins.sum())
+    amplitudes = []
+    for v, spin, levels in zip(directions, problem.spins.tolist(), problem.levels.tolist(), strict=True):
+        vector = coherent_states(v, spin)[:levels]
+        amplitudes.append(vector / np.linalg.norm(vector))
+    bonds, tensors = projected_product(amplitudes, problem.local, total, problem.real)
+    chain = Chain(list(problem.local), list(problem.sites), bonds, tensors, total)
+    chain.prepare()
+    return chain
+
+
+def magnetized(directions: np.ndarray, spins: np.ndarray, wanted: float) -> np.ndarray:
+    """Directions with azimuths kept and z = tanh(artanh(SMEAR z_i) + t), t such that sum S_i z_i = wanted."""
+    largest = spins.sum()
+    across = directions[:, :2].copy()
+    length = np.linalg.norm(across, axis=1)
+    straight = length < 1e-6
+    across[straight] = np.stack([np.where(directions[straight, 2] < 0, -1.0, 1.0), np.zeros(straight.sum())], axis=1)
+    across /= np.linalg.norm(across, axis=1, keepdims=True)
+    if abs(wanted) >= largest - 1e-9:
+        z = np.full(len(spins), np.sign(wanted))
+    else:
+        base = np.arctanh(SMEAR * np.clip(directions[:, 2], -1, 1))
+        shift = brentq(lambda t: float(spins @ np.tanh(base + t)) - wanted, -40.0, 40.0)
+        z = np.tanh(base + shift)
+    return np.concatenate([across * np.sqrt(np.maximum(1 - z * z, 0.0))[:, None], z[:, None]], axis=1)
+
+
+def isotropic_directions(start: np.ndarray, spins: np.ndarray) -> np.ndarray:
+    """For models that any common rotation leaves unchanged: turn a configuration so that its moment points along z or, without one, so
+    that its spins lie as far as possible in the xy-plane."""
+    moment = spins @ start
+    _, _, axes = np.linalg.svd(start * spins[:, None], full_matrices=True)
+    z = moment / np.linalg.norm(moment) if np.linalg.norm(moment) > 1e-6 * spins.sum() else axes[2]
+    x = axes[0] - (axes[0] @ z) * z
+    if np.linalg.norm(x) < 1e-6:
+        x = np.eye(3)[np.argmin(np.abs(z))]
+        x = x - (x @ z) * z
+    x /= np.linalg.norm(x)
+    return start @ np.array([x, np.cross(z, x), z]).T
+
+
+class SectorSearch:
+    """Walks over total charges until the lowest energy is bracketed by its neighbours.
+
+    begin(total) makes a Run; every run visited is advanced by `stages` stages. Energies count as equal within the errors that are not
+    common to neighbours; `undecided` lists runs that a finer solution has to tell apart.
+    """
+
+    def __init__(self, begin: Callable[[int], Run], lowest: int, highest: int, stages: int = 2):
+        self.begin, self.lowest, self.highest, self.stages = begin, lowest, highest, stages
+        self.runs: dict[int, Run] = {}
+
+    def run(self, total: int) -> Run:
+        if total not in self.runs:
+            run = self.begin(total)
+            for _ in range(self.stages):
+                if not run.finished:
+                    run.advance()
+            self.runs[total] = run
+        return self.runs[total]
+
+    def energy(self, total: int) -> float:
+        return self.run(total).energy
+
+    def search(self, first: int, reach: int = 2) -> int:
+        """The total charge of lowest energy, found downhill from `first`, looking `reach` steps to either side."""
+        best = int(np.clip(first, self.lowest, self.highest))
+        while True:
+            around = [best + step for step in (1, -1, *(s * k for k in range(2, reach + 1) for s in (1, -1)))]
+            around = [total for total in around if self.lowest <= total <= self.highest]
+            better = next((t for t in around if self.energy(t) < self.energy(best) - self._noise(best)), None)
+            if better is None:
+                return best
+            best = better
+
+    def undecided(self, best: int) -> list[int]:
+        """Other charges whose true energy may still be the lowest."""
+        floor = self.energy(best)
+        return [t for t, run in self.runs.items() if t != best and run.energy - run.error <= floor]
+
+    def _noise(self, total: int) -> float:
+        return self.runs[total].limits.floor

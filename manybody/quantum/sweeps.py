@@ -1,0 +1,277 @@
+"""The ground state of any quantized operator as a matrix-product state."""
+
+import time
+from collections.abc import Callable
+from dataclasses import astuple
+from pathlib import Path
+from typing import Protocol
+
+import numpy as np
+
+from manybody.model.quantization import SpinOperator
+from manybody.quantum import matrix_product_state, memory
+from manybody.quantum.chain import Chain
+from manybody.quantum.extrapolation import Stage
+from manybody.quantum.local_basis import enlarge, wanted_levels
+from manybody.quantum.problem import Problem, prepare
+from manybody.quantum.result import GroundState, QuantumSettings
+from manybody.quantum.schedule import Limits, Run
+from manybody.quantum.sectors import SectorSearch, isotropic_directions, start_chain
+from manybody.quantum.start_state import classical_start
+
+SAVE_EVERY = 120.0
+"""Seconds between two savings of a long run."""
+WIDE = 12
+"""From this many operator channels on one-site steps are cheaper than pairs."""
+
+
+class Checkpoint(Protocol):
+    """Where the state of a long run is kept."""
+
+    def load(self) -> bytes | None: ...
+
+    def save(self, data: bytes) -> None: ...
+
+
+def matrix_product_ground_state(
+    op: SpinOperator,
+    settings: QuantumSettings | None = None,
+    start: np.ndarray | None = None,
+    scale: float = 0.0,
+    progress: Callable[[dict], None] | None = None,
+    checkpoint: Checkpoint | str | Path | None = None,
+) -> GroundState:
+    """Lowest energy found by sweeps, its error and what stopped them.
+
+    start (N, 3): classical unit vectors, found here by a short descent if None. scale: |f_min - f_mean|, to which settings.accuracy is
+    relative; 0 takes a bound on the norm of the operator. progress: called with a dict (sweep, bond_dimension, energy, variance,
+    discarded_weight, sector) after every half sweep. checkpoint: an object with load() and save(bytes), or a path; written at most every
+    two minutes, read at the start.
+    """
+    settings = settings or QuantumSettings()
+    solver = _Solver(op, settings, start, scale, progress, _as_checkpoint(checkpoint))
+    return solver.solve()
+
+
+class _Solver:
+    def __init__(self, op, settings: QuantumSettings, start, scale: float, progress, checkpoint):
+        self.op, self.settings, self.progress, self.checkpoint = op, settings, progress, checkpoint
+        self.rng = np.random.default_rng(settings.seed)
+        self.start = classical_start(op, self.rng) if start is None else np.asarray(start, float)
+        self.problem = prepare(op, self.start)
+        self.isotropic = len(op.symmetry_axes()) == 3
+        self.vectors = int(np.clip(3 + round(float(self.problem.spins.max())), 3, 12))
+        norm = self.problem.norm
+        largest = memory.largest_bond(self.problem, settings.memory, self.vectors)
+        pairs = int(self.problem.levels.max()) <= 3 and self.problem.width < WIDE
+        scale = scale if scale > 0 else norm
+        self.limits = Limits(
+            goal=settings.accuracy * scale,
+            bond=settings.max_bond,
+            memory_bond=largest,
+            floor=1e-14 * (norm + abs(self.problem.constant)) + 1e-300,
+            norm=max(norm, 1e-300),
+            vectors=self.vectors,
+            pairs=pairs,
+        )
+        self.saved = time.monotonic()
+
+    def solve(self) -> GroundState:
+        if self.op.sites == 1:
+            return self._single()
+        run = self._restored() or self._chosen()
+        self._finish(run)
+        other = self._guard(run)
+        if other.energy < run.energy - max(run.error, self.limits.floor):
+            self._finish(other)
+            if other.energy < run.energy:
+                run, other = other, run
+        return self._result(run, other)
+
+    def _directions(self, start: np.ndarray) -> np.ndarray:
+        directions = self.problem.directions(start)
+        return isotropic_directions(directions, self.problem.spins) if self.isotropic else directions
+
+    def _begin(self, total: int, start: np.ndarray | None = None) -> Run:
+        chain = start_chain(self.problem, self._directions(self.start if start is None else start), total)
+        return Run(chain, self.limits, self.rng, self._reporter(total))
+
+    def _reporter(self, total: int):
+        if self.progress is None:
+            return None
+        sector = self._sector(total)
+        shift = self.problem.constant
+        return lambda facts: self.progress({**facts, "energy": facts["energy"] + shift, "sector": sector})
+
+    def _sector(self, total: int) -> float:
+        return float(total - self.problem.spins.sum()) if self.problem.conserved else float("nan")
+
+    def _chosen(self) -> Run:
+        """The run of the right sector, after a few cheap stages."""
+        if not self.problem.conserved:
+            return self._begin(0)
+        whole = round(2 * self.problem.spins.sum())
+        half = self.problem.spins.sum()
+        directions = self._directions(self.start)
+        moment = float(self.problem.spins @ directions[:, 2])
+        first = round(half + moment + 1e-6)
+        if self.isotropic and first <= half + 0.5:
+            # Every multiplet has a state of S^z = 0 or 1/2: no other sector can be lower.
+            return self._begin(int(np.ceil(half)))
+        flips = self.isotropic or self._symmetric_under_flip()
+        search = SectorSearch(self._begin, int(np.ceil(half)) if flips else 0, whole)
+        best = search.search(first)
+        rivals = search.undecided(best)
+        while rivals:
+            runs = [search.runs[t] for t in (best, *rivals)]
+            if all(run.finished for run in runs):
+                break
+            for run in runs:
+                if not run.finished:
+                    run.advance()
+            best = min((best, *rivals), key=lambda t: (search.runs[t].energy, -abs(t - half)))
+            rivals = [t for t in search.undecided(best) if search.runs[t] in runs]
+            if self._same(search, best, rivals):
+                break
+        return search.runs[best]
+
+    def _same(self, search: SectorSearch, best: int, rivals: list[int]) -> bool:
+        """All rivals lie within the wanted accuracy: whichever is taken, the energy is right."""
+        return all(
+            run.error <= self.limits.goal and abs(run.energy - search.energy(best)) <= self.limits.goal
+            for run in (search.runs[t] for t in (best, *rivals))
+        )
+
+    def _symmetric_under_flip(self) -> bool:
+        turned = self.op.rotated(self.problem.frames).symbol
+        flip = np.diag([1.0, -1.0, -1.0])
+        return turned.rotated(flip).allclose(turned, 1e-12, 1e-13 * self.problem.norm)
+
+    def _finish(self, run: Run) -> None:
+        while True:
+            while not run.finished:
+                run.advance()
+                self._save(run)
+            levels = wanted_levels(run.chain, self.problem, run.limits.goal)
+            if levels is None:
+                return
+            self.problem = self.problem.with_levels(levels)
+            run.chain = enlarge(run.chain, self.problem)
+            run.stages.clear()
+            run.allowed *= 10
+
+    def _guard(self, run: Run) -> Run:
+        """A cheap second run from random directions in the same sector, coarser than the first."""
+        random = self.rng.standard_normal((self.op.sites, 3))
+        random /= np.linalg.norm(random, axis=1, keepdims=True)
+        chain = start_chain(self.problem, self.problem.directions(random), run.chain.total)
+        other = Run(chain, self.limits, self.rng, None)
+        other.advance()
+        while not other.finished and 2 * other.chain.bond_dimension <= run.chain.bond_dimension:
+            other.advance()
+        return other
+
+    def _result(self, run: Run, other: Run) -> GroundState:
+        problem, last = self.problem, run.stages[-1]
+        error = run.error
+        goal = self.limits.goal
+        hit_bond = run.bounded and error > goal and self.limits.bond <= self.limits.memory_bond
+        hit_memory = run.bounded and error > goal and not hit_bond
+        advice = ""
+        if error > goal:
+            advice = f"error {error:.1e} above the wanted {goal:.1e}: "
+            if hit_bond:
+                advice += f"raise max_bond above {self.settings.max_bond} or loosen accuracy"
+            elif hit_memory:
+                advice += f"memory limits the bond dimension to {self.limits.memory_bond}: raise it or loosen accuracy"
+            else:
+                advice += "rounding errors or slow sweeps stopped it; loosen accuracy"
+        state = matrix_product_state.of_chain(run.chain, problem.order, self.op.spins, problem.frames)
+        observables = {}
+        if self.settings.observables:
+            from manybody.quantum.matrix_product_observables import observe
+
+            observables = observe(run.chain, state, problem, self.settings.observables)
+        return GroundState(
+            energy=last.energy + problem.constant,
+            error=error,
+            status="not_converged" if advice else "converged",
+            advice=advice,
+            method="matrix_product",
+            sector=self._sector(run.chain.total),
+            sector_axis=problem.axis,
+            bond_dimension=last.bond_dimension,
+            discarded_weight=last.discarded,
+            energy_variance=last.variance,
+            trace_bond_dimension=np.array([stage.bond_dimension for stage in run.stages]),
+            trace_energy=np.array([stage.energy + problem.constant for stage in run.stages]),
+            trace_variance=np.array([stage.variance for stage in run.stages]),
+            trace_discarded_weight=np.array([stage.discarded for stage in run.stages]),
+            observables=observables,
+            state=state,
+            hit_bond_limit=bool(hit_bond),
+            hit_memory_limit=bool(hit_memory),
+        )
+
+    def _single(self) -> GroundState:
+        from manybody.quantum.operators import sparse_operator
+
+        values = np.linalg.eigvalsh(sparse_operator(self.op).toarray())
+        return GroundState(float(values[0]), self.limits.floor, "converged", "", "exact", bond_dimension=1)
+
+    def _save(self, run: Run) -> None:
+        if self.checkpoint is None or time.monotonic() - self.saved < SAVE_EVERY:
+            return
+        self.checkpoint.save(save_run(run, self.problem, self.op))
+        self.saved = time.monotonic()
+
+    def _restored(self) -> Run | None:
+        """The run of a checkpoint; None where there is none or it belongs to another operator."""
+        data = self.checkpoint.load() if self.checkpoint is not None else None
+        if not data:
+            return None
+        arrays = matrix_product_state.unpack(data)
+        if arrays["problem"].tobytes().decode() != _identity(self.op):
+            return None
+        state = matrix_product_state.state_of(arrays)
+        if not (np.array_equal(state.order, self.problem.order) and np.allclose(state.frames, self.problem.frames)):
+            return None
+        levels = np.array([local.size for local in state.local])
+        if not np.array_equal(levels, self.problem.levels):
+            self.problem = self.problem.with_levels(levels)
+        chain = Chain(list(self.problem.local), list(self.problem.sites), state.bonds, state.tensors, state.total)
+        chain.prepare()
+        stages = [Stage(int(row[0]), *row[1:].tolist()) for row in arrays["stages"]]
+        allowed = float(arrays["allowed"][0])
+        return Run(chain, self.limits, self.rng, self._reporter(state.total), stages, allowed)
+
+
+def save_run(run: Run, problem: Problem, op: SpinOperator) -> bytes:
+    """State, stages and truncation of a run in the middle."""
+    state = matrix_product_state.of_chain(run.chain, problem.order, op.spins, problem.frames)
+    arrays = matrix_product_state.arrays_of(state)
+    arrays["stages"] = np.array([astuple(stage) for stage in run.stages])
+    arrays["allowed"] = np.array([run.allowed])
+    arrays["problem"] = np.frombuffer(_identity(op).encode(), np.uint8)
+    return matrix_product_state.pack(arrays)
+
+
+def _identity(op: SpinOperator) -> str:
+    return op.symbol.fingerprint() + op.spins.tobytes().hex()
+
+
+class _FileCheckpoint:
+    def __init__(self, path: Path):
+        self.path = path
+
+    def load(self) -> bytes | None:
+        return self.path.read_bytes() if self.path.exists() else None
+
+    def save(self, data: bytes) -> None:
+        partial = self.path.with_name(self.path.name + ".partial")
+        partial.write_bytes(data)
+        partial.replace(self.path)
+
+
+def _as_checkpoint(checkpoint):
+    return _FileCheckpoint(Path(checkpoint)) if isinstance(checkpoint, str | Path) else checkpoint
