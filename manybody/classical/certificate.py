@@ -10,7 +10,7 @@ import numpy as np
 
 from manybody.classical.clusters import cluster_sum
 from manybody.classical.distinct import coupled_sites
-from manybody.classical.minimize import ClassicalResult, MinimizeSettings, QuadraticProblem, minimize, rescaled
+from manybody.classical.minimize import MinimizeSettings, QuadraticProblem, rescaled
 from manybody.classical.multipliers import dual_bound, dual_form, multipliers_at
 from manybody.classical.relaxation import relax, rounded
 from manybody.model.energy import EnergyFunction
@@ -62,22 +62,6 @@ def certify(f: EnergyFunction, configuration: np.ndarray, settings: CertificateS
     prover = Prover(f, settings or CertificateSettings())
     prover.improve(configuration, relaxation=True)
     return prover.certificate(configuration)
-
-
-def minimize_with_certificate(
-    f: EnergyFunction,
-    settings: MinimizeSettings | None = None,
-    certificate_settings: CertificateSettings | None = None,
-) -> tuple[ClassicalResult, Certificate]:
-    """Minimum and certificate together: starts are spent only until the minimum is proven.
-
-    A few starts and their own multipliers come first; where these prove nothing the relaxation is solved once, its roundings are the next
-    starts, and its bound ends the search as soon as a configuration reaches it.
-    """
-    prover = Prover(f, certificate_settings or CertificateSettings())
-    result = minimize(f, settings, proof=prover)
-    prover.improve(result.configuration, relaxation=True)
-    return result, prover.certificate(result.configuration)
 
 
 class Prover:

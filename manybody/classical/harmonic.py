@@ -1,157 +1,230 @@
-"""The first quantum correction: harmonic fluctuations about a classical minimum.
+"""The first quantum correction e_1, minimized over everything that ties classically: selection by quantum fluctuations.
 
-At a minimum n*, A is the 2N x 2N Riemannian Hessian of f in orthonormal tangent frames (e_1, e_2 = n x e_1). Its symplectic eigenvalues
-omega_k >= 0 are the moduli of the eigenvalues +- i omega of J A, equal to the singular values (each twice) of A^(1/2) J A^(1/2). With the
-quantized energy E = f_min + e_1 / S + O(1/S^2),
-
-    e_1 = 1/2 sum omega + kappa tr A,     kappa = +1/4 toeplitz, 0 weyl, -1/4 wick,
-
-and `substitution` as `wick` plus the 1/S part of its lower symbol at n* (manybody.model.quantization.lower_symbol_correction).
-The symmetric form keeps small frequencies to machine precision where an eigenvalue solver for J A loses half the digits at zero modes.
+Where minima form a manifold, or several inequivalent minima tie, the quantum ground energy to order 1/S is f_min plus the LOWEST e_1 / S
+(Villain et al. 1980, J. Phys. France 41, 1263; Henley 1989, Phys. Rev. Lett. 62, 2056). Manifolds are explored along the null
+vectors of the Hessian: step, fall back onto the manifold by Newton steps, compare. Configurations made as collinear, or as non-collinear, as
+the manifold allows are tried beside the given ones, since e_1 often is lowest at a kink there that no small step hits exactly.
 """
 
 from dataclasses import dataclass
 
 import numpy as np
-import scipy.sparse as sp
-from scipy.linalg import svdvals
 
-from manybody.classical.distinct import coupled_sites
-from manybody.classical.minimize import rescaled
-from manybody.classical.sphere_product import tangent_frames
+from manybody.classical.frequencies import Fluctuations, HarmonicTrouble, UnstablePoint, fluctuations
+from manybody.classical.minimize import (
+    ClassicalResult,
+    GeneralProblem,
+    MinimizeSettings,
+    QuadraticProblem,
+    minimize,
+    rescaled,
+)
+from manybody.classical.sphere_product import normalized, project, retract
+from manybody.model.couplings import biquadratic
 from manybody.model.energy import EnergyFunction
-from manybody.model.quantization import RULES, lower_symbol_correction
-
-KAPPA = {"toeplitz": 0.25, "weyl": 0.0, "wick": -0.25, "substitution": -0.25}
-ZERO_MODE = 1e-9  # eigenvalues of A and frequencies below this share of the largest eigenvalue of A count as zero
-UNSTABLE = 1e-7  # eigenvalues of A below minus this share of the largest modulus mean that the point is no minimum
-STATIONARY = 1e-6  # largest tangential gradient at a site, relative to the largest eigenvalue of A
-DENSE_SITES = 1500  # sites of one connected cluster up to which the frequencies are computed
-SPLIT_SITES = 4000  # the same where in-plane and out-of-plane motion separate
 
 
-class UnstablePoint(ValueError):
-    """The configuration is not a minimum: the harmonic energy is not defined there."""
-
-
-class TooLarge(ValueError):
-    """More sites than a dense computation of the frequencies affords."""
+__all__ = ["HarmonicCorrection", "HarmonicTrouble", "SelectionSettings", "UnstablePoint", "harmonic_correction"]
 
 
 @dataclass(frozen=True)
-class Fluctuations:
-    """Frequencies (N,) ascending, zero_modes among them, and tr A, all in the units of f and for one configuration.
+class SelectionSettings:
+    """evaluations: how many configurations may be compared, reduced for large systems: evaluations x sites^3 <= work.
 
-    flat: tangent vectors (k, N, 3) spanning the null space of A (its own zero modes, which move the configuration at no cost).
+    tie: energies within this distance, relative to |f - f_mean|, tie. seed: of the random steps along the manifold. step: the smallest one.
     """
 
+    evaluations: int = 300
+    work: float = 2e9
+    tie: float = 1e-9
+    seed: int = 1
+    step: float = 1e-7
+
+
+@dataclass(frozen=True)
+class HarmonicCorrection:
+    """e1 of the selected configuration (N, 3): E = f_min + e1 / S + O(1/S^2).
+
+    frequencies (N,) ascending and trace = tr A at it; zero_modes of the frequencies. spread: largest minus smallest e1 met among the
+    configurations that tie (0 where there is one). evaluations: how many were compared. exhausted: the search along a manifold ended
+    because e1 no longer fell, not because the allowed evaluations were spent.
+    """
+
+    e1: float
     frequencies: np.ndarray
     zero_modes: int
     trace: float
-    flat: np.ndarray
-
-    def e1(self, f: EnergyFunction, n: np.ndarray, rule: str) -> float:
-        if rule not in RULES:
-            raise ValueError(f"rule must be one of {', '.join(RULES)}, got {rule!r}")
-        value = 0.5 * float(self.frequencies.sum()) + KAPPA[rule] * self.trace
-        if rule == "substitution":
-            value += float(lower_symbol_correction(f).value(n))
-        return value
+    spread: float
+    configuration: np.ndarray
+    evaluations: int
+    exhausted: bool
 
 
-def fluctuations(f: EnergyFunction, n: np.ndarray) -> Fluctuations:
-    """Harmonic frequencies of f at a minimum n (N, 3).
+def harmonic_correction(
+    f: EnergyFunction,
+    n: np.ndarray | ClassicalResult,
+    rule: str,
+    settings: SelectionSettings | None = None,
+) -> HarmonicCorrection:
+    """First quantum correction of f under a rule, minimized over the configurations that tie.
 
-    Connected clusters are treated one by one; sites on which f does not depend have frequency zero. Raises UnstablePoint where n is not
-    stationary or A has a negative eigenvalue, TooLarge beyond DENSE_SITES sites in a cluster (SPLIT_SITES for coplanar configurations
-    whose motions in and out of the plane separate). Cost: a few dense decompositions of 2N x 2N, or N x N where they separate.
+    n: a minimum (N, 3), several (M, N, 3) with the lowest first, or the result of `minimize`; all that tie with the lowest are compared.
+    Raises HarmonicTrouble (UnstablePoint, TooLarge) as `fluctuations` does at the lowest.
     """
-    n = np.asarray(n, dtype=float)
-    if n.shape != (f.sites, 3):
-        raise ValueError(f"the configuration must have shape ({f.sites}, 3), got {n.shape}")
-    if not coupled_sites(f).any():
-        return Fluctuations(np.zeros(f.sites), f.sites, 0.0, np.zeros((0, f.sites, 3)))
-    scaled, exponent = rescaled(f)
-    gradient = np.linalg.norm(scaled.gradient(n), axis=1).max()
-    hessian = scaled.hessian_sparse(n)
-    size = max(float(abs(hessian).sum(axis=1).max()), gradient, 1e-300)
-    if gradient > STATIONARY * size:
-        raise UnstablePoint(
-            f"the configuration is not stationary: its gradient is {gradient / size:.1e} of the largest curvature; "
-            "minimize first"
-        )
-    frequencies, flat = np.zeros(f.sites), []
-    for cluster in f.components():
-        rows = (3 * cluster[:, None] + np.arange(3)).ravel()
-        part = sp.csr_array(hessian[rows][:, rows])
-        found, modes = _cluster_frequencies(part, n[cluster], size)
-        frequencies[cluster] = found
-        for mode in modes:
-            whole = np.zeros((f.sites, 3))
-            whole[cluster] = mode
-            flat.append(whole)
-    frequencies = np.sort(frequencies)
-    zero = frequencies <= ZERO_MODE * size
-    frequencies[zero] = 0.0
-    return Fluctuations(
-        frequencies=np.ldexp(frequencies, exponent),
-        zero_modes=int(zero.sum()),
-        trace=float(np.ldexp(hessian.diagonal().sum(), exponent)),
-        flat=np.array(flat).reshape(-1, f.sites, 3),
+    settings = settings or SelectionSettings()
+    if isinstance(n, ClassicalResult):
+        candidates = np.array([m.configuration for m in n.minima])
+    else:
+        candidates = np.asarray(n, dtype=float)
+        candidates = candidates[None] if candidates.ndim == 2 else candidates
+    configuration = candidates[0]
+    search = _Search(f, configuration, rule, settings)
+    search.visit(configuration, must=True)
+    if search.spent < search.allowed:
+        for candidate in candidates[1:]:
+            search.visit(candidate)
+        if len(search.flexible(search.best)):
+            for candidate in search.shaped():
+                search.visit(candidate)
+            search.follow()
+            search.flatten()
+    best = search.best
+    return HarmonicCorrection(
+        e1=best.e1,
+        frequencies=best.fluctuations.frequencies,
+        zero_modes=best.fluctuations.zero_modes,
+        trace=best.fluctuations.trace,
+        spread=search.highest - best.e1,
+        configuration=best.configuration,
+        evaluations=search.spent,
+        exhausted=search.exhausted,
     )
 
 
-def _cluster_frequencies(hessian: sp.csr_array, n: np.ndarray, size: float) -> tuple[np.ndarray, np.ndarray]:
-    """Frequencies (N,) and null vectors (k, N, 3) of one connected cluster."""
-    sites = len(n)
-    e1, e2 = tangent_frames(n, _common_normal(n))
-    first, second = _columns(e1), _columns(e2)
-    mixed = first.T @ (hessian @ second)
-    separate = abs(mixed).max() <= 1e-13 * size
-    limit = SPLIT_SITES if separate else DENSE_SITES
-    if sites > limit:
-        raise TooLarge(f"{sites} connected sites, the harmonic frequencies are computed for at most {limit} here")
-    one, two = (first.T @ (hessian @ first)).toarray(), (second.T @ (hessian @ second)).toarray()
-    if separate:
-        roots, modes = [], []
-        for block, frame in ((one, e1), (two, e2)):
-            values, vectors, null = _nonnegative(block, size)
-            roots.append(vectors * np.sqrt(values))
-            modes.append(np.einsum("ik,ia->kia", null, frame))
-        # K = A_2^(1/2) A_1^(1/2): its singular values are the frequencies
-        found = svdvals(roots[1].T @ roots[0]) if min(r.shape[1] for r in roots) else np.zeros(0)
-        modes = np.concatenate(modes)
-    else:
-        a = np.block([[one, mixed.toarray()], [mixed.T.toarray(), two]])
-        values, vectors, null = _nonnegative(0.5 * (a + a.T), size)
-        root = vectors * np.sqrt(values)
-        turned = np.concatenate([root[sites:], -root[:sites]])
-        found = svdvals(root.T @ turned)[::2] if root.shape[1] else np.zeros(0)
-        modes = np.einsum("ik,ia->kia", null[:sites], e1) + np.einsum("ik,ia->kia", null[sites:], e2)
-    frequencies = np.zeros(sites)
-    frequencies[: len(found)] = found
-    return frequencies, modes
+@dataclass(frozen=True)
+class _Point:
+    configuration: np.ndarray
+    fluctuations: Fluctuations
+    e1: float
 
 
-def _nonnegative(block: np.ndarray, size: float) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
-    """Positive eigenvalues, their vectors, and the null vectors of a symmetric matrix that must not have negative ones."""
-    values, vectors = np.linalg.eigh(block)
-    if values[0] < -UNSTABLE * size:
-        raise UnstablePoint(
-            f"the configuration is not a minimum: its curvature is negative in some direction ({values[0] / size:.1e} of the largest)"
-        )
-    kept = values > ZERO_MODE * size
-    return values[kept], vectors[:, kept], vectors[:, ~kept]
+class _Search:
+    def __init__(self, f: EnergyFunction, configuration: np.ndarray, rule: str, settings: SelectionSettings):
+        self.f, self.rule, self.settings = f, rule, settings
+        self.lowest = float(f.value(configuration))
+        self.tie = settings.tie * abs(self.lowest - f.mean)
+        self.generator = np.random.default_rng(settings.seed)
+        largest = max(len(cluster) for cluster in f.components())
+        self.allowed = int(np.clip(settings.work / largest**3, 1, settings.evaluations))
+        self.spent, self.exhausted = 0, True
+        self.axes = f.symmetry_axes()
+        scaled, _ = rescaled(f)
+        newton = MinimizeSettings(starts=1, sweeps=0)
+        self.problem = QuadraticProblem(scaled, newton) if scaled.is_quadratic else GeneralProblem(scaled, newton)
+        self.best: _Point | None = None
+        self.highest = -np.inf
 
+    def visit(self, configuration: np.ndarray, must: bool = False) -> _Point | None:
+        """Evaluate e1 where the configuration ties and is a minimum; None elsewhere. `must`: raise instead."""
+        if self.spent >= self.allowed + 5 and not must:
+            self.exhausted = False
+            return None
+        if not must and abs(float(self.f.value(configuration)) - self.lowest) > self.tie:
+            return None
+        self.spent += 1
+        try:
+            found = fluctuations(self.f, configuration)
+        except UnstablePoint:
+            if must:
+                raise
+            return None
+        point = _Point(configuration, found, found.e1(self.f, configuration, self.rule))
+        self.highest = max(self.highest, point.e1)
+        if self.best is None or self._better(point):
+            self.best = point
+        return point
 
-def _common_normal(n: np.ndarray) -> np.ndarray | None:
-    """A unit vector orthogonal to all rows of n to 1e-12, or None."""
-    values, vectors = np.linalg.eigh(n.T @ n)
-    normal = vectors[:, 0]
-    return normal if np.abs(n @ normal).max() <= 1e-12 and values[0] <= 1e-20 * len(n) else None
+    def _better(self, point: _Point) -> bool:
+        """Lower e1; at a difference that rounding can make beside a kink, where e1 is good to half the digits, more zero modes."""
+        best = self.best
+        noise = 1e-8 * max(float(np.sum(best.fluctuations.frequencies)), abs(best.e1))
+        if abs(point.e1 - best.e1) <= noise and point.fluctuations.zero_modes != best.fluctuations.zero_modes:
+            return point.fluctuations.zero_modes > best.fluctuations.zero_modes
+        return point.e1 < best.e1
 
+    def flexible(self, point: _Point) -> np.ndarray:
+        """Orthonormal null vectors (k, N, 3) of the Hessian that are not common rotations f allows."""
+        flat = point.fluctuations.flat
+        rotations = np.cross(self.axes[:, None, :], point.configuration[None])
+        if not len(flat):
+            return flat
+        basis = flat.reshape(len(flat), -1)
+        if len(rotations):
+            turned = rotations.reshape(len(rotations), -1)
+            left, weight, right = np.linalg.svd(turned, full_matrices=False)
+            span = right[weight > 1e-8 * max(weight[0], 1e-300)]
+            basis = basis - (basis @ span.T) @ span
+        _, weight, right = np.linalg.svd(basis, full_matrices=False)
+        return right[weight > 1e-5].reshape(-1, self.f.sites, 3)
 
-def _columns(frame: np.ndarray) -> sp.csr_array:
-    """(3 N, N): column i holds the frame vector of site i."""
-    sites = len(frame)
-    return sp.csr_array((frame.ravel(), (np.arange(3 * sites), np.repeat(np.arange(sites), 3))), shape=(3 * sites, sites))
+    def shaped(self) -> list[np.ndarray]:
+        """Minima of f with a small preference for collinear, or for orthogonal, neighbours: e1 is often extremal there."""
+        pairs = {tuple(sites) for g in self.f.groups for sites in g.sites.tolist() if len(sites) == 2}
+        if not pairs or self.f.sites > 400:
+            return []
+        scaled, _ = rescaled(self.f)
+        extra = biquadratic(self.f.sites, np.array(sorted(pairs)), 1.0)
+        found = []
+        for sign in (-1.0, 1.0):
+            starts = [self.best.configuration]
+            turned = [retract(n, 0.2 * self.generator.standard_normal(n.shape)) for n in starts for _ in range(2)]
+            settings = MinimizeSettings(starts=4, seed=self.settings.seed, tolerance=1e-9)
+            result = minimize(scaled + sign * 0.02 * extra, settings, extra_starts=np.array(starts + turned))
+            found += [self.settled(m.configuration) for m in result.minima[:3]]
+        return found
+
+    def flatten(self) -> None:
+        """Put the best configuration exactly into its plane or onto its line, if it is close to one."""
+        n = self.best.configuration
+        _, _, axes = np.linalg.svd(n, full_matrices=False)
+        for kept in (1, 2):
+            flat = n @ axes[:kept].T @ axes[:kept]
+            if np.linalg.norm(flat - n, axis=1).max() < 0.05:
+                self.visit(self.settled(normalized(flat)))
+                return
+
+    def settled(self, configuration: np.ndarray) -> np.ndarray:
+        """The minimum of f next to the configuration: Newton steps alone, which change the flat directions least."""
+        return self.problem.descend(configuration[None]).configurations[0]
+
+    def follow(self) -> None:
+        """Random steps along the null vectors, longer after success and shorter after failures."""
+        step, failures, flat_rounds = 0.5, 0, 0
+        start = self.best.e1
+        directions = self.flexible(self.best)
+        scale = max(abs(start), float(self.best.fluctuations.frequencies.sum()), 1e-300)
+        seen = 0.0
+        while step > self.settings.step and len(directions):
+            if self.spent >= self.allowed:
+                self.exhausted = False
+                return
+            mixed = np.tensordot(self.generator.standard_normal(len(directions)), directions, axes=1)
+            mixed *= step * np.sqrt(self.f.sites) / np.linalg.norm(mixed)
+            before = self.best
+            for sign in (1.0, -1.0):
+                moved = project(before.configuration, sign * mixed)
+                point = self.visit(self.settled(retract(before.configuration, moved)))
+                if point is not None:
+                    seen = max(seen, abs(point.e1 - before.e1))
+                if self.best is not before:
+                    break
+            if self.best.e1 < before.e1 - 1e-13 * scale:
+                directions = self.flexible(self.best)
+                step, failures = min(1.5 * step, 1.0), 0
+            else:
+                failures += 1
+                if failures > min(2 * len(directions), 6):
+                    flat_rounds += 1
+                    if seen <= 1e-9 * scale and flat_rounds == 2:
+                        return  # e1 is the same everywhere on the manifold
+                    step, failures = 0.3 * step, 0

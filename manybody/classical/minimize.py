@@ -72,12 +72,14 @@ def minimize(
     settings: MinimizeSettings | None = None,
     extra_starts: np.ndarray | None = None,
     proof: Callable[[np.ndarray], bool | np.ndarray] | None = None,
+    report: Callable[[dict], None] | None = None,
 ) -> ClassicalResult:
     """Search the global minimum of f.
 
     extra_starts: (r, N, 3) configurations tried first, beside settings.starts. proof: called with the lowest
     configuration (N, 3) after every round of starts; True ends the search, an array (r, N, 3) holds starts to try next
-    (not counted in settings.starts either), anything else lets the search go on. f that is constant returns at once.
+    (not counted in settings.starts either), anything else lets the search go on. report: called with
+    {"starts": used so far, "energy": lowest so far} after every round. f that is constant returns at once.
     Couplings of any size are scaled internally; the results are in the units of f.
     """
     settings = settings or MinimizeSettings()
@@ -93,6 +95,8 @@ def minimize(
     for batch in rounds:
         pool.add(*problem.descend(batch))
         used += len(batch)
+        if report is not None:
+            report({"starts": used, "energy": math.ldexp(pool.energy, exponent) + f.constant})
         answer = problem.is_lowest(pool.energy) or (proof is not None and proof(pool.configuration))
         if not isinstance(answer, bool) and len(answer):
             pool.add(*problem.descend(np.asarray(answer)))
