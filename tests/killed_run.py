@@ -64,8 +64,10 @@ def worker_processes(pid):
     return found
 
 
-def kill_and_resume(folder, kills, parts, workers, sleep, seed, within):
+def kill_and_resume(folder, kills, parts, workers, sleep, seed):
     """Kill runs at random moments, coordinator or a worker in turn, then let one finish.
+
+    A moment is a random number of parts after the start and up to 0.1 s; one in five a random time of starting up.
 
     Returns (results by key, times each part was computed, parts that were computed again although they had been
     finished, kills that hit a running process).
@@ -74,7 +76,14 @@ def kill_and_resume(folder, kills, parts, workers, sleep, seed, within):
     again, hits = [], 0
     for number in range(kills):
         process = start(folder, parts, workers, sleep)
-        time.sleep(draw.uniform(*within))
+        share = len(study(folder, parts, sleep)) / kills
+        if draw.random() < 0.2:
+            time.sleep(draw.uniform(0, 2.0 if workers else 0.4))
+        else:
+            wanted = len(computed(folder)) + draw.uniform(0, share)
+            while process.poll() is None and len(computed(folder)) < wanted:
+                time.sleep(0.005)
+            time.sleep(draw.uniform(0, 0.1))
         target = worker_processes(process.pid) if workers and number % 2 else []
         if target:
             with contextlib.suppress(Exception):

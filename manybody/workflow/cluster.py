@@ -14,6 +14,7 @@ import os
 import queue
 import time
 import uuid
+from collections.abc import Callable
 from concurrent.futures import ThreadPoolExecutor
 from pathlib import Path
 
@@ -85,12 +86,12 @@ class DaskExecutor:
 
     # what the engine calls
 
-    def start(self, parts: int) -> list[Slot]:
+    def start(self, parts: int, wait: Callable[[str], None]) -> list[Slot]:
         client = self._client = self.connect(parts)
         self.dashboard = getattr(client, "dashboard_link", "") or ""
         client.subscribe_topic(self.topic, self._on_message)
         client.subscribe_topic("all", self._on_change)
-        slots = self._wait_for_workers()
+        slots = self._wait_for_workers(wait)
         self._check_workers([slot.place for slot in slots])
         self._spawn(self._watch())
         return slots
@@ -214,12 +215,15 @@ class DaskExecutor:
             return self._client.run(function, *arguments, on_error="return")
         return {}
 
-    def _wait_for_workers(self) -> list[Slot]:
-        while True:
-            slots = self._slots(self._client.scheduler_info(n_workers=-1))
-            if slots:
-                return slots
+    def _wait_for_workers(self, wait: Callable[[str], None]) -> list[Slot]:
+        told = False
+        start = time.monotonic()
+        while not (slots := self._slots(self._client.scheduler_info(n_workers=-1))):
+            late = time.monotonic() - start > 5.0
+            wait("" if told or not late else "The cluster has no workers yet; waiting for the first. Ctrl-C stops.")
+            told = told or late
             time.sleep(0.2)
+        return slots
 
     def _check_workers(self, places: list[str]) -> None:
         import manybody

@@ -7,33 +7,28 @@ cost little, yet each is journaled for itself. A part counts as finished once th
 
 from __future__ import annotations
 
-import contextlib
-import heapq
 import json
-import signal
-import threading
 import time
 from collections import Counter, defaultdict, deque
 from collections.abc import Callable, Sequence
 from dataclasses import replace
 
 from manybody.workflow.costs import CostModel, gigabytes
+from manybody.workflow.interrupts import Interrupts
 from manybody.workflow.journal import Journal
 from manybody.workflow.progress import Display
 from manybody.workflow.tasks import Batch, Counts, EngineError, Interrupted, Outcome, RunPart, Slot, Task
+from manybody.workflow.waiting import Waiting
 
 ATTEMPTS = 3  # how often a part may be in hand when its worker dies
-BATCH_SECONDS = 0.3  # expected length of a batch of short parts
 SLICE_SECONDS = 1.0  # a batch that takes longer than this hands back what it has
-BATCH_PARTS = 200
-UNKNOWN_PARTS = 8  # parts per batch while nothing of their kind has been measured
 PREFETCH_SECONDS = 2.0  # a worker gets its next batch ahead of time while its present ones are shorter than this
 GRACE = 30.0  # seconds that parts in hand are given after the first Ctrl-C
 CACHE = 64e6  # bytes of results kept at hand for the parts that need them
+IDLE = 60.0  # seconds without anything to do before saying so
 NOTE_EVERY = 10.0  # seconds between notes in the journal on what is running
 MEANWHILE = 900.0  # seconds between writings of the results so far
 LEFT_EVERY = 3.0  # seconds between estimates of the time left
-SKIP = 64  # parts looked at for one that fits a worker's free memory
 
 
 def pending(tasks: Sequence[Task], journal: Journal, retry_failed: bool = False) -> list[Task]:
@@ -60,40 +55,40 @@ def run_tasks(
     Raises Interrupted after a first Ctrl-C (a second one raises KeyboardInterrupt at once), EngineError when no cluster
     can be had or it is lost, JournalError when the disk fails; whatever was finished before is in the journal.
     """
-    return _Run(tasks, run_part, journal, executor, display or Display(), attempts, retry_failed, meanwhile).go()
+    run = _Run(tasks, run_part, journal, executor, display or Display(), attempts, meanwhile)
+    run.sort_out(retry_failed)
+    return run.go()
 
 
 class _Run:
-    def __init__(self, tasks, run_part, journal, executor, display, attempts, retry_failed, meanwhile):
+    def __init__(self, tasks, run_part, journal, executor, display, attempts, meanwhile):
         self.tasks = {task.key: task for task in tasks}
         self.run_part, self.journal, self.executor, self.display = run_part, journal, executor, display
         self.attempts_allowed = attempts
         self.meanwhile, self.meanwhile_at = meanwhile, time.monotonic() + MEANWHILE
         self.noted_at, self.new = float("-inf"), 0
+        self.left, self.left_at = float("nan"), float("-inf")
         self.costs = CostModel()
+        self.waiting = Waiting(self.tasks, self.costs)
+        self.status: dict[str, str] = {}
+        self.tally: Counter[str] = Counter()
+        self.reused = 0
         self.tries: dict[str, int] = defaultdict(int)
         self.slots: dict[str, Slot] = {}
         self.busy: dict[str, deque[Batch]] = {}
         self.batches: dict[int, Batch] = {}
         self.numbers = 0
-        self.ready: list[tuple[float, int, str]] = []
-        self.suspects: deque[str] = deque()
-        self.sorted_with = 0  # measurements behind the present order
-        self.order = {key: place for place, key in enumerate(self.tasks)}
-        self.blockers: dict[str, int] = {}
-        self.dependents: dict[str, list[str]] = defaultdict(list)
         self.users: dict[str, int] = defaultdict(int)
         self.cache: dict[str, bytes] = {}
         self.cached = 0
-        self.stop = False
+        self.interrupts = Interrupts()
         self.deadline = float("inf")
-        self._sort_out(retry_failed)
 
     # what there is to do
 
-    def _sort_out(self, retry_failed: bool) -> None:
+    def sort_out(self, retry_failed: bool) -> None:
+        """Take over what the journal has, and see what waits for what."""
         entries = self.journal.entries()
-        self.status: dict[str, str] = {}
         for key, task in self.tasks.items():
             entry = entries.get(key)
             if entry is None:
@@ -103,31 +98,21 @@ class _Run:
                 self.status[key] = "finished"
             elif entry.status == "failed" and not retry_failed:
                 self.status[key] = "failed"
-        self.reused = sum(status == "finished" for status in self.status.values())
         self.tally = Counter(self.status.values())
-        self.left, self.left_at = 0.0, float("-inf")
+        self.reused = self.tally["finished"]
         blocked = []
-        for key, task in self.tasks.items():
-            if key in self.status:
-                continue
+        for key in self.missing():
+            task = self.tasks[key]
             missing = [name for name in task.depends if self.status.get(name) != "finished"]
             for name in missing:
                 if name not in self.tasks:
                     raise ValueError(f"{task.label} depends on {name}, which is no task of this study")
-                self.dependents[name].append(key)
+            self.waiting.add(key, missing)
             for name in task.depends:
                 self.users[name] += 1
-            self.blockers[key] = len(missing)
             if any(self.status.get(name) == "failed" for name in missing):
                 blocked.append(key)
-        self._blocked_at_start = blocked
-
-    def _push(self, key: str) -> None:
-        task = self.tasks[key]
-        following = (self.tasks[name] for name in self.dependents.get(key, ()))
-        tail = max((self.costs.seconds(other.kind, other.seconds) for other in following), default=0.0)
-        seconds = self.costs.seconds(task.kind, task.seconds) + tail
-        heapq.heappush(self.ready, (-seconds, self.order[key], key))
+        self._finish([(key, self._because(key)) for key in blocked])
 
     def missing(self) -> list[str]:
         return [key for key in self.tasks if key not in self.status]
@@ -135,67 +120,65 @@ class _Run:
     # the run
 
     def go(self) -> Counts:
-        if self._blocked_at_start:
-            self._finish([(key, self._because(key)) for key in self._blocked_at_start])
         missing = self.missing()
         if not missing:
             return self._count()
-        started = False
-        with self._signals():
+        with self.interrupts:
             try:
                 widest = Counter(self.tasks[key].kind for key in missing).most_common(1)[0][1]
-                slots = self.executor.start(widest)
-                started = True
-                self._set_slots(slots)
+                self._set_slots(self.executor.start(widest, self._wait))
                 self._refuse()
-                for key in self.missing():
-                    if self.blockers[key] == 0:
-                        self._push(key)
+                self.waiting.release(self.missing())
                 self.display.start(self._count(), self.executor.dashboard, len(self.tasks))
                 self._loop()
             except BaseException:
                 self.display.stop()
                 self.executor.close(at_once=True)
                 raise
-            finally:
-                if started:
-                    self.display.stop()
-            self.executor.close(at_once=self.stop)
+            self.display.stop()
+            self.executor.close(at_once=self.interrupts.stop)
         if self.missing():
             raise Interrupted("stopped")
         return self._count()
 
+    def _wait(self, what: str) -> None:
+        """Called by the executor while it waits, now and then, with what it waits for ("" to say nothing)."""
+        if self.interrupts.stop:
+            raise Interrupted("stopped")
+        if what:
+            self.display.say(what)
+        self.journal.touch()
+
     def _loop(self) -> None:
         idle_since = time.monotonic()
         while True:
-            if self.stop and self.deadline == float("inf"):
+            if not self.interrupts.stop:
+                self._dispatch()
+            elif self.deadline == float("inf"):
                 self.deadline = time.monotonic() + GRACE
                 self.executor.ask_to_stop()
                 wait = f"waiting up to {GRACE:.0f} s for {self._in_hand()} parts in hand"
                 self.display.say(f"Stopping: {wait}; Ctrl-C again stops at once.")
-            if not self.stop:
-                self._dispatch()
-            if not self.batches and (self.stop or not (self.ready or self.suspects)):
+            if not self.batches and (self.interrupts.stop or not self.waiting):
                 return
             if time.monotonic() > self.deadline:
                 return
-            events = self.executor.events(0.2)
-            self._handle(events)
+            self._handle(self.executor.events(0.2))
             self._show()
             self._housekeeping()
-            if events or self.slots:
+            if self.batches:
                 idle_since = time.monotonic()
-            elif time.monotonic() - idle_since > 60:
-                self.display.say("There are no workers; waiting for some. Ctrl-C stops.")
+            elif time.monotonic() - idle_since > IDLE:
                 idle_since = time.monotonic()
+                size = gigabytes(self.waiting.smallest())
+                self.display.say(f"Waiting for a worker that can give {size} of memory to a part. Ctrl-C stops.")
 
     def _refuse(self) -> None:
         """Mark what no worker could hold, before anything starts."""
         most = max(slot.memory for slot in self.slots.values())
         refused = []
         for key in self.missing():
-            task = self.tasks[key]
-            need = self.costs.bytes(task.kind, task.bytes)
+            need = self.waiting.bytes(key)
             if need > most:
                 message = f"needs {gigabytes(need)} of memory; a worker can give {gigabytes(max(most, 0.0))}"
                 refused.append((key, Outcome(key, "refused", message=message, attempts=0)))
@@ -203,67 +186,47 @@ class _Run:
 
     # sending parts out
 
+    @property
+    def threads(self) -> int:
+        return sum(slot.threads for slot in self.slots.values())
+
     def _dispatch(self) -> None:
-        if self.costs.total >= 1.2 * self.sorted_with + 1:
-            self.sorted_with = self.costs.total
-            keys, self.ready = [key for *_, key in self.ready], []
-            for key in keys:
-                self._push(key)
-        for place in sorted(self.slots, key=lambda place: len(self.busy[place])):
-            while batch := self._next_batch(place):
+        self.waiting.resort()
+        places = sorted(self.slots, key=lambda place: len(self.busy[place]))
+        for place in places:
+            while len(self.busy[place]) < self.slots[place].threads and (batch := self._next_batch(place)):
                 self._send(batch)
+        for place in places:
+            while self._may_prefetch(place) and (batch := self._next_batch(place)):
+                self._send(batch)
+
+    def _may_prefetch(self, place: str) -> bool:
+        """Whether a busy worker should get a batch ahead of time: only while its own are short, and enough is left."""
+        busy, threads = self.busy[place], self.slots[place].threads
+        if self.waiting.suspects or not threads <= len(busy) < 2 * threads or self.waiting.ready <= self.threads:
+            return False
+        known = all(self.costs.known(task.kind) for batch in busy for task in batch.tasks)
+        return known and max(batch.seconds for batch in busy) <= PREFETCH_SECONDS
 
     def _next_batch(self, place: str) -> Batch | None:
         slot, busy = self.slots[place], self.busy[place]
         if busy and busy[0].alone:
             return None
-        if self.suspects:
-            # a part that was in hand when a worker died gets a worker for itself, so that no other pays for it
-            if not busy:
-                return self._batch(place, [self.suspects.popleft()], alone=True)
-            fewest = min(self.slots, key=lambda name: (len(self.busy[name]), name))
-            if place == fewest or len(busy) >= slot.threads:
-                return None
-        if not self.ready or len(busy) >= 2 * slot.threads:
-            return None
-        if len(busy) >= slot.threads:
-            longest = max(batch.seconds for batch in busy)
-            known = all(self.costs.known(task.kind) for batch in busy for task in batch.tasks)
-            if longest > PREFETCH_SECONDS or not known:
-                return None
         free = slot.memory - sum(batch.bytes for batch in busy)
-        return self._batch(place, self._choose(free), alone=False)
-
-    def _choose(self, free: float) -> list[str]:
-        """The longest part that fits, with as many more as make a batch worth sending."""
-        chosen: list[str] = []
-        skipped = []
-        seconds, limit = 0.0, BATCH_PARTS
-        share = max(1, len(self.ready) // (2 * max(sum(slot.threads for slot in self.slots.values()), 1)))
-        while self.ready and len(chosen) < limit and len(skipped) < SKIP:
-            item = heapq.heappop(self.ready)
-            task = self.tasks[item[2]]
-            if self.costs.bytes(task.kind, task.bytes) > free:
-                skipped.append(item)
-                continue
-            length = self.costs.seconds(task.kind, task.seconds)
-            if chosen and seconds + length > BATCH_SECONDS:
-                heapq.heappush(self.ready, item)
-                break
-            chosen.append(item[2])
-            seconds += length
-            limit = min(limit, share, BATCH_PARTS if self.costs.known(task.kind) >= UNKNOWN_PARTS else UNKNOWN_PARTS)
-        for item in skipped:
-            heapq.heappush(self.ready, item)
-        return chosen
+        if self.waiting.suspects:
+            # a part that was in hand when a worker died gets a worker for itself, so that no other pays for it
+            if not busy and (keys := self.waiting.take_suspect(free)):
+                return self._batch(place, keys, alone=True)
+            if place == min(self.slots, key=lambda name: (len(self.busy[name]), name)) and busy:
+                return None
+        return self._batch(place, self.waiting.take(free, self.threads), alone=False)
 
     def _batch(self, place: str, keys: list[str], alone: bool) -> Batch | None:
         if not keys:
             return None
         tasks = [self.tasks[key] for key in keys]
         self.numbers += 1
-        seconds = sum(self.costs.seconds(task.kind, task.seconds) for task in tasks)
-        need = max(self.costs.bytes(task.kind, task.bytes) for task in tasks)
+        seconds, need = sum(map(self.waiting.seconds, keys)), max(map(self.waiting.bytes, keys))
         return Batch(self.numbers, tasks, alone, seconds, need, place, time.monotonic())
 
     def _send(self, batch: Batch) -> None:
@@ -327,9 +290,9 @@ class _Run:
         for name in self.tasks[key].depends:
             self.users[name] += 1
         if self.tries[key]:
-            self.suspects.append(key)
+            self.waiting.suspect(key)
         else:
-            self._push(key)
+            self.waiting.push(key)
 
     def _blame(self, batch: Batch, reason: str) -> list[tuple[str, Outcome]]:
         """Count a try against every part of a batch; those out of tries have failed, the others get another."""
@@ -356,7 +319,7 @@ class _Run:
             else:
                 for task in batch.tasks:
                     self._again(task.key)
-        if not self.stop and not expected:
+        if not self.interrupts.stop and not expected:
             self.display.say(f"A worker on {slot.host} died; its parts will be tried again elsewhere.")
         return failed
 
@@ -395,14 +358,12 @@ class _Run:
                     if self.users[key] and self.cached + len(outcome.data) < CACHE:
                         self.cache[key] = outcome.data
                         self.cached += len(outcome.data)
-                for name in self.dependents.pop(key, []):
-                    self.blockers[name] -= 1
-                    if name in self.status:
-                        continue
-                    if outcome.status != "finished":
-                        following[name] = self._because(name)
-                    elif self.blockers[name] == 0 and name not in following:
-                        self._push(name)
+                    for name in self.waiting.unblock(key):
+                        if name not in self.status and name not in following:
+                            self.waiting.push(name)
+                else:
+                    names = [name for name in self.waiting.dependents(key) if name not in self.status]
+                    following.update((name, self._because(name)) for name in names)
             outcomes = list(following.items())
 
     # telling
@@ -432,13 +393,12 @@ class _Run:
         self.display.update(self._count(), batches)
 
     def _seconds_left(self, now: float) -> float:
-        threads = max(sum(slot.threads for slot in self.slots.values()), 1)
         running = {task.key for batch in self.batches.values() for task in batch.tasks}
         lengths = [max(batch.seconds - (now - batch.started), 0.1 * batch.seconds) for batch in self.batches.values()]
         for key in self.missing():
             if key not in running:
-                lengths.append(self.costs.seconds(self.tasks[key].kind, self.tasks[key].seconds))
-        return max(sum(lengths) / threads, max(lengths, default=0.0))
+                lengths.append(self.waiting.seconds(key))
+        return max(sum(lengths) / max(self.threads, 1), max(lengths, default=0.0))
 
     def _housekeeping(self) -> None:
         """Signs of life, what `status` should know, and now and then the results so far."""
@@ -456,23 +416,3 @@ class _Run:
             self.new = 0
             self.meanwhile()
             self.meanwhile_at = time.monotonic() + max(MEANWHILE, 20 * (time.monotonic() - now))
-
-    @contextlib.contextmanager
-    def _signals(self):
-        """First Ctrl-C (or SIGTERM): stop in good order. Second: at once."""
-        if threading.current_thread() is not threading.main_thread():
-            yield
-            return
-
-        def handle(number, frame):
-            if self.stop:
-                raise KeyboardInterrupt
-            self.stop = True
-
-        names = [signal.SIGINT, signal.SIGTERM]
-        old = {name: signal.signal(name, handle) for name in names}
-        try:
-            yield
-        finally:
-            for name, handler in old.items():
-                signal.signal(name, handler)

@@ -6,6 +6,7 @@ import queue
 import socket
 import threading
 import time
+from collections.abc import Callable
 
 from manybody.workflow.tasks import Batch, Slot
 from manybody.workflow.worker import run_batch
@@ -30,7 +31,7 @@ class InProcess:
         self._stopping = threading.Event()
         self._thread = threading.Thread(target=self._loop, name="manybody-parts", daemon=True)
 
-    def start(self, parts: int) -> list[Slot]:
+    def start(self, parts: int, wait: Callable[[str], None] | None = None) -> list[Slot]:
         self._thread.start()
         return [Slot("this process", socket.gethostname(), 1, self.memory)]
 

@@ -17,9 +17,9 @@ from manybody.workflow.engine import run_tasks
 from manybody.workflow.inprocess import InProcess
 from manybody.workflow.journal import Journal
 
-ROUNDS = (  # workers, parts, seconds of a part, kills per study, range of the moment of the kill
-    (0, 400, 0.02, 25, (0.2, 1.0)),
-    (2, 120, 0.05, 5, (1.0, 4.0)),
+ROUNDS = (  # workers, parts, seconds of a part, kills per study
+    (0, 400, 0.02, 25),
+    (2, 400, 0.02, 10),
 )
 
 
@@ -27,10 +27,10 @@ def main(kills=500, seed=1):
     done = hits = repeated = 0
     began = time.time()
     while done < kills:
-        workers, parts, sleep, each, within = ROUNDS[1 if done * 5 >= kills * 3 else 0]
+        workers, parts, sleep, each = ROUNDS[1 if done * 5 >= kills * 3 else 0]
         each = min(each, kills - done)
         with tempfile.TemporaryDirectory() as folder:
-            results, counts, twice, hit = kill_and_resume(folder, each, parts, workers, sleep, seed + done, within)
+            results, counts, twice, hit = kill_and_resume(folder, each, parts, workers, sleep, seed + done)
             with Journal(None) as journal:
                 tasks = study(folder, parts, 0)
                 run_tasks(tasks, run_fake, journal, InProcess(1e9))
