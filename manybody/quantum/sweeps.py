@@ -189,9 +189,9 @@ class _Solver:
         state = matrix_product_state.of_chain(run.chain, problem.order, self.op.spins, problem.frames)
         observables = {}
         if self.settings.observables:
-            from manybody.quantum.matrix_product_observables import observe
+            from manybody.quantum.matrix_product_observables import matrix_product_observables
 
-            observables = observe(run.chain, state, problem, self.settings.observables)
+            observables = matrix_product_observables(state, self.settings.observables, self.start, self.settings.seed)
         return GroundState(
             energy=last.energy + problem.constant,
             error=error,
