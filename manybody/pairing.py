@@ -23,6 +23,8 @@ from manybody.model.energy import EnergyFunction
 from manybody.model.quantization import quantize
 
 PARTS = ("classical", "harmonic", "quantum", "bounds")
+KEPT_NUMBERS = 4_000_000
+"""Distinct minima are handed on up to this many components in all: the lowest ones first."""
 
 
 @dataclass(frozen=True)
@@ -37,18 +39,19 @@ class ClassicalSettings:
             raise ValueError(f"starts must be at least 1 and seed at least 0, got {self.starts} and {self.seed}")
 
 
-def classical_part(f: EnergyFunction, settings: ClassicalSettings = ClassicalSettings(), report=None) -> dict:
+def classical_part(f: EnergyFunction, settings: ClassicalSettings | None = None, report=None) -> dict:
     """Classical minimum with its proof or best lower bound.
 
     Beside dataset variables: `configuration` (N, 3), `minima` (M, N, 3) distinct minima from the lowest up with
     `minima_energies` (M,) and `minima_counts` (M,) how often each was reached.
     """
+    settings = settings or ClassicalSettings()
     from manybody.classical.search import find_ground_state
 
     began = time.perf_counter()
     found = find_ground_state(f, starts=settings.starts, seed=settings.seed, report=report)
     result, proof = found.result, found.certificate
-    kept = result.minima[:16]
+    kept = result.minima[: max(1, KEPT_NUMBERS // (3 * f.sites))]
     return {
         "classical_energy": result.energy,
         "classical_energy_bound": proof.bound,
@@ -145,24 +148,28 @@ def bounds_part(f: EnergyFunction, spin: float, rule: str, settings, classical: 
 
     began = time.perf_counter()
     op = quantize(f, spin, rule)
-    starts = np.concatenate([classical["minima"], harmonic["selected"][None]])
-    starts = starts[: max(1, min(len(starts), 4_000_000 // (3 * f.sites)))]
-    part = {}
-    lower = op.lower_symbol()
-    coherent = find_ground_state(lower, starts=8, seed=1, extra_starts=starts, prove=False).result
+    starts = np.concatenate([harmonic["selected"][None], classical["minima"]])
+    part, messages = {}, []
+    # Both symbols are close to f, whose minima are among the starts: a few random ones suffice beside them.
+    coherent = find_ground_state(op.lower_symbol(), starts=8, extra_starts=starts, prove=False).result
     part["coherent_energy"] = coherent.energy
-    upper = find_ground_state(op.upper_symbol(), starts=8, seed=1, extra_starts=starts)
-    part["upper_symbol_certified"] = upper.certificate.certified
-    part["upper_symbol_energy"] = upper.certificate.bound
-    messages = []
-    starts = np.concatenate([coherent.configuration[None], starts])
-    product = product_energy(op, starts, seed=1)
-    part["product_energy"] = min(product.energy, coherent.energy)
+    proof = find_ground_state(op.upper_symbol(), starts=8, extra_starts=starts).certificate
+    if proof.rigorous:
+        part["upper_symbol_energy"] = proof.bound
+        part["upper_symbol_certified"] = proof.certified
+    else:
+        messages.append("no rigorous bound of the upper symbol is known")
+    product = product_energy(op, np.concatenate([coherent.configuration[None], starts]))
+    part["product_energy"] = product.energy
     if not product.converged:
         messages.append("the product state did not converge")
-    bound = cluster_bound(op, memory=settings.memory)
-    part["cluster_bound"] = bound.value
-    part["cluster_bound_kind"] = bound.kind
+    try:
+        clusters = cluster_bound(op, memory=settings.memory)
+    except ValueError as reason:
+        messages.append(str(reason))
+    else:
+        part["cluster_bound"] = clusters.value
+        part["cluster_bound_kind"] = clusters.kind.split()[0]
     part["bounds_message"] = "; ".join(messages)
     return part | {"bounds_seconds": time.perf_counter() - began}
 

@@ -108,9 +108,10 @@ _CLUSTER = (
         "classical_bound_method",
         "how the classical bound was obtained",
         dtype="flag",
-        flags=("multipliers", "relaxation", "clusters", "terms", "constant"),
+        flags=("multipliers", "relaxation", "clusters", "clusters_searched", "unfrustrated", "constant"),
         meaning="multipliers of the stationary point, optimal multipliers of the semidefinite relaxation, sum of "
-        "minima of small clusters, sum of the minima of single terms, or a constant function",
+        "exact minima of small clusters, sum of the lowest minima found of small clusters (not rigorous), every term "
+        "at its own minimum, or a constant function",
     ),
     Variable("classical_mean", "sphere average of the energy function", units="energy", meaning="f_mean"),
     Variable("classical_minima", "distinct minima found", units="1", dtype="count"),
@@ -187,7 +188,7 @@ _POINT = (
         "cluster_bound_kind",
         "clusters behind the cluster bound",
         dtype="flag",
-        flags=("whole", "bonds", "stars", "triangles", "chains", "blocks", "terms"),
+        flags=("bonds", "stars", "triangles", "tetrahedra", "plaquettes", "pieces", "sites"),
     ),
     Variable("product_energy", "energy of the best product state", units="energy", meaning="full mean-field energy"),
     Variable(
