@@ -133,7 +133,9 @@ def gap_against_sites(view):
     axes[0, 0].set_ylabel(f"quantum \N{MINUS SIGN} classical\nenergy per site ({unit_text(view.unit)})")
     below(axes[0, 0], dict(sorted(handles.items(), key=lambda item: not item[0].startswith("S ="))))
     what = (
-        " Solid: the form with the largest weight; open symbols at zero: limit of many sites." if extrapolated else ""
+        " Solid: leading form, over the sizes that were extrapolated; open symbols at zero: limit of many sites."
+        if extrapolated
+        else " No limit of many sites: that needs three sizes of one family."
     )
     source = (
         f" Stars: published energies minus this study's classical limit ({'; '.join(dict.fromkeys(cited))})."

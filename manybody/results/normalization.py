@@ -51,7 +51,7 @@ def title(normalization) -> str:
         return (
             "Energies are those of H = \N{GREEK CAPITAL LETTER SIGMA} J S\N{MIDDLE DOT}S, written with spin operators."
         )
-    return "Energies are normalized: those of the energy function on unit vectors, n = S/S under substitution."
+    return "Energies are normalized: those of the energy function on unit vectors, spin operators divided by S."
 
 
 def _degree(root, rules):

@@ -91,7 +91,7 @@ def fit_spins(spins, gap, error, scale, first=None, odd_sites=False, rule="") ->
     if found is None:
         return None
     columns, powers, order, parity, result = found
-    factor = (ONE_SIGN * student.ppf(0.8413, result.freedom)) ** 2 if result.tau > 0 else 1.0
+    factor = _inflation(result) ** 2
     coefficients, covariance = np.zeros((2, POWERS)), np.zeros((2, POWERS, POWERS))
     for row, odd in enumerate((False, True)):
         # coefficients of one class = spread @ fitted parameters
@@ -160,7 +160,13 @@ def _column(power, x, odd):
 
 
 def _first_alone(x, centre, sigma, columns, order, first):
-    if first is None or len(x) < columns.shape[1] + 2:
+    """e_1 and its standard error from the data alone. One more power than with e_1 known: else it takes up the rest."""
+    if first is None or len(x) < columns.shape[1] + 3:
         return np.nan, np.nan
-    result = fit(np.column_stack([x, columns]), centre, sigma, x ** (order + 1.0))
-    return float(result.coefficients[0]), float(ONE_SIGN * result.errors[0])
+    result = fit(np.column_stack([x, columns, x ** (order + 1.0)]), centre, sigma, x ** (order + 2.0))
+    return float(result.coefficients[0]), float(_inflation(result) * result.errors[0])
+
+
+def _inflation(result):
+    """Factor on standard errors that come from truncation, also for how few values there are to spare."""
+    return ONE_SIGN * student.ppf(0.8413, result.freedom) if result.tau > 0 else 1.0
