@@ -25,6 +25,9 @@ METHODS = {
 }
 
 
+FEW_CLUSTERS = 12  # inequivalent clusters that are worth minimizing for a quadratic function, beside its relaxation
+
+
 @dataclass(frozen=True)
 class CertificateSettings:
     """tolerance: largest distance of energy and bound that counts as proof, relative to |f - f_mean| at the configuration.
@@ -123,13 +126,15 @@ class Prover:
             self._offer(dual_bound(self.form, solution.multipliers), "relaxation")
             self.rank = solution.rank
             self.starts = rounded(self.form, solution, generator, self.settings.roundings)
-        if plain is None:
-            self._by_clusters()
+        if not self._reached(configuration) and self.f.sites <= self.settings.relaxed_sites:
+            self._by_clusters(FEW_CLUSTERS)
 
-    def _by_clusters(self) -> None:
+    def _by_clusters(self, most: int | None = None) -> None:
         if not self.clustered:
             self.clustered = True
-            clusters = cluster_sum(self.scaled, self.settings.seed)
+            clusters = cluster_sum(self.scaled, self.settings.seed, most)
+            if clusters is None:
+                return
             if self.bound == -math.inf:
                 self.rigorous = clusters.rigorous
             if clusters.rigorous or not self.rigorous:

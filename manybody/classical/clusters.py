@@ -4,8 +4,9 @@ f is written as a sum of functions of few sites: every term goes to the clusters
 is f again. Clusters are the bonds (the sets of sites of the terms) or, where they exist, triangles of bonds. Clusters that are
 equal up to the numbering of sites are minimized once.
 
-The minimum of a cluster is exact up to rounding where it is quadratic (dual bound) or a function of two vectors that common rotations leave
-unchanged (a polynomial in n_1.n_2); otherwise it is the lowest of many starts, and the bound is not rigorous.
+The minimum of a cluster is bounded rigorously by multipliers or the relaxation where it is quadratic, exactly where it is a polynomial in
+n_1.n_2, and by branch and bound for two vectors, or three with common rotations (small_clusters.py). Larger clusters of higher degree get
+the lowest of many starts: then the bound is not rigorous.
 """
 
 import itertools
@@ -18,6 +19,7 @@ from numpy.polynomial import chebyshev
 from manybody.classical.minimize import MinimizeSettings, QuadraticProblem, minimize
 from manybody.classical.multipliers import dual_bound, dual_form, multipliers_at
 from manybody.classical.relaxation import relax
+from manybody.classical.small_clusters import can_be_bounded, lower_bound
 from manybody.model.energy import EnergyFunction, Group
 
 
@@ -30,11 +32,25 @@ class ClusterSum:
     kind: str
 
 
-def cluster_sum(f: EnergyFunction, seed: int = 1) -> ClusterSum:
-    """The best of the cluster bounds of f, a rigorous one where there is one. `f` should be scaled to couplings of order one."""
+def cluster_sum(f: EnergyFunction, seed: int = 1, most: int | None = None) -> ClusterSum | None:
+    """The best of the cluster bounds of f, a rigorous one where there is one. `f` should be scaled to couplings of order one.
+
+    most: coverings with more inequivalent clusters than this are left out; None if no covering remains.
+    """
+    coverings = [(kind, _pieces(f, clusters)) for kind, clusters in _coverings(f)]
+    coverings = [(kind, pieces) for kind, pieces in coverings if most is None or len(pieces) <= most]
     known: dict[str, tuple[float, bool]] = {}
-    sums = [_sum_of(f, kind, clusters, known, seed) for kind, clusters in _coverings(f)]
-    return max(sums, key=lambda s: (s.rigorous, s.bound))
+    sums = []
+    for kind, pieces in coverings:
+        evaluations = int(np.clip(4_000_000 / len(pieces), 5_000, 400_000))
+        for name, (piece, _) in pieces.items():
+            if name not in known:
+                known[name] = _cluster_minimum(piece, seed, evaluations)
+        terms = [count * known[name][0] for name, (_, count) in pieces.items()]
+        rounding = 2.0**-50 * math.fsum(abs(term) for term in terms)
+        rigorous = all(known[name][1] for name in pieces)
+        sums.append(ClusterSum(f.constant + math.fsum(terms) - rounding, rigorous, kind))
+    return max(sums, key=lambda s: (s.rigorous, s.bound), default=None)
 
 
 def _coverings(f: EnergyFunction) -> list[tuple[str, list[tuple[int, ...]]]]:
@@ -62,7 +78,8 @@ def _coverings(f: EnergyFunction) -> list[tuple[str, list[tuple[int, ...]]]]:
     return coverings
 
 
-def _sum_of(f, kind: str, clusters: list[tuple[int, ...]], known: dict, seed: int) -> ClusterSum:
+def _pieces(f: EnergyFunction, clusters: list[tuple[int, ...]]) -> dict[str, tuple[EnergyFunction, int]]:
+    """fingerprint -> (share of f on a cluster, how many clusters have the same one)."""
     owners: dict[int, list[int]] = {}
     for number, cluster in enumerate(clusters):
         for site in cluster:
@@ -74,31 +91,33 @@ def _sum_of(f, kind: str, clusters: list[tuple[int, ...]], known: dict, seed: in
             for k in shared:
                 local = np.array([[clusters[k].index(site) for site in sites]])
                 parts[k].append(Group(group.key, local, block[None] / len(shared)))
-    minima, rigorous = [], True
+    pieces: dict[str, tuple[EnergyFunction, int]] = {}
     for cluster, groups in zip(clusters, parts, strict=True):
         piece = EnergyFunction(len(cluster), 0.0, groups)
         name = piece.fingerprint()
-        if name not in known:
-            known[name] = _cluster_minimum(piece, seed)
-        minima.append(known[name][0])
-        rigorous = rigorous and known[name][1]
-    rounding = 2.0**-50 * math.fsum(abs(m) for m in minima)
-    return ClusterSum(f.constant + math.fsum(minima) - rounding, rigorous, kind)
+        known, count = pieces.get(name, (piece, 0))
+        pieces[name] = (known, count + 1)
+    return pieces
 
 
-def _cluster_minimum(piece: EnergyFunction, seed: int) -> tuple[float, bool]:
+def _cluster_minimum(piece: EnergyFunction, seed: int, evaluations: int = 400_000) -> tuple[float, bool]:
     """(lower bound or lowest value found, whether it is a rigorous bound)."""
     size = sum(float(np.abs(g.coefficients).sum()) for g in piece.groups)
     found = minimize(piece, MinimizeSettings(starts=64, seed=seed))
+    best = -math.inf
     if piece.is_quadratic:
         form = dual_form(QuadraticProblem(piece, MinimizeSettings()).form)
         best = dual_bound(form, multipliers_at(form, found.configuration))
         if found.energy - best > 1e-9 * size:
             solution = relax(form, np.random.default_rng(seed), found.configuration)
             best = max(best, dual_bound(form, solution.multipliers))
-        return best, True
-    if piece.sites == 2 and len(piece.symmetry_axes()) == 3:
+    if piece.sites == 2 and len(piece.symmetry_axes()) == 3 and not piece.is_quadratic:
         return _function_of_product(piece) - 1e-13 * size, True
+    if found.energy - best > 1e-9 * size and can_be_bounded(piece):
+        tied = [m.configuration for m in found.minima if m.energy <= found.energy + 1e-9 * size]
+        best = max(best, lower_bound(piece, np.array(tied[:32]), evaluations))
+    if best > -math.inf:
+        return best, True
     return found.energy, False
 
 

@@ -147,10 +147,12 @@ class _Search:
     def _better(self, point: _Point) -> bool:
         """Lower e1; at a difference that rounding can make beside a kink, where e1 is good to half the digits, more zero modes."""
         best = self.best
-        noise = 1e-8 * max(float(np.sum(best.fluctuations.frequencies)), abs(best.e1))
-        if abs(point.e1 - best.e1) <= noise and point.fluctuations.zero_modes != best.fluctuations.zero_modes:
+        if abs(point.e1 - best.e1) <= self._noise() and point.fluctuations.zero_modes != best.fluctuations.zero_modes:
             return point.fluctuations.zero_modes > best.fluctuations.zero_modes
         return point.e1 < best.e1
+
+    def _noise(self) -> float:
+        return 1e-8 * max(float(np.sum(self.best.fluctuations.frequencies)), abs(self.best.e1))
 
     def flexible(self, point: _Point) -> np.ndarray:
         """Orthonormal null vectors (k, N, 3) of the Hessian that are not common rotations f allows."""
@@ -190,7 +192,9 @@ class _Search:
         for kept in (1, 2):
             flat = n @ axes[:kept].T @ axes[:kept]
             if np.linalg.norm(flat - n, axis=1).max() < 0.05:
-                self.visit(self.settled(normalized(flat)))
+                point = self.visit(self.settled(normalized(flat)))
+                if point is not None and abs(point.e1 - self.best.e1) <= self._noise():
+                    self.best = point
                 return
 
     def settled(self, configuration: np.ndarray) -> np.ndarray:
