@@ -17,7 +17,7 @@ from manybody.workflow.costs import CostModel, gigabytes
 from manybody.workflow.interrupts import Interrupts
 from manybody.workflow.journal import Journal
 from manybody.workflow.progress import Display
-from manybody.workflow.tasks import Batch, Counts, EngineError, Interrupted, Outcome, RunPart, Slot, Task
+from manybody.workflow.tasks import FOLLOWS, Batch, Counts, EngineError, Interrupted, Outcome, RunPart, Slot, Task
 from manybody.workflow.waiting import Waiting
 
 ATTEMPTS = 3  # how often a part may be in hand when its worker dies
@@ -337,7 +337,7 @@ class _Run:
         task = self.tasks[key]
         bad = next(name for name in task.depends if self.status.get(name) in ("failed", "refused"))
         verb = "was refused" if self.status[bad] == "refused" else "failed"
-        message = f"needs the {self.tasks[bad].kind} part of {self.tasks[bad].label}, which {verb}"
+        message = f"{FOLLOWS}{self.tasks[bad].kind} part of {self.tasks[bad].label}, which {verb}"
         return Outcome(key, self.status[bad], message=message, attempts=0)
 
     def _finish(self, outcomes: list[tuple[str, Outcome]]) -> None:

@@ -91,7 +91,7 @@ def run_part(payload: Payload, inputs: dict[str, dict], report, checkpoint) -> d
     f = payload.cluster.build().energy
     settings, keys = payload.settings, payload.keys
     if payload.part == "classical":
-        return pairing.classical_part(f, pairing.ClassicalSettings(settings.starts, settings.seed), report)
+        return pairing.classical_part(f, pairing.ClassicalSettings(settings.starts, settings.seed))
     classical = inputs[keys.classical]
     if payload.part == "harmonic":
         return pairing.harmonic_part(f, payload.rule, classical)

@@ -53,7 +53,9 @@ class Display:
         pass
 
     def _failure(self, task: Task, outcome: Outcome) -> str:
-        """One line about a part that failed or was refused; "" after the first few."""
+        """One line about a part that failed or was refused; "" for what follows from it, and after the first few."""
+        if outcome.follows:
+            return ""
         self._failures += 1
         if self._failures > FAILURES:
             return "further failures: see `manybody status`" if self._failures == FAILURES + 1 else ""

@@ -1,7 +1,7 @@
 """State of a long solve as files on the worker's own disk, carried to and from the run as bytes.
 
 The quantum branch keeps its state in files next to a path it is given. The run may sit on another machine with no
-folder in common, so the files travel inside one byte string whenever a new state is there and it is time to send it.
+folder in common, so the files travel inside one byte string whenever there are new ones.
 """
 
 from __future__ import annotations
@@ -33,7 +33,7 @@ def state_files(checkpoint, report: Callable[[dict], None]) -> Iterator[tuple[Pa
             nonlocal sent
             report(info)
             stamp = _stamp(folder)
-            if stamp and stamp != sent and checkpoint.due():
+            if stamp and stamp != sent:  # the solver decides how often it is worth it
                 sent = stamp
                 files = {name: np.frombuffer(Path(folder, name).read_bytes(), np.uint8) for name, *_ in stamp}
                 checkpoint.save(pack(files))
@@ -44,9 +44,11 @@ def state_files(checkpoint, report: Callable[[dict], None]) -> Iterator[tuple[Pa
 
 
 def _stamp(folder: str) -> list[tuple[str, int, int]]:
-    """Name, time and size of the files of the state; those being written (hidden or .tmp, .part) left out."""
+    """Name, time and size of the files of the state; those being written (hidden, .tmp, .part, .partial) left out."""
     files = [path for path in Path(folder).iterdir() if path.is_file()]
-    files = [path for path in files if not path.name.startswith(".") and path.suffix not in (".tmp", ".part")]
+    files = [
+        path for path in files if not path.name.startswith(".") and path.suffix not in (".tmp", ".part", ".partial")
+    ]
     return sorted((path.name, path.stat().st_mtime_ns, path.stat().st_size) for path in files)
 
 

@@ -11,6 +11,7 @@ from manybody.workflow.costs import duration, gigabytes
 from manybody.workflow.journal import LOCK, Journal
 from manybody.workflow.lock import is_held, read_holder
 from manybody.workflow.progress import progress_text
+from manybody.workflow.tasks import FOLLOWS
 
 ROWS = 40  # of the table of gaps; the file has all
 LISTED = 50  # parts listed by `status`
@@ -79,9 +80,11 @@ def status_text(folder) -> str:
     if rows:
         lines += ["", table(["part", *order, "time spent"], rows)]
     for state in ("failed", "refused"):
-        found = [(key, kind, label) for key, kind, label in parts if states[key] == state]
-        if found:
-            lines += ["", f"{state}:"]
+        all_of_them = [(key, kind, label) for key, kind, label in parts if states[key] == state]
+        found = [part for part in all_of_them if not entries[part[0]].message.startswith(FOLLOWS)]
+        if all_of_them:
+            following = len(all_of_them) - len(found)
+            lines += ["", f"{state}:" if not following else f"{state} ({following} more only because they need these):"]
         for key, kind, label in found[:LISTED]:
             text = entries[key].message.splitlines()[0] if entries[key].message else ""
             lines.append(f"  {label} ({kind}): {text}")

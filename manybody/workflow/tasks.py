@@ -16,6 +16,7 @@ from typing import Any
 
 KINDS = ("classical", "quantum", "bounds")
 STATUSES = ("finished", "failed", "refused")
+FOLLOWS = "needs the "  # how the message of a part begins that was not run because another has no result
 
 RunPart = Callable[[Any, Mapping[str, dict], Callable[[dict], None], "Any"], dict]
 
@@ -53,6 +54,11 @@ class Outcome:
     peak_bytes: float = 0.0
     host: str = ""
     attempts: int = 1
+
+    @property
+    def follows(self) -> bool:
+        """Not run only because a part that it needs has no result."""
+        return self.status != "finished" and self.message.startswith(FOLLOWS)
 
 
 @dataclass
