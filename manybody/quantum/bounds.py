@@ -45,13 +45,14 @@ class ClusterBound:
 
 def cluster_bound(
     op: SpinOperator,
-    max_sites: int = 12,
+    max_sites: int = 13,
     max_dimension: int = 5000,
     max_seconds: float = 10.0,
     memory: int = 2 * 2**30,
     kinds: tuple[str, ...] | None = None,
 ) -> ClusterBound:
-    """The best bound among bonds, stars, triangles, tetrahedra, plaquettes and pieces of consecutive sites.
+    """The best bound among bonds, stars, neighbourhoods, triangles, tetrahedra, plaquettes and pieces of consecutive
+    sites.
 
     max_sites, max_dimension: of one cluster, its largest sector. max_seconds: estimated time of all diagonalizations
     of one cover, and in the sum of all; covers beyond it are skipped (the estimate, not a clock, decides: the same

@@ -76,8 +76,9 @@ def split(symbol: EnergyFunction, cover: Cover) -> list[EnergyFunction]:
 
 
 def covers(symbol: EnergyFunction, largest: int) -> list[Cover]:
-    """Candidate covers with at most `largest` sites to a cluster: bonds, stars, triangles, tetrahedra, plaquettes, and
-    pieces of consecutive site numbers of every size up to it. Sites without any coupling form clusters of their own.
+    """Candidate covers with at most `largest` sites to a cluster: bonds, stars, neighbourhoods, triangles, tetrahedra,
+    plaquettes, and pieces of consecutive site numbers of every size up to it. Sites without any coupling form
+    clusters of their own.
     """
     terms = [tuple(where) for group in symbol.groups if len(group.key) > 1 for where in group.sites.tolist()]
     supports = _maximal(set(terms))
@@ -110,6 +111,9 @@ def covers(symbol: EnergyFunction, largest: int) -> list[Cover]:
             some = [star for star in stars if star[0] in centre_set]
             centres = (*(star[0] for star in some), *(None for _ in alone))
             found.append(Cover(f"stars of sublattice {'AB'[number]}", (*some, *alone), centres))
+    for radius in (1, 2):
+        balls = [_ball(i, radius, neighbours) for i in range(symbol.sites) if neighbours[i]]
+        found.append(plain(f"neighbourhoods of radius {radius}", [ball for ball in balls if len(ball) < symbol.sites]))
     pairs_only = all(len(term) == 2 for term in supports)
     if pairs_only and symbol.sites <= 5000:
         triangles = _cliques([(i, j) for i, j in supports], neighbours)
@@ -208,6 +212,15 @@ def _plaquettes(neighbours: list[set[int]]) -> list[tuple[int, ...]]:
         if found:
             return list(found.values())
     return []
+
+
+def _ball(centre: int, radius: int, neighbours: list[set[int]]) -> tuple[int, ...]:
+    """All sites within so many steps, nearest first."""
+    ball, shell = [centre], {centre}
+    for _ in range(radius):
+        shell = set().union(*(neighbours[i] for i in shell)) - set(ball)
+        ball += sorted(shell)
+    return tuple(ball)
 
 
 def _two_colours(neighbours: list[set[int]]) -> list[set[int]]:

@@ -323,6 +323,8 @@ def _starts(op, field: _MeanField, starts, seed: int, random_starts: int) -> lis
         directions = directions[None]
     if directions.shape[1:] != (sites, 3):
         raise ValueError(f"starts must be unit vectors of shape (R, {sites}, 3), got {directions.shape}")
+    if len(directions) == 0:
+        random_starts = max(random_starts, 1)
     coherent = (random_starts + 1) // 2
     drawn = random.standard_normal((coherent, sites, 3))
     directions = np.concatenate([directions, drawn / np.linalg.norm(drawn, axis=2, keepdims=True)])
@@ -335,7 +337,10 @@ def _starts(op, field: _MeanField, starts, seed: int, random_starts: int) -> lis
     if (field.highest > 1).any():
         # Without any moments the one-site terms alone decide; a little noise lets the pairs choose.
         silent = [np.zeros((2, sites, 2 * rank + 1)) for rank in field.ranks]
-        added = [a[:2].copy() for a in amplitudes]
+        up = np.array([0.0, 0.0, 1.0])
+        added = [
+            np.repeat(coherent_states(up, spin)[None, None], 2, 0).repeat(len(own), 1) for spin, own in field.kinds
+        ]
         for number, members, places, _, slots in field.classes:
             fields = field.fields(silent, members, slots)
             if fields:
