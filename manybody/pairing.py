@@ -169,7 +169,7 @@ def bounds_part(f: EnergyFunction, spin: float, rule: str, settings, classical: 
         messages.append(str(reason))
     else:
         part["cluster_bound"] = clusters.value
-        part["cluster_bound_kind"] = clusters.kind.split()[0]
+        part["cluster_bound_kind"] = clusters.kind
     part["bounds_message"] = "; ".join(messages)
     return part | {"bounds_seconds": time.perf_counter() - began}
 

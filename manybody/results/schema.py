@@ -187,8 +187,7 @@ _POINT = (
     Variable(
         "cluster_bound_kind",
         "clusters behind the cluster bound",
-        dtype="flag",
-        flags=("bonds", "stars", "triangles", "tetrahedra", "plaquettes", "pieces", "sites"),
+        dtype="text",
     ),
     Variable("product_energy", "energy of the best product state", units="energy", meaning="full mean-field energy"),
     Variable(
