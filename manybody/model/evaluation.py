@@ -1,11 +1,11 @@
 """Fast values and derivatives of an energy function.
 
-Everything of total degree at most 2 becomes one sparse matrix and one vector in the Cartesian components, so that a
-batch costs one sparse product. Terms of higher rank or with more sites are contracted over the harmonics of their
-sites. Configurations come as columns (N, 3, B): B is the batch.
+Three layers: everything of total degree at most 2 is one sparse matrix and one vector in the Cartesian components;
+other terms of one or two sites are one sparse matrix and one vector over the harmonics of all sites; terms of more
+sites are contracted one kind after the other. Configurations come as columns (N, 3, B): B is the batch.
 """
 
-from dataclasses import dataclass
+from collections import defaultdict
 
 import numpy as np
 from scipy import sparse
@@ -23,8 +23,9 @@ class Evaluation:
         self.sites = sites
         self.constant = constant
         self.linear = np.zeros(3 * sites)
-        self.higher: list[Contraction] = []
         rows, columns, values = [], [], []
+        few: list[Terms] = []
+        many: dict[tuple[int, ...], list] = defaultdict(list)
         for ranks, numbers, coefficients in terms:
             kept = [slot for slot, rank in enumerate(ranks) if rank > 0]
             ranks = tuple(ranks[slot] for slot in kept)
@@ -47,9 +48,15 @@ class Evaluation:
                 rows.append(_block_index(numbers[:, 0], 0))
                 columns.append(_block_index(numbers[:, 1], 1))
                 values.append(blocks.ravel())
+            elif len(ranks) <= 2:
+                few.append((ranks, numbers, coefficients))
             else:
-                self.higher.append(Contraction(sites, ranks, numbers, coefficients))
+                many[ranks].append((numbers, coefficients))
         self.matrix = _assemble(3 * sites, rows, columns, values)
+        self.higher: list[HarmonicForm | Contraction] = [HarmonicForm(sites, few)] if few else []
+        for ranks, parts in many.items():
+            numbers, coefficients = (np.concatenate(part) for part in zip(*parts, strict=True))
+            self.higher.append(Contraction(sites, ranks, numbers, coefficients))
 
     def value(self, n: np.ndarray) -> np.ndarray:
         """n (N, 3, B) -> (B,)."""
@@ -67,9 +74,12 @@ class Evaluation:
         field += self.linear[:, None]
         field = field.reshape(n.shape)
         for term in self.higher:
-            values += term.value(n)
             if gradient:
-                field += term.gradient(n)
+                value, slope = term.value_and_gradient(n)
+                field += slope
+            else:
+                value = term.value(n)
+            values += value
         return values, field
 
     def hessian(self, configuration: np.ndarray) -> sparse.csr_array:
@@ -98,36 +108,135 @@ class Evaluation:
         return _tangential(n, product) - radial * v
 
 
-@dataclass
+class HarmonicForm:
+    """Terms of one or two sites as field . y + 1/2 y^T matrix y, y the harmonics of all sites, rank after rank."""
+
+    def __init__(self, sites: int, terms: list[Terms]):
+        self.sites = sites
+        self.ranks = sorted({rank for ranks, _, _ in terms for rank in ranks})
+        sizes = [sites * (2 * rank + 1) for rank in self.ranks]
+        self.offsets = dict(zip(self.ranks, np.cumsum([0, *sizes]), strict=False))
+        self.size = sum(sizes)
+        self.field = np.zeros(self.size)
+        rows, columns, values = [], [], []
+        for ranks, numbers, coefficients in terms:
+            index = [self._index(rank, numbers[:, slot]) for slot, rank in enumerate(ranks)]
+            if len(ranks) == 1:
+                np.add.at(self.field, index[0].ravel(), coefficients.ravel())
+                continue
+            left, right = np.broadcast_arrays(index[0][:, :, None], index[1][:, None, :])
+            rows += [left.ravel(), right.ravel()]
+            columns += [right.ravel(), left.ravel()]
+            values += [coefficients.ravel(), coefficients.ravel()]
+        self.matrix = _assemble(self.size, rows, columns, values)
+
+    def _index(self, rank: int, numbers: np.ndarray) -> np.ndarray:
+        """Places in y of the harmonics of sites `numbers` (T,): (T, 2 rank + 1)."""
+        width = 2 * rank + 1
+        return self.offsets[rank] + width * numbers[:, None] + np.arange(width)
+
+    def _harmonics(self, n: np.ndarray) -> np.ndarray:
+        """y (size, B) at n (N, 3, B)."""
+        vectors = np.moveaxis(n, 1, 2)
+        return np.concatenate([np.moveaxis(harmonics(k, vectors), 2, 1).reshape(-1, n.shape[2]) for k in self.ranks])
+
+    def _local(self, y: np.ndarray, rank: int) -> np.ndarray:
+        """The part of one rank, (N, 2 rank + 1, B)."""
+        width = 2 * rank + 1
+        start = self.offsets[rank]
+        return y[start : start + self.sites * width].reshape(self.sites, width, -1)
+
+    def _slopes(self, n: np.ndarray) -> dict[int, np.ndarray]:
+        """d C_k / d n_a at every site, by rank: (N, 2 k + 1, 3, B)."""
+        vectors = np.moveaxis(n, 1, 2)
+        return {k: np.einsum("aqp,nbp->nqab", derivative(k), harmonics(k - 1, vectors)) for k in self.ranks}
+
+    def _curvatures(self, n: np.ndarray, conjugate: np.ndarray) -> np.ndarray:
+        """Second derivatives within each site, (N, 3, 3, B), for df/dy = conjugate (size, B)."""
+        vectors = np.moveaxis(n, 1, 2)
+        total = np.zeros((self.sites, 3, 3, n.shape[2]))
+        for k in self.ranks:
+            if k >= 2:
+                inner = harmonics(k - 2, vectors)
+                total += np.einsum(
+                    "nqb,acqp,nbp->nacb", self._local(conjugate, k), second_derivative(k), inner, optimize=True
+                )
+        return total
+
+    def value(self, n: np.ndarray) -> np.ndarray:
+        y = self._harmonics(n)
+        return self.field @ y + 0.5 * np.einsum("yb,yb->b", self.matrix @ y, y)
+
+    def value_and_gradient(self, n: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """Values (B,) and Euclidean gradients (N, 3, B) of the solid-harmonic extension."""
+        y = self._harmonics(n)
+        conjugate = self.matrix @ y
+        values = self.field @ y + 0.5 * np.einsum("yb,yb->b", conjugate, y)
+        conjugate += self.field[:, None]
+        vectors = np.moveaxis(n, 1, 2)
+        gradient = np.zeros(n.shape)
+        for k in self.ranks:
+            lowered = np.einsum("aqp,nqb->napb", derivative(k), self._local(conjugate, k), optimize=True)
+            gradient += np.einsum("napb,nbp->nab", lowered, harmonics(k - 1, vectors))
+        return values, gradient
+
+    def hessian(self, configuration: np.ndarray) -> sparse.csr_array:
+        """Euclidean Hessian (3 N, 3 N) of the solid-harmonic extension at one configuration (N, 3)."""
+        n = configuration[..., None]
+        conjugate = self.matrix @ self._harmonics(n) + self.field[:, None]
+        every = np.arange(self.sites)
+        rows, columns, values = [], [], []
+        for k, slope in self._slopes(n).items():
+            index = self._index(k, every)
+            rows.append(np.repeat(index, 3, axis=1).ravel())
+            columns.append(np.broadcast_to(3 * every[:, None, None] + np.arange(3), slope.shape[:3]).ravel())
+            values.append(slope[..., 0].ravel())
+        shape = (self.size, 3 * self.sites)
+        triplets = (np.concatenate(values), (np.concatenate(rows), np.concatenate(columns)))
+        jacobian = sparse.csr_array(sparse.coo_array(triplets, shape=shape))
+        local = self._curvatures(n, conjugate)[..., 0].ravel()
+        own = _assemble(3 * self.sites, [_block_index(every, 0)], [_block_index(every, 1)], [local])
+        return sparse.csr_array(jacobian.T @ self.matrix @ jacobian + own)
+
+    def hessian_product(self, n: np.ndarray, v: np.ndarray) -> np.ndarray:
+        """Euclidean Hessian at n times v, both (N, 3, B)."""
+        conjugate = self.matrix @ self._harmonics(n) + self.field[:, None]
+        slopes = self._slopes(n)
+        moved = [np.einsum("nqab,nab->nqb", slopes[k], v).reshape(-1, n.shape[2]) for k in self.ranks]
+        reaction = self.matrix @ np.concatenate(moved)
+        total = np.einsum("nacb,ncb->nab", self._curvatures(n, conjugate), v)
+        for k in self.ranks:
+            total += np.einsum("nqab,nqb->nab", slopes[k], self._local(reaction, k))
+        return total
+
+
 class Contraction:
-    """Terms that do not fit the quadratic form, contracted over the harmonics of their sites."""
+    """Terms of three or more sites, contracted over the harmonics of their sites."""
 
-    sites: int
-    ranks: tuple[int, ...]
-    numbers: np.ndarray
-    coefficients: np.ndarray
-
-    def __post_init__(self):
-        terms = len(self.numbers)
+    def __init__(self, sites: int, ranks: tuple[int, ...], numbers: np.ndarray, coefficients: np.ndarray):
+        self.sites, self.ranks, self.numbers, self.coefficients = sites, ranks, numbers, coefficients
+        terms = len(numbers)
         self.scatter = [
-            sparse.csr_array((np.ones(terms), (self.numbers[:, slot], np.arange(terms))), shape=(self.sites, terms))
-            for slot in range(len(self.ranks))
+            sparse.csr_array((np.ones(terms), (numbers[:, slot], np.arange(terms))), shape=(sites, terms))
+            for slot in range(len(ranks))
         ]
 
     def value(self, n: np.ndarray) -> np.ndarray:
-        left = self._contract(self._harmonics(n), keep=(0,))
-        return np.einsum("tqb,tqb->b", left, self._harmonics(n, only=0)[0])
-
-    def gradient(self, n: np.ndarray) -> np.ndarray:
-        """Euclidean gradient (N, 3, B) of the solid-harmonic extension."""
         values = self._harmonics(n)
-        total = np.zeros(n.shape)
+        return np.einsum("tqb,tqb->b", self._contract(values, keep=(0,)), values[0])
+
+    def value_and_gradient(self, n: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """Values (B,) and Euclidean gradients (N, 3, B) of the solid-harmonic extension."""
+        values = self._harmonics(n)
+        total, result = np.zeros(n.shape), None
         for slot, rank in enumerate(self.ranks):
             outer = self._contract(values, keep=(slot,))
+            if slot == 0:
+                result = np.einsum("tqb,tqb->b", outer, values[0])
             inner = harmonics(rank - 1, self._at(n, slot))
-            local = np.einsum("tqb,aqp,tbp->tab", outer, derivative(rank), inner, optimize=True)
-            total += self._scattered(slot, local)
-        return total
+            lowered = np.einsum("aqp,tqb->tapb", derivative(rank), outer, optimize=True)
+            total += self._scattered(slot, np.einsum("tapb,tbp->tab", lowered, inner))
+        return result, total
 
     def hessian(self, configuration: np.ndarray) -> sparse.csr_array:
         """Euclidean Hessian (3 N, 3 N) of the solid-harmonic extension at one configuration (N, 3)."""
@@ -173,9 +282,9 @@ class Contraction:
         """Vectors of one slot, (T, B, 3)."""
         return np.moveaxis(n[self.numbers[:, slot]], 1, 2)
 
-    def _harmonics(self, n: np.ndarray, only: int | None = None) -> list[np.ndarray]:
-        slots = range(len(self.ranks)) if only is None else [only]
-        return [np.moveaxis(harmonics(self.ranks[slot], self._at(n, slot)), 2, 1) for slot in slots]
+    def _harmonics(self, n: np.ndarray) -> list[np.ndarray]:
+        """Harmonics of every slot, (T, 2 k + 1, B)."""
+        return [np.moveaxis(harmonics(rank, self._at(n, slot)), 2, 1) for slot, rank in enumerate(self.ranks)]
 
     def _contract(self, values: list[np.ndarray], keep: tuple[int, ...]) -> np.ndarray:
         """Coefficients contracted with the harmonics of every slot but those kept (in that order): (T, kept..., B)."""
@@ -185,9 +294,6 @@ class Contraction:
             if slot not in keep:
                 operands += [value, [0, slot + 1, batch]]
         kept = [slot + 1 for slot in keep]
-        if len(operands) == 2:
-            tensor = np.einsum(*operands, [0, *kept])
-            return np.broadcast_to(tensor[..., None], (*tensor.shape, values[0].shape[-1]))
         return np.einsum(*operands, [0, *kept, batch], optimize=len(operands) > 4)
 
     def _scattered(self, slot: int, local: np.ndarray) -> np.ndarray:

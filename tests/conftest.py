@@ -1,0 +1,6 @@
+"""One linear-algebra thread, as the workers have: set before numpy is imported, so that tests neither wait nor wobble."""
+
+import os
+
+for name in ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS", "NUMBA_NUM_THREADS"):
+    os.environ.setdefault(name, "1")
