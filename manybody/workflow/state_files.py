@@ -15,6 +15,8 @@ import numpy as np
 
 from manybody.workflow.encoding import EncodingError, pack, unpack
 
+UNFINISHED = (".tmp", ".part", ".partial")  # endings of files that are being written
+
 
 @contextlib.contextmanager
 def state_files(checkpoint, report: Callable[[dict], None]) -> Iterator[tuple[Path, Callable[[dict], None]]]:
@@ -44,7 +46,7 @@ def state_files(checkpoint, report: Callable[[dict], None]) -> Iterator[tuple[Pa
 
 
 def _stamp(folder: str) -> list[tuple[str, int, int]]:
-    """Name, time and size of the files of the state; those being written (hidden, .tmp, .part, .partial) left out."""
+    """Name, time and size of the files of the state; those being written left out."""
     files = [path for path in Path(folder).iterdir() if path.is_file()]
     files = [
         path for path in files if not path.name.startswith(".") and path.suffix not in (".tmp", ".part", ".partial")
