@@ -2,7 +2,7 @@
 
 Which form is right is not known beforehand (open or periodic, critical or gapped, logarithms), so several are tried.
 Each is judged by how much its limit moves when the largest or the smallest size is left out, which is what an
-extrapolation risks; their limits are averaged with the inverse square of that, and the scatter between them goes into
+extrapolation risks; their limits are averaged with weights that fall with it, and the scatter between them goes into
 the error. Calibrated on exactly solvable chains (tests/results/test_scaling_sites.py). The quantum energy decides;
 the classical energy and the gap are extrapolated with the same forms, correlation lengths and weights, so that their
 limits fit together exactly."""
@@ -18,25 +18,29 @@ SHIFT = 1.5
 """Weight of the movement under leaving one size out. 1.5 gives the stated coverage; with three sizes, where no second
 form can be compared, FEW_SHIFT does."""
 FEW_SHIFT = 4.0
-ACCIDENT = 0.1
-"""A form's error is at least this fraction of its distance from the closest other form: small shifts may be luck."""
+ACCIDENT = 0.2
+"""A form's error is at least this fraction of its distance from the second closest form: small shifts may be luck."""
+SHARPNESS = 1.5
+"""Weights are errors to this power, inverted; 2 would trust the apparent errors of wrong forms too much."""
+HOPELESS = 50.0
+"""A form whose information criterion is worse than the best by more than this does not describe the data at all."""
 
 
 @dataclass(frozen=True)
 class Form:
     """A form in N: powers of 1/N in order, the last of them the omitted term.
 
-    `log` replaces the last fitted power by one over that power of ln N; `decay` adds N^-decay exp(-N/xi), xi fitted.
+    `logs` adds the omitted power over those powers of ln N; `decay` adds N^-decay exp(-N/xi), xi fitted.
     """
 
     name: str
     powers: tuple[float, ...]
-    log: float = 0.0
+    logs: tuple[float, ...] = ()
     decay: float | None = None
 
     @property
     def count(self) -> int:
-        return len(self.powers) - 1 + (self.log > 0) + 2 * (self.decay is not None)
+        return len(self.powers) - 1 + len(self.logs) + 2 * (self.decay is not None)
 
 
 PERIODIC = (
@@ -44,7 +48,7 @@ PERIODIC = (
     Form("1/N^2", (0, 2, 4)),
     Form("1/N^2 + 1/N^4", (0, 2, 4, 6)),
     Form("1/N^2 + 1/N^4 + 1/N^6", (0, 2, 4, 6, 8)),
-    Form("1/N^2 with logarithm", (0, 2, 2), log=3),
+    Form("1/N^2 with logarithm", (0, 2, 2), logs=(3,)),
     Form("exponential", (0,), decay=0.0),
     Form("exponential/N^(3/2)", (0,), decay=1.5),
 )
@@ -53,8 +57,10 @@ OPEN = (
     Form("1/N + 1/N^2", (0, 1, 2, 3)),
     Form("1/N + 1/N^2 + 1/N^3", (0, 1, 2, 3, 4)),
     Form("1/N + ... + 1/N^4", (0, 1, 2, 3, 4, 5)),
-    Form("1/N + 1/N^2 with logarithm", (0, 1, 2, 2), log=2),
+    Form("1/N + 1/N^2 with logarithm", (0, 1, 2, 2), logs=(2,)),
+    Form("1/N + 1/N^2 with logarithm at the ends", (0, 1, 2, 1), logs=(1,)),
     Form("1/N + exponential/N", (0, 1), decay=1.0),
+    Form("1/N + exponential/N^(3/2)", (0, 1), decay=1.5),
 )
 PERIODIC_2D = (
     Form("constant", (0, 1.5)),
@@ -166,15 +172,13 @@ def _one_family(name, sites, energy, error, others, forms):
             tried.append((form, [_solve(form, sites[s], series["energy"][s], sigma[s]) for s in _subsets(len(sites))]))
     if not tried:
         return None
+    tried = _not_hopeless(tried, series["energy"], sigma)
     floor = {key: sigma for key in series if key in ("energy", "gap")}
     tables = {key: _table(tried, sites, values, floor.get(key)) for key, values in series.items()}
-    limits, errors = tables["energy"]
-    errors = _no_accidents(limits, errors)
-    weights = 1 / np.maximum(errors, 1e-300) ** 2
+    weights = np.maximum(tables["energy"][1], 1e-300) ** -SHARPNESS
     weights /= weights.sum()
     values, spread = {}, {}
     for key, (limit, own) in tables.items():
-        own = errors if key == "energy" else _no_accidents(limit, own)
         values[key] = float(weights @ limit)
         spread[key] = float(np.sqrt(weights @ (own**2 + (limit - values[key]) ** 2)))
     lead = int(np.argmax(weights))
@@ -206,7 +210,8 @@ def _table(tried, sites, values, sigma):
         own = fit(solved[0].columns, values, sigma, solved[0].shape).errors[0] if _determined(solved[0]) else 0.0
         limits.append(parts[0])
         errors.append(np.hypot(own, factor * max(abs(parts[0] - parts[1]), abs(parts[0] - parts[2]))))
-    return np.array(limits), np.array(errors)
+    limits = np.array(limits)
+    return limits, _no_accidents(limits, np.array(errors))
 
 
 def _determined(solved):
@@ -218,7 +223,19 @@ def _no_accidents(limits, errors):
         return errors
     distance = np.abs(limits[:, None] - limits)
     np.fill_diagonal(distance, np.inf)
-    return np.maximum(errors, ACCIDENT * distance.min(axis=1))
+    distance.sort(axis=1)
+    return np.maximum(errors, ACCIDENT * distance[:, min(2, len(limits) - 1) - 1])
+
+
+def _not_hopeless(tried, values, sigma):
+    """Drop forms that the criterion rules out; forms with too few data for a criterion stay."""
+    marks = []
+    for _, (whole, *_) in tried:
+        known = _determined(whole)
+        marks.append(fit(whole.columns, values, sigma, whole.shape).criterion if known else np.inf)
+    # never fewer than two: with one alone nothing would show that it is wrong
+    limit = max(min(marks) + HOPELESS, sorted(marks)[min(1, len(marks) - 1)])
+    return [form for form, mark in zip(tried, marks) if not np.isfinite(mark) or mark <= limit]
 
 
 def _columns(form, sites, length, first):
@@ -228,9 +245,9 @@ def _columns(form, sites, length, first):
         tail = (sites / first) ** -form.decay * np.exp(-(sites - first) / length)
         return np.stack([*columns, tail], axis=1), np.maximum(tail * first / sites, 1e-14)
     shape = sites ** -float(form.powers[-1])
-    if form.log:
-        columns.append(shape / np.log(sites) ** form.log)
-        shape = shape / np.log(sites) ** (form.log + 1)
+    if form.logs:
+        columns += [shape / np.log(sites) ** power for power in form.logs]
+        shape = shape / np.log(sites) ** (form.logs[-1] + 1)
     return np.stack(columns, axis=1), shape
 
 
