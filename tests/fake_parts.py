@@ -24,7 +24,7 @@ def run_fake(payload, inputs, report, checkpoint):
     if payload.get("die"):
         os.kill(os.getpid(), 9)
     if steps := payload.get("steps"):
-        first = 0 if checkpoint.state is None else int(checkpoint.state)
+        first = int(checkpoint.load() or 0)
         for step in range(first, steps):
             time.sleep(0.05)
             report(step=step)

@@ -26,7 +26,7 @@ WIDE = 12
 
 
 class Checkpoint(Protocol):
-    """Where the state of a long run is kept."""
+    """Where the state of a long run is kept. One that also has due() -> bool says itself when to save."""
 
     def load(self) -> bytes | None: ...
 
@@ -220,7 +220,10 @@ class _Solver:
         return GroundState(float(values[0]), self.limits.floor, "converged", "", "exact", bond_dimension=1)
 
     def _save(self, run: Run) -> None:
-        if self.checkpoint is None or time.monotonic() - self.saved < SAVE_EVERY:
+        if self.checkpoint is None:
+            return
+        due = getattr(self.checkpoint, "due", None)
+        if not (due() if due is not None else time.monotonic() - self.saved >= SAVE_EVERY):
             return
         self.checkpoint.save(save_run(run, self.problem, self.op))
         self.saved = time.monotonic()

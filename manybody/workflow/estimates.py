@@ -56,7 +56,7 @@ def _sweeps(point: Point, settings: Settings) -> tuple[float, float]:
     n, levels = point.cluster.sites, 2 * point.spin + 1
     bond = min(float(settings.max_bond), 10 ** min(0.5 * point.log10_dimension, 15.0))
     width = 2 + 3 * max(1.0, point.cluster.couplings / n)
-    seconds = 0.04 * n + 1e-10 * n * bond**3 * levels * width
+    seconds = 0.1 * n * levels + 4e-10 * n * bond**3 * levels * width
     size = 8 * n * bond**2 * (levels + width) / 2 + 16 * 8 * bond**2 * levels * width / 3
     return seconds, LIBRARIES + min(size, float(settings.memory))
 

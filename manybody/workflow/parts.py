@@ -86,7 +86,6 @@ def run_part(payload: Payload, inputs: dict[str, dict], report, checkpoint) -> d
     """Run one part; called on the worker."""
     from manybody import pairing
     from manybody.quantum.result import QuantumSettings
-    from manybody.workflow.state_files import state_files
 
     f = payload.cluster.build().energy
     settings, keys = payload.settings, payload.keys
@@ -101,10 +100,9 @@ def run_part(payload: Payload, inputs: dict[str, dict], report, checkpoint) -> d
     harmonic = inputs[keys.harmonic]
     if payload.part == "bounds":
         return pairing.bounds_part(f, payload.spin, payload.rule, quantum, classical, harmonic)
-    with state_files(checkpoint, report) as (path, progress):
-        return pairing.quantum_part(
-            f, payload.spin, payload.rule, quantum, classical, harmonic, progress=progress, checkpoint=path
-        )
+    return pairing.quantum_part(
+        f, payload.spin, payload.rule, quantum, classical, harmonic, progress=report, checkpoint=checkpoint
+    )
 
 
 def _digest(*content) -> str:

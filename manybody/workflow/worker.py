@@ -25,15 +25,18 @@ class StopPart(BaseException):
 class Checkpoint:
     """How a long part keeps its state: handed to run_part as `checkpoint`.
 
-    state : what an earlier, broken-off run saved last (bytes), or None
-    due() : True when it is time to save
+    load() : what an earlier, broken-off run saved last (bytes), or None
+    due() : True when it is time to save, which it also is when the run is asked to stop
     save(state) : hand over the present state, opaque bytes; replaces the previous one
     """
 
     def __init__(self, key: str, state: bytes | None, channel, every: float = SAVE_EVERY):
-        self.state = state
+        self._state = state
         self._key, self._channel, self._every = key, channel, every
         self._last = time.monotonic()
+
+    def load(self) -> bytes | None:
+        return self._state
 
     def due(self) -> bool:
         return time.monotonic() - self._last >= self._every or self._channel.stopping()
@@ -41,10 +44,6 @@ class Checkpoint:
     def save(self, state: bytes) -> None:
         self._last = time.monotonic()
         self._channel.state(self._key, bytes(state))
-        self.stop_if_asked()
-
-    def stop_if_asked(self) -> None:
-        """Leave the part, unfinished, if the run is stopping."""
         if self._channel.stopping():
             raise StopPart
 

@@ -55,7 +55,7 @@ def test_plan_run_status_and_run_again(manybody, study, tmp_path):
     rows = [line.split() for line in text.splitlines()]
     assert rows[0] == ["sites", "spin", "rule", "classical", "quantum", "error", "gap/site", "relative", "gap", "flags"]
     # two spins S, H = S1.S2/S^2: ground energy -(S+1)/S
-    two = [row for row in rows if row[:3] == ["2", "1", "wick"]][0]
+    two = next(row for row in rows if row[:3] == ["2", "1", "wick"])
     assert two[3:5] == ["-1.0000000", "-2.0000000"] and two[6:] == ["-0.50000", "-1.00000"]
     assert f"12 parts finished, 0 of them before. Dataset: {out / 'results.nc'}" in text
     code, text, _ = manybody("run", study, "--out", out, "--workers", "0")

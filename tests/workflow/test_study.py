@@ -48,10 +48,10 @@ def finished(tmp_path_factory):
 
 
 def test_dataset_is_plain_xarray_with_every_point_and_provenance(finished):
-    folder, tree = finished
+    folder, _ = finished
     with xr.open_dataset(folder / "results.nc", engine="h5netcdf") as data:
         assert dict(data.sizes) == {"sites": 2, "k": 2, "spin": 2, "rule": 2}
-        # ring of 4 spins 1/2: E = -2 J S(S+1)/... by total spin: (S.S sum) = -2, times 1/S^2 = 4 under wick
+        # ring of 4 spins 1/2: the sum of S_i.S_j is -2 (sublattices of spin 1 coupled to 0); times 1/S^2 = 4
         assert float(data["quantum_energy"].sel(sites=4, k=0.0, spin=0.5, rule="wick")) == pytest.approx(-8, abs=1e-9)
         assert float(data["classical_energy"].sel(sites=4, k=0.0)) == pytest.approx(-4, abs=1e-9)
         status = (
