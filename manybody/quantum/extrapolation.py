@@ -30,15 +30,17 @@ def energy_error(stages: list[Stage], floor: float) -> float:
 
     Both the variance and the discarded weight vanish with the error, in proportion once small. The slope of the energy against each,
     between the last stage and those before, extrapolates it to zero; the larger distance times SAFETY counts, and at least `floor`
-    (rounding), and so does the sum of the gains of further half sweeps as a geometric series.     """
+    (rounding), and so does the sum of the gains of further half sweeps as a geometric series.
+    """
     last = stages[-1]
     ratio = min(max(last.ratio, 0.5), 0.95)
     distances = [max(last.gain, 0.0) * ratio / (1 - ratio)]
-    for earlier in stages[-3:-1]:
-        fall = max(earlier.energy - last.energy, 0.0)
-        for x0, x1 in ((earlier.variance, last.variance), (earlier.discarded, last.discarded)):
-            if x0 > 1.5 * x1 > 0:
-                distances.append(fall * x1 / (x0 - x1))
+    for measure in ("variance", "discarded"):
+        x1 = getattr(last, measure)
+        earlier = next((stage for stage in stages[-2:0:-1] if getattr(stage, measure) > 1.5 * x1 > 0), None)
+        if earlier is not None:
+            fall = max(earlier.energy - last.energy, 0.0)
+            distances.append(fall * x1 / (getattr(earlier, measure) - x1))
     if len(distances) == 1:
         # No recent slope (a variance at rounding level, or one that did not fall): the steepest of all stages, else the standard
         # deviation, which bounds the distance to some eigenvalue.

@@ -145,7 +145,7 @@ def _turn_to_z(axis: np.ndarray) -> np.ndarray:
 def local_frames(n: np.ndarray) -> np.ndarray:
     """(N, 3, 3) proper rotations that turn every n_i to z and the normal of their common plane, if there is one, to y."""
     _, values, axes = np.linalg.svd(n)
-    normal = axes[2] if values[2] < 1e-8 * values[0] else None
+    normal = axes[2] if len(values) < 3 or values[2] < 1e-8 * values[0] else None
     frames = []
     for v in n:
         y = normal if normal is not None else np.cross(v, np.eye(3)[np.argmin(np.abs(v))])

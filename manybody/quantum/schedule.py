@@ -14,6 +14,7 @@ LEAST_ALLOWED = 1e-15
 SWEEPS, MOST_SWEEPS = 8, 24
 CRAWL, MOST_VECTORS = 0.7, 40
 FRACTION = 0.3
+GROWTH, FIRST_BOND = 2, 64
 
 
 @dataclass(frozen=True)
@@ -36,8 +37,8 @@ class Limits:
 
 @dataclass(eq=False)
 class Run:
-    """A chain on its way. stages: what was reached, the start state first; allowed: relative weight a bond may lose in the present stage; bounded: the last stage
-    wanted more states than the limit."""
+    """A chain on its way. stages: what was reached, the start state first; allowed: relative weight a bond may lose in the present stage; bounded, narrow: the last
+    stage wanted more states than the limit, or than its own ceiling, which at most doubles (GROWTH) from stage to stage."""
 
     chain: Chain
     limits: Limits
@@ -47,9 +48,12 @@ class Run:
     allowed: float = FIRST_ALLOWED
     sweeps: int = 0
     bounded: bool = False
+    narrow: bool = False
+    ceiling: int = FIRST_BOND
     vectors: int = 0
 
     def __post_init__(self) -> None:
+        self.ceiling = min(max(FIRST_BOND, self.chain.bond_dimension), self.limits.largest)
         self.vectors = self.vectors or self.limits.vectors
 
     @property
@@ -74,8 +78,10 @@ class Run:
             energy, spread = variance.measure(self.chain)
             self.stages.append(Stage(self.chain.bond_dimension, energy, spread, 0.0, np.inf, 1.0))
         else:
-            ratio = self.limits.goal / max(self.error, 1e-300)
-            self.allowed = max(self.allowed * float(np.clip(ratio / 4, 0.03, 0.1)), LEAST_ALLOWED)
+            if not self.narrow:
+                ratio = self.limits.goal / max(self.error, 1e-300)
+                self.allowed = max(self.allowed * float(np.clip(ratio / 4, 0.03, 0.1)), LEAST_ALLOWED)
+            self.ceiling = min(max(GROWTH * self.stages[-1].bond_dimension, FIRST_BOND), self.limits.largest)
         energies: list[float] = []
         gains = [np.inf]
         while len(energies) < MOST_SWEEPS:
@@ -93,7 +99,8 @@ class Run:
                     break
                 self.vectors = min(2 * self.vectors, MOST_VECTORS)
         energy, spread = variance.measure(self.chain)
-        self.bounded = bounded
+        self.narrow = bounded and self.ceiling < self.limits.largest
+        self.bounded = bounded and not self.narrow
         ratio = gains[-1] / gains[-2] if gains[-2] > 0 else 1.0
         self.stages.append(Stage(self.chain.bond_dimension, energy, spread, discarded, gains[-1], ratio))
         self._tell(energy, discarded, spread)
@@ -105,13 +112,13 @@ class Run:
         tolerance = 1e-3 * np.sqrt(limits.goal * limits.norm / chain.length)
         for site in range(chain.length - 1):
             if limits.pairs:
-                energy, lost = two_site.step(chain, site, limits.largest, self.allowed, self.vectors, tolerance)
+                energy, lost = two_site.step(chain, site, self.ceiling, self.allowed, self.vectors, tolerance)
             else:
                 if fraction:
-                    ceiling = limits.largest + max(4, int(fraction * limits.largest))
+                    ceiling = self.ceiling + max(4, int(fraction * self.ceiling))
                     expansion.expand(chain, site, fraction, ceiling, self.rng)
                 energy = one_site.solve(chain, site, self.vectors, tolerance)
-                lost = one_site.move(chain, site, limits.largest, self.allowed)
+                lost = one_site.move(chain, site, self.ceiling, self.allowed)
             total += lost
             bounded |= lost > 1.001 * self.allowed
         chain.mirror()
