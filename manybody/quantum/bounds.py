@@ -7,7 +7,7 @@ state.
 
 from collections import Counter
 from collections.abc import Callable
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
@@ -78,7 +78,7 @@ def cluster_bound(
             skipped.append(cover.kind)
             continue
         pieces = _distinct(op, cover)
-        costs = [estimate_exact(piece, memory=memory).seconds for key, (piece, _) in pieces.items() if key not in known]
+        costs = [_seconds(piece, memory) for key, (piece, _) in pieces.items() if key not in known]
         if spent + sum(costs) > max_seconds:
             skipped.append(cover.kind)
             continue
@@ -87,8 +87,8 @@ def cluster_bound(
             for key, (piece, _) in pieces.items():
                 if key not in known:
                     solved = exact_ground_state(piece, settings)
-                    # Clusters that share a key may differ in their coefficients by the rounding in `_rounded`.
-                    known[key] = solved.energy - solved.error - _DIGITS * shifts(piece).norm
+                    # Clusters that share a key may differ in their coefficients by that much.
+                    known[key] = solved.energy - solved.error - 2 * _DIGITS * shifts(piece).norm
         except TooLarge:
             skipped.append(cover.kind)
             continue
@@ -166,6 +166,12 @@ def _largest_dimension(op: SpinOperator, cover: Cover) -> float:
     return largest
 
 
+def _seconds(piece: SpinOperator, memory: int) -> float:
+    if np.prod(2 * piece.spins + 1) <= 256:
+        return 0.01
+    return estimate_exact(piece, memory=memory).seconds
+
+
 def _distinct(op: SpinOperator, cover: Cover) -> dict[tuple, tuple[SpinOperator, int]]:
     """Cluster operators that differ, with how often each occurs."""
     counts: Counter[tuple] = Counter()
@@ -173,18 +179,19 @@ def _distinct(op: SpinOperator, cover: Cover) -> dict[tuple, tuple[SpinOperator,
     for cluster, symbol in zip(cover.clusters, split(op.symbol, cover), strict=True):
         spins = op.spins[list(cluster)]
         order = canonical_order(symbol, spins.tolist())
-        # Equal weights reached on different ways may differ in the last digit.
-        ordered = _rounded(symbol.restricted(order))
-        key = (spins[order].tobytes(), ordered.fingerprint())
+        ordered = symbol.restricted(order)
+        key = (spins[order].tobytes(), *_content(ordered))
         counts[key] += 1
-        found.setdefault(key, SpinOperator(spins[order], symbol.restricted(order)))
+        if key not in found:
+            found[key] = SpinOperator(spins[order], ordered)
     return {key: (found[key], count) for key, count in counts.items()}
 
 
-def _rounded(symbol: EnergyFunction) -> EnergyFunction:
-    scale = symbol.largest_coefficient
-    if scale == 0.0:
-        return symbol
-    step = scale * _DIGITS
-    groups = [replace(g, coefficients=np.round(g.coefficients / step) * step) for g in symbol.groups]
-    return EnergyFunction(symbol.sites, symbol.constant, groups)
+def _content(symbol: EnergyFunction) -> tuple:
+    """What tells clusters apart: equal weights reached on different ways may differ in their last digits."""
+    largest = symbol.largest_coefficient
+    groups = [
+        (g.key, g.sites.tobytes(), (np.round(g.coefficients / largest / _DIGITS) + 0.0).tobytes())
+        for g in symbol.groups
+    ]
+    return f"{largest:.13e}", *groups

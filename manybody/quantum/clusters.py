@@ -111,7 +111,11 @@ def covers(symbol: EnergyFunction, largest: int) -> list[Cover]:
             some = [star for star in stars if star[0] in centre_set]
             centres = (*(star[0] for star in some), *(None for _ in alone))
             found.append(Cover(f"stars of sublattice {'AB'[number]}", (*some, *alone), centres))
+    linked_leaves = any(neighbours[i] & neighbours[j] for i in range(symbol.sites) for j in neighbours[i])
     for radius in (1, 2):
+        # Without triangles the neighbourhoods of radius 1 are the stars.
+        if radius == 1 and not linked_leaves:
+            continue
         balls = [_ball(i, radius, neighbours) for i in range(symbol.sites) if neighbours[i]]
         found.append(plain(f"neighbourhoods of radius {radius}", [ball for ball in balls if len(ball) < symbol.sites]))
     pairs_only = all(len(term) == 2 for term in supports)

@@ -21,7 +21,7 @@ from manybody.quantum.operators import assemble, entry_count
 from manybody.quantum.result import GroundState, QuantumSettings
 from manybody.quantum.split_operator import SplitOperator, split_bytes
 
-LARGEST_DIMENSION = 2_200_000
+LARGEST_DIMENSION = 3_000_000
 """Sectors beyond this are left to matrix-product states, whatever the memory."""
 
 _DENSE = 300  # up to here LAPACK is faster than starting an iteration
@@ -252,7 +252,8 @@ def _search(problem: _Problem, frame: Frame, lead: float | None) -> _Solved:
             # Only the best and the preferred sector keep their vectors.
             best = min(solved.values(), key=lambda s: s.energy)
             for key, state in solved.items():
-                if state is not best and key != lead and key != lowest and len(state.vector) > _SCAN_ALL:
+                keep = state is best or key in (lead, lowest) or state.vector is None
+                if not keep and len(state.vector) > _SCAN_ALL:
                     state.vector = state.basis = None
         return solved[sector].energy
 

@@ -22,12 +22,13 @@ def ground_state(
     start: np.ndarray | None = None,
     scale: float = 0.0,
     progress: Callable[[dict], None] | None = None,
-    checkpoint: str | Path | None = None,
+    checkpoint=None,
 ) -> GroundState:
     """Ground state of an operator: exact where dimension and settings.memory allow it, else as a matrix-product state.
 
     start (N, 3): classical unit vectors. scale: |f_min - f_mean|, to which settings.accuracy is relative; 0 takes a
-    norm bound of the operator. progress(dict) is called now and then. checkpoint: a path for the state of long runs.
+    norm bound of the operator. progress(dict) is called now and then. checkpoint: where the state of a long run is
+    kept, a path or an object with load() and save(bytes); the latter serves connected operators only.
 
     Clusters without coupling between them are solved apart, equal ones once; energies, errors and sectors add. The
     sector is then that of one state in a possibly degenerate ground space. Raises ValueError for a start of the wrong
@@ -57,7 +58,7 @@ def ground_state(
                 None if start is None else start[sites],
                 scale,
                 progress,
-                None if checkpoint is None else Path(f"{checkpoint}.{number}"),
+                Path(f"{checkpoint}.{number}") if isinstance(checkpoint, str | Path) else None,
             )
         results.append(known[key])
     return _together(op, parts, results)

@@ -16,7 +16,8 @@ from manybody.model.spin_matrices import coherent_states, harmonic_operators
 
 _SWEEPS = 40  # sweeps from every start
 _CULLS = (10, 20, 30)  # after these the better half of the starts goes on
-_KEPT = 4  # starts followed to the end
+_KEPT = 4  # starts followed further
+_FIRST_LOOK = 100  # quasi-Newton steps after which a start that is not the best must have become it
 
 
 @dataclass(frozen=True)
@@ -25,8 +26,8 @@ class ProductState:
 
     energy: its energy, an upper bound on the ground energy. amplitudes: one vector (2 S_i + 1,) per site, normalized.
     converged: no site can gain more than the tolerance on its own. residual: what the last update of all sites gained.
-    starts: how many were tried; finished: how many of them, the best ones, were followed to the end; hits: how many of
-    those ended at this energy.
+    starts: how many were tried; finished: how many of them, the best ones, were followed beyond the first sweeps; hits:
+    how many of those came to this energy.
     """
 
     energy: float
@@ -70,9 +71,15 @@ def product_energy(
     # Soft modes make the sweeps slow: the few best are finished by a quasi-Newton method, and one more sweep is the
     # test.
     order = np.argsort(field.energy(values), kind="stable")[:_KEPT]
-    finished = []
+    finished: list[tuple] = []
     for k in order:
         single = [a[k : k + 1].copy() for a in amplitudes]
+        if finished:
+            # Not worth the full effort unless a first part of it leads below the best.
+            energy, single, gain = _polished(field, single, threshold, _FIRST_LOOK, rounds=1)
+            if energy > min(energy for energy, *_ in finished) - threshold:
+                finished.append((energy, single, gain))
+                continue
         finished.append(_polished(field, single, threshold, max_iterations))
     best = int(np.argmin([energy for energy, *_ in finished]))
     energy, vectors, gain = finished[best]
@@ -87,13 +94,13 @@ def product_energy(
     )
 
 
-def _polished(field: "_MeanField", amplitudes: list[np.ndarray], threshold: float, iterations: int):
+def _polished(field: "_MeanField", amplitudes: list[np.ndarray], threshold: float, iterations: int, rounds: int = 5):
     """(energy, amplitudes, gain of the last sweep) after quasi-Newton steps and sweeps in turn, each lowering the
     energy.
     """
     values = field.expectations(amplitudes)
     gain = float(field.sweep(amplitudes, values)[0])
-    for _ in range(5):
+    for _ in range(rounds):
         if gain <= threshold:
             break
         x = minimize(

@@ -9,8 +9,9 @@ from spin_models import chain, heisenberg, parts, polynomial_of_pair, reference_
 
 from manybody.model import couplings
 from manybody.model.quantization import RULES, UndefinedQuantization, quantize
+from manybody.quantum import exact
 from manybody.quantum.basis import TooLarge
-from manybody.quantum.exact import estimate_exact, exact_ground_state
+from manybody.quantum.exact import LARGEST_DIMENSION, estimate_exact, exact_ground_state
 from manybody.quantum.operators import sparse_operator
 from manybody.quantum.result import QuantumSettings
 
@@ -34,7 +35,7 @@ def test_energies_of_the_reference_table(identifier):
 
 def test_every_energy_row_is_known_to_the_model_reader():
     for key in TOO_LARGE:
-        assert estimate_exact(reference_operator(table()[key])).dimension > 2_200_000
+        assert estimate_exact(reference_operator(table()[key])).dimension > LARGEST_DIMENSION
 
 
 @st.composite
@@ -121,6 +122,23 @@ def test_easy_axis_ferromagnet_and_flipped_start():
         result = exact_ground_state(quantize(f, 0.5), start=start)
         # All spins along the axis: -1.5 per bond exactly.
         assert abs(result.energy + 6) < 1e-13 and result.sector == sector
+
+
+@pytest.mark.parametrize("coarse", [0, 10**9])
+@pytest.mark.parametrize("led", [False, True])
+def test_search_of_large_problems_finds_the_sector(monkeypatch, coarse, led):
+    # The limits of the full scan lowered, so that small chains take the way of large ones.
+    monkeypatch.setattr(exact, "_SCAN_ALL", 5)
+    monkeypatch.setattr(exact, "_SCAN_COARSE", coarse)
+    for h in (0.0, 0.4, 0.9, 1.7, 2.6):
+        f = couplings.exchange(6, ring(6), [1.0, 1.0, 0.8]) + couplings.field(6, range(6), [0, 0, h])
+        op = quantize(f + couplings.anisotropy(6, [0, 3], [0, 0, 1], 0.3), 1)
+        start = np.tile([np.sqrt(1 - (h / 4) ** 2), 0, h / 4], (6, 1)) if led else None
+        result = exact_ground_state(op, start=start)
+        whole = np.linalg.eigvalsh(sparse_operator(op).toarray())[0]
+        assert abs(result.energy - whole) < 1e-11
+        sectors = [np.linalg.eigvalsh(sparse_operator(op, m).toarray())[0] for m in range(-6, 7)]
+        assert sectors[round(result.sector) + 6] - whole < 1e-11
 
 
 def test_ferrimagnet_has_the_spin_of_lieb_and_mattis():
