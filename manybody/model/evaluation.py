@@ -5,6 +5,7 @@ other terms of one or two sites are one sparse matrix and one vector over the ha
 sites are contracted one kind after the other. Configurations come as columns (N, 3, B): B is the batch.
 """
 
+import functools
 from collections import defaultdict
 
 import numpy as np
@@ -157,10 +158,7 @@ class HarmonicForm:
         total = np.zeros((self.sites, 3, 3, n.shape[2]))
         for k in self.ranks:
             if k >= 2:
-                inner = harmonics(k - 2, vectors)
-                total += np.einsum(
-                    "nqb,acqp,nbp->nacb", self._local(conjugate, k), second_derivative(k), inner, optimize=True
-                )
+                total += _curvature(k, self._local(conjugate, k), vectors)
         return total
 
     def value(self, n: np.ndarray) -> np.ndarray:
@@ -176,8 +174,7 @@ class HarmonicForm:
         vectors = np.moveaxis(n, 1, 2)
         gradient = np.zeros(n.shape)
         for k in self.ranks:
-            lowered = np.einsum("aqp,nqb->napb", derivative(k), self._local(conjugate, k), optimize=True)
-            gradient += np.einsum("napb,nbp->nab", lowered, harmonics(k - 1, vectors))
+            gradient += _pulled_back(k, self._local(conjugate, k), vectors)
         return values, gradient
 
     def hessian(self, configuration: np.ndarray) -> sparse.csr_array:
@@ -233,9 +230,7 @@ class Contraction:
             outer = self._contract(values, keep=(slot,))
             if slot == 0:
                 result = np.einsum("tqb,tqb->b", outer, values[0])
-            inner = harmonics(rank - 1, self._at(n, slot))
-            lowered = np.einsum("aqp,tqb->tapb", derivative(rank), outer, optimize=True)
-            total += self._scattered(slot, np.einsum("tapb,tbp->tab", lowered, inner))
+            total += self._scattered(slot, _pulled_back(rank, outer, self._at(n, slot)))
         return result, total
 
     def hessian(self, configuration: np.ndarray) -> sparse.csr_array:
@@ -262,21 +257,11 @@ class Contraction:
         ]
         for first, rank in enumerate(self.ranks):
             if rank >= 2:
-                outer = self._contract(values, keep=(first,))
-                inner = harmonics(rank - 2, self._at(n, first))
-                yield (
-                    first,
-                    first,
-                    np.einsum("tqb,acqp,tbp->tacb", outer, second_derivative(rank), inner, optimize=True),
-                )
+                yield first, first, _curvature(rank, self._contract(values, keep=(first,)), self._at(n, first))
             for second in range(len(self.ranks)):
                 if second != first:
-                    outer = self._contract(values, keep=(first, second))
-                    yield (
-                        first,
-                        second,
-                        np.einsum("tqpb,tqab,tpcb->tacb", outer, slopes[first], slopes[second], optimize=True),
-                    )
+                    half = np.einsum("tqpb,tqab->tapb", self._contract(values, keep=(first, second)), slopes[first])
+                    yield first, second, np.einsum("tapb,tpcb->tacb", half, slopes[second])
 
     def _at(self, n: np.ndarray, slot: int) -> np.ndarray:
         """Vectors of one slot, (T, B, 3)."""
@@ -289,22 +274,39 @@ class Contraction:
     def _contract(self, values: list[np.ndarray], keep: tuple[int, ...]) -> np.ndarray:
         """Coefficients contracted with the harmonics of every slot but those kept (in that order): (T, kept..., B)."""
         batch = len(self.ranks) + 1
-        operands = [self.coefficients, [0, *range(1, batch)]]
-        for slot, value in enumerate(values):
+        tensor, axes = self.coefficients, [0, *range(1, batch)]
+        # One slot after the other: for so few operands the search for a better order costs more than it saves.
+        for slot in range(len(self.ranks)):
             if slot not in keep:
-                operands += [value, [0, slot + 1, batch]]
-        kept = [slot + 1 for slot in keep]
-        return np.einsum(*operands, [0, *kept, batch], optimize=len(operands) > 4)
+                left = [axis for axis in axes if axis not in (slot + 1, batch)]
+                tensor = np.einsum(tensor, axes, values[slot], [0, slot + 1, batch], [*left, batch])
+                axes = [*left, batch]
+        return np.einsum(tensor, axes, [0, *[slot + 1 for slot in keep], batch])
 
     def _scattered(self, slot: int, local: np.ndarray) -> np.ndarray:
         """Sum (T, 3, B) onto the sites of a slot: (N, 3, B)."""
         return (self.scatter[slot] @ local.reshape(len(local), -1)).reshape(self.sites, *local.shape[1:])
 
 
+@functools.cache
 def second_derivative(rank: int) -> np.ndarray:
     """(3, 3, 2 rank + 1, 2 rank - 3): d2 C_rank / dn_a dn_b = D[a, b] C_(rank-2) as solid harmonics; rank >= 2."""
     matrix = np.einsum("aqp,bpr->abqr", derivative(rank), derivative(rank - 1))
     return (matrix + matrix.swapaxes(0, 1)) / 2
+
+
+def _pulled_back(rank: int, outer: np.ndarray, vectors: np.ndarray) -> np.ndarray:
+    """Gradient (T, 3, B) of outer . C_rank(n): outer (T, 2 rank + 1, B), vectors n (T, B, 3)."""
+    if rank == 1:
+        return outer[:, CARTESIAN.argsort()]
+    lowered = np.einsum("aqp,tqb->tapb", derivative(rank), outer)
+    return np.einsum("tapb,tbp->tab", lowered, harmonics(rank - 1, vectors))
+
+
+def _curvature(rank: int, outer: np.ndarray, vectors: np.ndarray) -> np.ndarray:
+    """Second derivatives (T, 3, 3, B) of outer . C_rank(n), shapes as in `_pulled_back`; rank >= 2."""
+    lowered = np.einsum("acqp,tqb->tacpb", second_derivative(rank), outer)
+    return np.einsum("tacpb,tbp->tacb", lowered, harmonics(rank - 2, vectors))
 
 
 def _tangential(n: np.ndarray, v: np.ndarray) -> np.ndarray:
