@@ -87,6 +87,7 @@ class DaskExecutor:
     # what the engine calls
 
     def start(self, parts: int, wait: Callable[[str], None]) -> list[Slot]:
+        self._quieten()
         client = self._client = self.connect(parts)
         self.dashboard = getattr(client, "dashboard_link", "") or ""
         client.subscribe_topic(self.topic, self._on_message)
@@ -145,6 +146,17 @@ class DaskExecutor:
             self._stack.close()
 
     # inside
+
+    def _quieten(self) -> None:
+        """Deaths of workers and lost connections are told in our own words; dask's loggers get their levels back."""
+        import distributed  # noqa: F401 - sets the levels that are raised here
+
+        loggers = [
+            logging.getLogger(name) for name in logging.root.manager.loggerDict if name.startswith("distributed")
+        ]
+        for logger in loggers:
+            self._stack.callback(logger.setLevel, logger.level)
+            logger.setLevel(logging.CRITICAL)
 
     def _spawn(self, coroutine) -> None:
         loop = self._client.loop.asyncio_loop
@@ -256,7 +268,6 @@ class LocalProcesses(DaskExecutor):
         from distributed import Client, LocalCluster
         from distributed.system import MEMORY_LIMIT
 
-        logging.getLogger("distributed").setLevel(logging.CRITICAL)  # deaths of workers are told in our own words
         workers = max(1, min(self.workers, parts))
         self.threads = max(1, min(self.workers, cores()) // workers) if parts < cores() else 1
         # dask writes these into our own environment and lets what is there win, so it is put back when we are done
@@ -287,7 +298,6 @@ class ExistingCluster(DaskExecutor):
     def connect(self, parts: int):
         from distributed import Client
 
-        logging.getLogger("distributed").setLevel(logging.CRITICAL)
         if self.scheduler_file is not None:
             path = Path(self.scheduler_file)
             if not path.is_file():
