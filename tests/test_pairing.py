@@ -78,6 +78,15 @@ def test_ferromagnet_has_no_gap_under_wick():
     assert record["product_energy"] == pytest.approx(-3.0, abs=1e-12)
 
 
+def test_symbols_of_a_dimer():
+    # pair exchange under substitution, exact: upper symbol ((S+1)/S)^2 n.n', lower symbol n.n'
+    record = solve(exchange(2, [(0, 1)], 1.0), 1.5, "substitution")
+    assert record["coherent_energy"] == pytest.approx(-1.0, rel=1e-12)
+    assert record["upper_symbol_energy"] == pytest.approx(-((2.5 / 1.5) ** 2), rel=1e-9)
+    assert record["upper_symbol_certified"]
+    assert record["cluster_bound"] == pytest.approx(record["quantum_energy"], rel=1e-10)
+
+
 def test_product_state_that_is_not_coherent():
     # S = 1 with a large easy plane: the best product state is m = 0 everywhere, exactly (D > 4 J z, by hand)
     f = anisotropy(3, range(3), [0, 0, 1], 10.0) + exchange(3, [(0, 1), (1, 2)], 0.1)

@@ -8,6 +8,7 @@ once per function in manybody.model.evaluation.
 
 import functools
 import hashlib
+import math
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 
@@ -111,6 +112,13 @@ class EnergyFunction:
     def largest_coefficient(self) -> float:
         """The largest modulus among the coefficients of the terms, the constant left out; 0 without terms."""
         return max((float(np.abs(g.coefficients).max()) for g in self.groups), default=0.0)
+
+    def rescaled(self) -> tuple["EnergyFunction", int]:
+        """(g, exponent): f = constant + 2^exponent g exactly, the largest coefficient of g in [1/2, 1)."""
+        exponent = math.frexp(self.largest_coefficient)[1]
+        # In two steps, since 2^-exponent itself may overflow.
+        half = -exponent // 2
+        return (self - self.constant) * math.ldexp(1.0, half) * math.ldexp(1.0, -exponent - half), exponent
 
     def fingerprint(self) -> str:
         """A hexadecimal digest of the content, equal in every process for equal functions."""

@@ -1,14 +1,13 @@
-"""Rigorous bounds on a quantum ground energy: sums of exact cluster energies, and minima of the two symbols.
+"""Rigorous lower bounds on a quantum ground energy: sums of exact cluster energies.
 
 Cluster bound (Anderson 1951, Phys. Rev. 83, 1260): if H is a sum of cluster operators, the sum of their ground
 energies lies below the ground energy of H, since one state cannot be better for each of them than its own ground
 state.
 """
 
+import math
 from collections import Counter
-from collections.abc import Callable
 from dataclasses import dataclass
-from typing import Any
 
 import numpy as np
 
@@ -62,6 +61,9 @@ def cluster_bound(
     ValueError if no cover fits the limits or a kind does not exist for this operator.
     """
     op = without_scalars(op)
+    # Equal clusters are recognized by rounded coefficients, so these have to be of order one.
+    symbol, exponent = op.symbol.rescaled()
+    constant, op = op.symbol.constant, SpinOperator(op.spins, symbol)
     values: dict[str, float] = {}
     best: tuple[float, Cover, int] | None = None
     skipped: list[str] = []
@@ -93,9 +95,9 @@ def cluster_bound(
             skipped.append(cover.kind)
             continue
         terms = np.array([count * known[key] for key, (_, count) in pieces.items()])
-        total = op.symbol.constant + terms.sum()
+        total = constant + math.ldexp(terms.sum(), exponent)
         # Rounding of the weights and of this sum.
-        total -= 8 * np.finfo(float).eps * (np.abs(terms).sum() + abs(op.symbol.constant))
+        total -= 8 * np.finfo(float).eps * (math.ldexp(np.abs(terms).sum(), exponent) + abs(constant))
         values[cover.kind] = float(total)
         if best is None or total > best[0]:
             best = (float(total), cover, len(pieces))
@@ -110,41 +112,6 @@ def cluster_bound(
         largest=max(len(cluster) for cluster in cover.clusters),
         candidates=values,
         skipped=tuple(skipped),
-    )
-
-
-@dataclass(frozen=True)
-class SymbolEnergies:
-    """coherent_energy: minimum of the lower symbol, an upper bound on the ground energy (best coherent product
-    state), at configuration (N, 3). upper_symbol_energy: rigorous lower bound from the upper symbol: its certified
-    minimum, or the certifier's bound where upper_symbol_certified is False.
-    """
-
-    coherent_energy: float
-    configuration: np.ndarray
-    upper_symbol_energy: float
-    upper_symbol_certified: bool
-
-
-def symbol_energies(
-    op: SpinOperator,
-    minimize: Callable[[EnergyFunction], Any],
-    certify: Callable[[EnergyFunction, np.ndarray], Any],
-) -> SymbolEnergies:
-    """Minima of both symbols (Lieb 1973, Commun. Math. Phys. 31, 327; Berezin 1972).
-
-    minimize(f) returns an object with .energy and .configuration (N, 3); certify(f, configuration) one with .bound and
-    .certified. They are handed in, since this branch knows no minimizer.
-    """
-    lower = minimize(op.lower_symbol())
-    upper_symbol = op.upper_symbol()
-    upper = minimize(upper_symbol)
-    certificate = certify(upper_symbol, upper.configuration)
-    return SymbolEnergies(
-        coherent_energy=float(lower.energy),
-        configuration=np.asarray(lower.configuration),
-        upper_symbol_energy=float(min(certificate.bound, upper.energy)),
-        upper_symbol_certified=bool(certificate.certified),
     )
 
 

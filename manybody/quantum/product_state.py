@@ -5,6 +5,7 @@ state of one site is the lowest eigenvector of its mean-field operator; sites th
 Every update lowers the energy, so it falls monotonically for every start.
 """
 
+import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 
@@ -55,6 +56,8 @@ def product_energy(
     of the couplings. The best of the starts is a minimum over single-site changes, not proved to be the global one.
     Raises ValueError for starts of the wrong shape.
     """
+    symbol, exponent = op.symbol.rescaled()
+    constant, op = op.symbol.constant, SpinOperator(op.spins, symbol)
     field = _MeanField(op)
     amplitudes = _starts(op, field, starts, seed, random_starts)
     count = len(amplitudes[0])
@@ -84,10 +87,10 @@ def product_energy(
     best = int(np.argmin([energy for energy, *_ in finished]))
     energy, vectors, gain = finished[best]
     return ProductState(
-        energy=energy,
+        energy=math.ldexp(energy, exponent) + constant,
         amplitudes=field.by_site(vectors),
         converged=bool(gain <= 10 * threshold),
-        residual=gain,
+        residual=math.ldexp(gain, exponent),
         starts=count,
         hits=sum(other <= energy + 1e3 * threshold for other, *_ in finished),
         finished=len(finished),

@@ -13,7 +13,7 @@ from spin_models import chain, complete, cubic, heisenberg, honeycomb, kagome, p
 from manybody.model import couplings
 from manybody.model.energy import EnergyFunction, Group
 from manybody.model.quantization import RULES, UndefinedQuantization, quantize
-from manybody.quantum.bounds import cluster_bound, symbol_energies
+from manybody.quantum.bounds import cluster_bound
 from manybody.quantum.clusters import canonical_order, covers, split
 from manybody.quantum.exact import exact_ground_state
 from manybody.quantum.product_state import product_energy
@@ -192,31 +192,6 @@ def test_the_energy_ladder(f, spin, rule):
     assert exact.energy - exact.error <= product.energy
     assert product.energy <= lower + slack
     assert product.converged
-
-
-def test_symbol_energies_of_a_dimer():
-    # Pair exchange: upper symbol ((S+1)/S)^2 J n.n', lower symbol J n.n' under `substitution`.
-    class Result:
-        def __init__(self, energy, configuration):
-            self.energy, self.configuration = energy, configuration
-
-    class Proof:
-        def __init__(self, bound, certified):
-            self.bound, self.certified = bound, certified
-
-    def certify(f, configuration):
-        return Proof(float(f.value(configuration)) - 1e-9, True)
-
-    op = quantize(couplings.exchange(2, [[0, 1]], 1.0), 1.5)
-    found = symbol_energies(op, lambda f: Result(*lowest_of(f)), certify)
-    assert abs(found.coherent_energy + 1) < 1e-8
-    assert abs(found.upper_symbol_energy + (2.5 / 1.5) ** 2) < 1e-7
-    assert found.upper_symbol_certified
-    exact = exact_ground_state(op).energy
-    assert found.upper_symbol_energy < exact < found.coherent_energy
-    # Without a proof the bound of the certifier stands, not the minimum found.
-    loose = symbol_energies(op, lambda f: Result(*lowest_of(f)), lambda f, n: Proof(-5.0, False))
-    assert loose.upper_symbol_energy == -5.0 and not loose.upper_symbol_certified
 
 
 def test_separate_clusters_and_free_sites():
