@@ -176,9 +176,12 @@ def _count(entry: TermEntry, lattice: Lattice) -> int:
 def check_values(parameters: dict, terms: list, found: Found) -> None:
     """Arithmetic must have a finite value, and an axis a direction, at every combination of the parameters it uses."""
     for path, entry in terms:
-        if entry is None or not entry.names <= parameters.keys():
+        if entry is None:
             continue
+        sound = True
         for key, position, expression in _expressions(path, entry, found):
+            if not expression.names <= parameters.keys():
+                continue  # check_names tells of it
             for values in _combinations(expression.names, parameters):
                 try:
                     expression(values)
@@ -186,11 +189,9 @@ def check_values(parameters: dict, terms: list, found: Found) -> None:
                     found.add(
                         (*path, key, *position), f"{error}{_where(values)}", "change the arithmetic or the values"
                     )
+                    sound = sound and key != "axis"
                     break
-            else:
-                continue
-            break
-        else:
+        if sound:
             _check_axis(path, entry, parameters, found)
 
 
@@ -198,6 +199,8 @@ def _check_axis(path: tuple, entry: TermEntry, parameters: dict, found: Found) -
     if not entry.axis:
         return
     names = frozenset().union(*(x.names for x in entry.axis if isinstance(x, Expression)))
+    if not names <= parameters.keys():
+        return
     for values in _combinations(names, parameters):
         try:
             unit_axis([x(values) if isinstance(x, Expression) else x for x in entry.axis])

@@ -300,3 +300,9 @@ def test_messages_stay_short_and_printable():
     ):
         for problem in problems(text):
             assert len(problem.value) <= 2 * QUOTED + 10 and str(problem).isprintable()
+
+
+def test_one_term_tells_all_its_faults_at_once():
+    text = lattice('shape = "chain"\nsites = 4', 'axis = [0, 0, 0]\nanisotropy = "2 * q"')
+    told = [problem.wrong for problem in problems(text)]
+    assert len(told) == 2 and "must not be zero" in told[0] and '"q", which is no parameter' in told[1]
