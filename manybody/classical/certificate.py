@@ -10,7 +10,7 @@ import numpy as np
 
 from manybody.classical.clusters import cluster_sum
 from manybody.classical.distinct import coupled_sites
-from manybody.classical.minimize import MinimizeSettings, QuadraticProblem, rescaled
+from manybody.classical.minimize import MinimizeSettings, problem_of, rescaled
 from manybody.classical.multipliers import dual_bound, dual_form, multipliers_at
 from manybody.classical.relaxation import relax, rounded
 from manybody.model.energy import EnergyFunction
@@ -79,7 +79,7 @@ class Prover:
         if not coupled_sites(f).any():
             self.bound, self.method = self.scaled.mean, "constant"
         elif self.scaled.is_quadratic:
-            problem = QuadraticProblem(self.scaled, MinimizeSettings())
+            problem = problem_of(self.scaled, MinimizeSettings())
             self.form = dual_form(problem.form)
             self.bound, self.method = problem.form.constant + problem.floor * (1 + 1e-14), "unfrustrated"
         else:

@@ -16,7 +16,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.polynomial import chebyshev
 
-from manybody.classical.minimize import MinimizeSettings, QuadraticProblem, minimize
+from manybody.classical.minimize import MinimizeSettings, minimize, problem_of
 from manybody.classical.multipliers import dual_bound, dual_form, multipliers_at
 from manybody.classical.relaxation import relax
 from manybody.classical.small_clusters import can_be_bounded, lower_bound
@@ -106,7 +106,7 @@ def _cluster_minimum(piece: EnergyFunction, seed: int, evaluations: int = 400_00
     found = minimize(piece, MinimizeSettings(starts=64, seed=seed))
     best = -math.inf
     if piece.is_quadratic:
-        form = dual_form(QuadraticProblem(piece, MinimizeSettings()).form)
+        form = dual_form(problem_of(piece, MinimizeSettings()).form)
         best = dual_bound(form, multipliers_at(form, found.configuration))
         if found.energy - best > 1e-9 * size:
             solution = relax(form, np.random.default_rng(seed), found.configuration)

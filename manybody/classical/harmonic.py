@@ -13,10 +13,9 @@ import numpy as np
 from manybody.classical.frequencies import Fluctuations, HarmonicTrouble, UnstablePoint, fluctuations
 from manybody.classical.minimize import (
     ClassicalResult,
-    GeneralProblem,
     MinimizeSettings,
-    QuadraticProblem,
     minimize,
+    problem_of,
     rescaled,
 )
 from manybody.classical.sphere_product import normalized, project, retract
@@ -120,7 +119,7 @@ class _Search:
         self.axes = f.symmetry_axes()
         scaled, _ = rescaled(f)
         newton = MinimizeSettings(starts=1, sweeps=0)
-        self.problem = QuadraticProblem(scaled, newton) if scaled.is_quadratic else GeneralProblem(scaled, newton)
+        self.problem = problem_of(scaled, newton)
         self.best: _Point | None = None
         self.highest = -np.inf
 

@@ -30,7 +30,7 @@ class MinimizeSettings:
     starts: int = 64
     seed: int = 1
     tolerance: float = 1e-10
-    max_site_starts: int = 6_000_000
+    max_site_starts: int = 2_000_000
     sweeps: int = 400
     newton_steps: int = 200
 
@@ -88,7 +88,7 @@ def minimize(
         energy = float(f.value(up))
         return ClassicalResult(energy, up, (Minimum(energy, up, 1),), 0.0, True, 0, True)
     scaled, exponent = rescaled(f)
-    problem = QuadraticProblem(scaled, settings) if scaled.is_quadratic else GeneralProblem(scaled, settings)
+    problem = problem_of(scaled, settings)
     pool = _Pool(scaled, problem.strength)
     used, proven = 0, False
     rounds = _rounds(problem, settings, extra_starts)
@@ -122,23 +122,24 @@ def minimize(
 
 
 def rescaled(f: EnergyFunction) -> tuple[EnergyFunction, int]:
-    """(g, exponent) with f = f.constant + 2^exponent g and the largest coefficient of g between 1/2 and 1."""
+    """(g, exponent) with f = f.constant + 2^exponent g and the largest coefficient of g between 2^-9 and 2^8."""
     exponent = math.frexp(f.largest_coefficient)[1]
-    g = f - f.constant
-    # in two steps: 2^-exponent itself may overflow
-    half = -exponent // 2
-    return g * math.ldexp(1.0, half) * math.ldexp(1.0, -exponent - half), exponent
+    g = f if f.constant == 0.0 else f - f.constant
+    if abs(exponent) <= 8:  # near enough; arithmetic on millions of terms takes its time
+        return g, 0
+    # in two steps where 2^-exponent itself may overflow
+    half = -exponent // 2 if abs(exponent) > 1000 else 0
+    return (g * math.ldexp(1.0, half) if half else g) * math.ldexp(1.0, -exponent - half), exponent
 
 
 class QuadraticProblem:
     """Descent for a function of degree two."""
 
-    def __init__(self, f: EnergyFunction, settings: MinimizeSettings):
-        self.form: SiteForm = site_form(*f.quadratic_form(), tolerance=1e-15)
+    def __init__(self, form: SiteForm, settings: MinimizeSettings):
+        self.form = form
         self.settings = settings
         self.strength = self.form.strength()
         self.floor = starts.unfrustrated_bound(self.form)
-        form = self.form
         self.field = form.field if len(form.field) else np.zeros((form.sites, 3))
         shifted = form.diagonal if len(form.diagonal) else np.zeros((0 if form.isotropic else form.sites, 3, 3))
         if len(form.diagonal):
@@ -157,6 +158,7 @@ class QuadraticProblem:
         x = np.array(configurations, dtype=float)
         energies, gradients = np.empty(len(x)), np.empty(len(x))
         inner = int(np.clip(4 * np.sqrt(form.sites), 500, 3000))
+        budget = max(2000, min(10 * inner, 3_000_000_000 // form.sites))
         arrays = (form.indptr, form.neighbours, form.weights, form.blocks)
         for k in range(len(x)):
             # plain alignment first: it leaves high random states and saddle points fastest; over-relaxation for the long waves
@@ -164,10 +166,17 @@ class QuadraticProblem:
             compiled.descend(x[k], *arrays, self.shifted, self.field, 1.7, settings.sweeps, 5e-3 * strength)
             energy, gradients[k], _ = compiled.newton(
                 x[k], *arrays, form.diagonal, self.field,
-                settings.tolerance * strength, strength, settings.newton_steps, inner, 10 * inner,
+                settings.tolerance * strength, strength, settings.newton_steps, inner, budget,
             )  # fmt: skip
             energies[k] = energy + form.constant
         return polish.Polished(x, energies, gradients)
+
+
+def problem_of(f: EnergyFunction, settings: MinimizeSettings) -> "QuadraticProblem | GeneralProblem":
+    """The descent that suits f, whose couplings should be of order one (`rescaled`)."""
+    if f.is_quadratic:
+        return QuadraticProblem(site_form(*f.quadratic_form(), tolerance=1e-15), settings)
+    return GeneralProblem(f, settings)
 
 
 class GeneralProblem:

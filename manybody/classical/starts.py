@@ -1,7 +1,5 @@
 """Starting configurations: random, from the lowest eigenvectors of the coupling matrix, and placed along the strongest bonds."""
 
-from collections.abc import Callable
-
 import numpy as np
 import scipy.sparse as sp
 from scipy.sparse.csgraph import breadth_first_order, connected_components, minimum_spanning_tree
@@ -10,6 +8,7 @@ from scipy.sparse.linalg import LinearOperator, eigsh
 from manybody.classical.site_form import SiteForm
 from manybody.classical.sphere_product import normalized
 
+FILTER_ROUNDS = 8
 DENSE_EIGENVECTORS = 800  # matrix dimension up to which the lowest eigenspace is computed in full
 
 
@@ -17,8 +16,8 @@ def lowest_mode_starts(form: SiteForm, generator: np.random.Generator, count: in
     """(count, N, 3) configurations made of the lowest eigenvectors of the coupling matrix (Luttinger and Tisza 1946, Phys. Rev. 70, 954).
 
     Small matrices: a random vector and its normalization are projected in turn on the lowest eigenspace, which finds a
-    configuration of unit vectors in that space where there is one. Large ones: random vectors filtered by a Chebyshev polynomial of
-    the matrix that keeps the lowest part of the spectrum. A little noise is added, so that no start sits on a saddle point.
+    configuration of unit vectors in that space where there is one. Large ones: the projection is a Chebyshev polynomial of the
+    matrix that keeps the lowest part of the spectrum. A little noise is added, so that no start sits on a saddle point.
     """
     if form.sites * (1 if form.isotropic else 3) <= DENSE_EIGENVECTORS:
         configurations = _projected(form, generator, count)
@@ -41,10 +40,12 @@ def _projected(form: SiteForm, generator: np.random.Generator, count: int) -> np
 
 
 def _filtered(form: SiteForm, generator: np.random.Generator, count: int) -> np.ndarray:
-    from manybody.classical.vector_sweeps import product
+    """Filter and normalize in turn: the nonlinear step sorts out a single domain where the filter alone leaves several."""
+    from manybody.classical.vector_sweeps import filter_step, gradient, product
 
     arrays = form.arrays[:5]
-    out = np.empty((form.sites, 3))
+    out, multipliers = np.empty((form.sites, 3)), np.empty(form.sites)
+    none = np.zeros((form.sites, 3))
 
     def apply(v):
         product(np.ascontiguousarray(v).reshape(form.sites, 3), *arrays, out)
@@ -52,34 +53,38 @@ def _filtered(form: SiteForm, generator: np.random.Generator, count: int) -> np.
 
     operator = LinearOperator((3 * form.sites,) * 2, matvec=apply, dtype=float)
     first = generator.standard_normal(3 * form.sites)
+    degree = int(np.clip(2 * np.sqrt(form.sites), 100, 1500))
+    # the filter is only as sharp as the lowest eigenvalue is known
+    accuracy = {"SA": 0.2 * (6.0 / degree) ** 2, "LA": 1e-2}
     low, high = (
-        float(eigsh(operator, k=1, which=end, tol=1e-2, v0=first, return_eigenvectors=False)[0]) for end in ("SA", "LA")
+        float(eigsh(operator, k=1, which=end, tol=tol, v0=first, ncv=40, return_eigenvectors=False)[0])
+        for end, tol in accuracy.items()
     )
     width = max(high - low, 1e-300)
-    degree = int(np.clip(3 * np.sqrt(form.sites), 100, 1500))
     # everything within (6 / degree)^2 of the lowest eigenvalue, relative to the width, is amplified by up to exp(12)
-    cut = low + width * (6.0 / degree) ** 2
-    top = high + 0.02 * width
-    return np.array(
-        [_chebyshev(apply, generator.standard_normal((form.sites, 3)), degree, cut, top) for _ in range(count)]
-    )
-
-
-def _chebyshev(apply: Callable, v: np.ndarray, degree: int, cut: float, top: float) -> np.ndarray:
-    """T_degree of the matrix with [cut, top] mapped to [-1, 1], times v, rescaled on the way."""
+    cut, top = low + width * (6.0 / degree) ** 2, high + 0.02 * width
     centre, half = (top + cut) / 2, (top - cut) / 2
-    before, now = v, (apply(v) - centre * v) / half
-    for k in range(degree - 1):
-        after = apply(now)
-        after -= centre * now
-        after *= 2.0 / half
-        after -= before
-        before, now = now, after
-        if k % 50 == 49:
-            size = np.abs(now).max()
-            before /= size
-            now /= size
-    return now
+    found = []
+    for _ in range(count):
+        x = generator.standard_normal((form.sites, 3))
+        energy = np.inf
+        for _ in range(FILTER_ROUNDS):
+            before, now = x.copy(), x
+            product(before, *arrays, out)
+            now = (out - centre * before) / half
+            for k in range(degree - 1):
+                filter_step(now, before, *arrays, centre, 2.0 / half, out)
+                before, now = now, before
+                if k % 50 == 49:
+                    size = np.abs(now).max()
+                    before /= size
+                    now /= size
+            x = normalized(now)
+            last, energy = energy, gradient(x, *arrays, none, out, multipliers)[0]
+            if energy > last - 1e-4 * abs(energy):
+                break
+        found.append(x)
+    return np.array(found)
 
 
 def placed_start(form: SiteForm, generator: np.random.Generator) -> np.ndarray:

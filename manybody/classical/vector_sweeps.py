@@ -186,6 +186,17 @@ def place(x, order, indptr, neighbours, weights, blocks, field):
 
 
 @njit(cache=True, fastmath=FAST)
+def filter_step(now, before, indptr, neighbours, weights, blocks, diagonal, centre, factor, out):
+    """before <- factor (M - centre) now - before, one step of the Chebyshev recursion."""
+    product(now, indptr, neighbours, weights, blocks, diagonal, out)
+    a = now.reshape(now.size)
+    b = before.reshape(before.size)
+    m = out.reshape(out.size)
+    for k in range(len(a)):
+        b[k] = factor * (m[k] - centre * a[k]) - b[k]
+
+
+@njit(cache=True, fastmath=FAST)
 def gradient(x, indptr, neighbours, weights, blocks, diagonal, field, g, multipliers):
     """Tangential gradient into g, x_i.(M x - h)_i into multipliers; returns (f - constant, largest |g_i|). `field` has N rows."""
     product(x, indptr, neighbours, weights, blocks, diagonal, g)
