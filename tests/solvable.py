@@ -141,8 +141,7 @@ def classical_ring(sites):
 def first_coefficient(vectors, pairs, kappa):
     """e_1 of sum n_i.n_j at a minimum: half the symplectic frequencies plus kappa times the trace of the Hessian.
 
-    CONVENTIONS: kappa = -1/4 under wick, 0 weyl, 1/4 toeplitz. The frequencies come from the real antisymmetric form, so
-    zero modes cost accuracy of about 1e-8; enough here.
+    kappa = -1/4 under wick, 0 weyl, 1/4 toeplitz. Zero modes cost this simple form accuracy: good to about 1e-8.
     """
     sites = len(vectors)
     frames = []

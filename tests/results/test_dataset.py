@@ -3,10 +3,18 @@ import os
 import numpy as np
 import pytest
 import xarray as xr
-from manybody.results import dataset
-from manybody.results.dataset import encode_attrs, flag_words, open_results, points_table, records_to_tree, write_results
-from manybody.results.schema import VARIABLES
 from solvable import ATTRS, ring_records
+
+from manybody.results import dataset
+from manybody.results.dataset import (
+    encode_attrs,
+    flag_words,
+    open_results,
+    points_table,
+    records_to_tree,
+    write_results,
+)
+from manybody.results.schema import VARIABLES
 
 
 @pytest.fixture(scope="module")

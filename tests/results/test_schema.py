@@ -1,6 +1,7 @@
 import re
 
 import pytest
+
 from manybody.results.schema import GROUPS, RESERVED_NAMES, VARIABLES, units_text
 
 
