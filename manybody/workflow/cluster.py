@@ -270,8 +270,9 @@ class LocalProcesses(DaskExecutor):
 
         workers = max(1, min(self.workers, parts))
         self.threads = max(1, min(self.workers, cores()) // workers) if parts < cores() else 1
-        # dask writes these into our own environment and lets what is there win, so it is put back when we are done
+        # dask passes these on from our own environment, and writes there too: it is put back when we are done
         self._stack.callback(_restore_environment, {name: os.environ.get(name) for name in THREADS})
+        os.environ.update({name: str(self.threads) for name in THREADS})
         with dask.config.set({f"distributed.nanny.pre-spawn-environ.{name}": self.threads for name in THREADS}):
             cluster = LocalCluster(
                 n_workers=workers,
