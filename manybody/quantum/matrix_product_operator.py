@@ -83,9 +83,11 @@ def build(terms: Terms, matrices: Sequence[dict[Letter, np.ndarray]], conserved:
         links.append(new_links)
         step = np.array([0] + [q if conserved else 0 for _, q in letters])
         new_delta = np.concatenate([np.zeros(2, np.int64), delta[parent[0]] + step[parent[1]]])
-        site = _site(links, letters, matrices[position], delta, new_delta)
-        key = tuple(array.tobytes() for array in (site.entries, site.weights, site.delta_left, site.delta_right))
-        sites.append(shared.setdefault(key, site))
+        merged = [np.concatenate(arrays) for arrays in zip(*links, strict=True)]
+        key = (id(matrices[position]), *(array.tobytes() for array in (*merged, delta, new_delta)))
+        if key not in shared:
+            shared[key] = _site(merged, letters, matrices[position], delta, new_delta)
+        sites.append(shared[key])
         delta, row, rest, value = new_delta, new_row, new_rest, new_value
     return sites
 
@@ -112,20 +114,29 @@ def _cut(row, letter, rest, value, letters: int, largest: float):
     strings, r = np.unique(row * letters + letter, return_inverse=True)
     tails, c = np.unique(rest, return_inverse=True)
     shape = (strings.size, tails.size)
-    matrix = sparse.coo_array((value, (r, c)), shape).tocsr()
-    matrix.sum_duplicates()
-    coo = matrix.tocoo()
-    keep = np.abs(coo.data) > 1e-15 * largest
-    r, c, value = coo.row[keep].astype(np.int64), coo.col[keep].astype(np.int64), coo.data[keep]
-    pattern = sparse.csr_array((np.ones(r.size), (r, c)), shape)
-    rows, columns = _cover(pattern)
-    both = sparse.block_array([[None, pattern], [pattern.T, None]]) if r.size else sparse.csr_array((sum(shape),) * 2)
-    count, label = csgraph.connected_components(both, directed=False)
-    row_label, column_label = label[: shape[0]], label[shape[0] :]
-    row_size = np.bincount(row_label, minlength=count)
-    column_size = np.bincount(column_label, minlength=count)
-    cover_size = np.bincount(row_label[rows], minlength=count) + np.bincount(column_label[columns], minlength=count)
-    worth = (cover_size > 1) & (np.maximum(row_size, column_size) <= LARGEST_SVD)
+    cells, place = np.unique(r * max(tails.size, 1) + c, return_inverse=True)
+    total = np.zeros(cells.size, value.dtype)
+    np.add.at(total, place, value)
+    keep = np.abs(total) > 1e-15 * largest
+    r, c, value = cells[keep] // max(tails.size, 1), cells[keep] % max(tails.size, 1), total[keep]
+    if (np.bincount(c, minlength=1) <= 1).all() or (np.bincount(r, minlength=1) <= 1).all():
+        # Stars only: every piece has rank one, its centre is the cover.
+        by_rows = bool((np.bincount(c, minlength=1) <= 1).all())
+        rows, columns = np.zeros(shape[0], bool), np.zeros(shape[1], bool)
+        (rows if by_rows else columns)[r if by_rows else c] = True
+        row_label, column_label = np.zeros(shape[0], np.int64), np.zeros(shape[1], np.int64)
+        worth, count = np.zeros(1, bool), 1
+    else:
+        pattern = sparse.csr_array((np.ones(r.size), (r, c)), shape)
+        rows, columns = _cover(pattern)
+        both = sparse.block_array([[None, pattern], [pattern.T, None]])
+        count, label = csgraph.connected_components(both, directed=False)
+        row_label, column_label = label[: shape[0]], label[shape[0] :]
+        row_size = np.bincount(row_label, minlength=count)
+        column_size = np.bincount(column_label, minlength=count)
+        cover_size = np.bincount(row_label[rows], minlength=count)
+        cover_size += np.bincount(column_label[columns], minlength=count)
+        worth = (cover_size > 1) & (np.maximum(row_size, column_size) <= LARGEST_SVD)
 
     links, entries, parents, channels = [], [], [], 2
     dense = np.zeros(count, bool)
@@ -204,17 +215,18 @@ def _cover(pattern: sparse.csr_array) -> tuple[np.ndarray, np.ndarray]:
 
 def _site(links, letters, matrices, delta_left, delta_right) -> OperatorSite:
     """Numbers of one site from links (left channel, right channel, letter number, weight)."""
-    left, right, letter, weight = (np.concatenate(arrays) for arrays in zip(*links, strict=True))
+    left, right, letter, weight = links
     dimension = next(iter(matrices.values())).shape[0]
     rows = [np.arange(dimension)] + [None] * len(letters)
     columns, values = list(rows), [np.ones(dimension)] + [None] * len(letters)
-    for index in np.unique(letter):
+    used = np.unique(letter).tolist()
+    for index in used:
         if index:
             matrix = matrices[letters[index - 1]]
             rows[index], columns[index] = np.nonzero(matrix)
             values[index] = matrix[rows[index], columns[index]]
     pieces, numbers = [], []
-    for index in np.unique(letter):
+    for index in used:
         mine = letter == index
         size = rows[index].size
         pieces.append(
@@ -229,10 +241,17 @@ def _site(links, letters, matrices, delta_left, delta_right) -> OperatorSite:
             )
         )
         numbers.append(np.outer(weight[mine], values[index]).reshape(-1))
-    entries, place = np.unique(np.concatenate(pieces), axis=0, return_inverse=True)
-    weights = np.zeros(len(entries), np.result_type(*numbers))
-    np.add.at(weights, place.reshape(-1), np.concatenate(numbers))
-    return OperatorSite(np.ascontiguousarray(entries), weights, delta_left, delta_right)
+    entries, weights = _merged(np.concatenate(pieces), np.concatenate(numbers))
+    return OperatorSite(entries, weights, delta_left, delta_right)
+
+
+def _merged(entries: np.ndarray, weights: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Equal entries once, with the sum of their weights, in lexical order."""
+    shape = tuple(entries.max(axis=0) + 1)
+    keys, place = np.unique(np.ravel_multi_index(entries.T, shape), return_inverse=True)
+    total = np.zeros(keys.size, weights.dtype)
+    np.add.at(total, place, weights)
+    return np.ascontiguousarray(np.stack(np.unravel_index(keys, shape), axis=1)), total
 
 
 def composite(first: OperatorSite, second: OperatorSite, dims: tuple[int, int]) -> OperatorSite:
@@ -247,9 +266,7 @@ def composite(first: OperatorSite, second: OperatorSite, dims: tuple[int, int]) 
     combined = np.stack(
         [left[:, 0], right[:, 1], left[:, 2] * dims[1] + right[:, 2], left[:, 3] * dims[1] + right[:, 3]], axis=1
     )
-    entries, place = np.unique(combined, axis=0, return_inverse=True)
-    weights = np.zeros(len(entries), np.result_type(first.weights, second.weights))
-    np.add.at(weights, place.reshape(-1), first.weights[a] * second.weights[b])
+    entries, weights = _merged(combined, first.weights[a] * second.weights[b])
     return OperatorSite(
         np.ascontiguousarray(entries), weights, first.delta_left, second.delta_right, first.start, second.end
     )

@@ -15,21 +15,39 @@ SMEAR = 0.97
 """A start along the conserved axis is opened by arccos(SMEAR), so that all charges near the wanted one take part."""
 
 
-def start_chain(problem: Problem, directions: np.ndarray, total: int) -> Chain:
+def start_chain(problem: Problem, directions: np.ndarray, total: int, sharp: bool = False) -> Chain:
     """Chain in a projected coherent product state of the given total charge, ready for sweeps.
 
-    directions (N, 3) in sweep order and solved frame; their z-components are shifted so that the mean charge is the wanted one.
+    directions (N, 3) in sweep order and solved frame; their z-components are shifted so that the mean charge is the wanted one. sharp: a
+    single state of the local basis instead, near the directions; cheaper for small spins, a dead end for large ones.
     """
-    if problem.conserved:
-        directions = magnetized(directions, problem.spins, total - problem.spins.sum())
-    amplitudes = []
-    for v, spin, levels in zip(directions, problem.spins.tolist(), problem.levels.tolist(), strict=True):
-        vector = coherent_states(v, spin)[:levels]
-        amplitudes.append(vector / np.linalg.norm(vector))
+    if problem.conserved and sharp:
+        states = basis_state(directions, problem.spins, total)
+        amplitudes = [(np.arange(d) == s).astype(float) for d, s in zip(problem.levels.tolist(), states, strict=True)]
+    else:
+        if problem.conserved:
+            directions = magnetized(directions, problem.spins, total - problem.spins.sum())
+        amplitudes = []
+        for v, spin, levels in zip(directions, problem.spins.tolist(), problem.levels.tolist(), strict=True):
+            vector = coherent_states(v, spin)[:levels]
+            amplitudes.append(vector / np.linalg.norm(vector))
     bonds, tensors = projected_product(amplitudes, problem.local, total, problem.real)
     chain = Chain(list(problem.local), list(problem.sites), bonds, tensors, total)
     chain.prepare()
     return chain
+
+
+def basis_state(directions: np.ndarray, spins: np.ndarray, total: int) -> list[int]:
+    """Local states (0 is m = S) with sum (S_i + m_i) = total, each m_i as near to S_i z_i as that allows."""
+    full = np.round(2 * spins).astype(np.int64)
+    wanted = spins * (1 + directions[:, 2])
+    raised = np.clip(np.round(wanted), 0, full).astype(np.int64)
+    while raised.sum() != total:
+        step = 1 if raised.sum() < total else -1
+        possible = (raised + step >= 0) & (raised + step <= full)
+        cost = np.where(possible, step * (raised + step - wanted), np.inf)
+        raised[int(np.argmin(cost))] += step
+    return (full - raised).tolist()
 
 
 def magnetized(directions: np.ndarray, spins: np.ndarray, wanted: float) -> np.ndarray:
@@ -49,12 +67,14 @@ def magnetized(directions: np.ndarray, spins: np.ndarray, wanted: float) -> np.n
     return np.concatenate([across * np.sqrt(np.maximum(1 - z * z, 0.0))[:, None], z[:, None]], axis=1)
 
 
-def isotropic_directions(start: np.ndarray, spins: np.ndarray) -> np.ndarray:
+def isotropic_directions(start: np.ndarray, spins: np.ndarray, upright: bool = False) -> np.ndarray:
     """For models that any common rotation leaves unchanged: turn a configuration so that its moment points along z or, without one, so
-    that its spins lie as far as possible in the xy-plane."""
+    that its spins lie as far as possible in the xy-plane (upright: along z)."""
     moment = spins @ start
     _, _, axes = np.linalg.svd(start * spins[:, None], full_matrices=True)
     z = moment / np.linalg.norm(moment) if np.linalg.norm(moment) > 1e-6 * spins.sum() else axes[2]
+    if upright and np.linalg.norm(moment) <= 1e-6 * spins.sum():
+        z = axes[0]
     x = axes[0] - (axes[0] @ z) * z
     if np.linalg.norm(x) < 1e-6:
         x = np.eye(3)[np.argmin(np.abs(z))]

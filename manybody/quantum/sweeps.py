@@ -90,10 +90,18 @@ class _Solver:
 
     def _directions(self, start: np.ndarray) -> np.ndarray:
         directions = self.problem.directions(start)
-        return isotropic_directions(directions, self.problem.spins) if self.isotropic else directions
+        return isotropic_directions(directions, self.problem.spins, self._sharp) if self.isotropic else directions
 
-    def _begin(self, total: int, start: np.ndarray | None = None) -> Run:
-        chain = start_chain(self.problem, self._directions(self.start if start is None else start), total)
+    @property
+    def _sharp(self) -> bool:
+        """A collinear order of small spins starts from a basis state: sweeps of pairs leave it at once."""
+        values = np.linalg.svd(self.start, compute_uv=False)
+        collinear = len(values) < 2 or values[1] < 1e-6 * values[0]
+        along = self.isotropic or np.abs(self.problem.directions(self.start)[:, 2]).min() > 0.9
+        return self.limits.pairs and bool(self.problem.spins.max() <= 1) and collinear and along
+
+    def _begin(self, total: int) -> Run:
+        chain = start_chain(self.problem, self._directions(self.start), total, self._sharp)
         return Run(chain, self.limits, self.rng, self._reporter(total))
 
     def _reporter(self, total: int):

@@ -1,0 +1,305 @@
+"""Time to a wanted relative energy error against quimb's two-site sweeps, one BLAS thread each, alternately in one process.
+
+    python tests/benchmarks/ground_state.py [case ...]      half one two five cylinder; one line a case, ending with `ratio R`
+    python tests/benchmarks/ground_state.py --profile       share of time in matrix products, GFLOP/s, other work per bond
+
+Both sides report the energy after every half sweep (ours) or sweep (quimb); the clock stops when it first is within the wanted relative
+error of the reference. Ours runs with default settings before and after quimb and counts with the mean; sector search and set-up are
+inside. quimb gets a real operator and a growing bond schedule, and is stopped at --patience seconds: the ratio is then a lower limit.
+"""
+
+import os
+
+for name in ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS"):
+    os.environ.setdefault(name, "1")
+
+import argparse  # noqa: E402
+import sys  # noqa: E402
+import time  # noqa: E402
+from dataclasses import dataclass  # noqa: E402
+from pathlib import Path  # noqa: E402
+
+import numpy as np  # noqa: E402
+
+ROOT = Path(__file__).resolve().parents[2]
+sys.path[:0] = [str(ROOT), str(ROOT / "tests")]
+
+from reference import reference  # noqa: E402
+
+from manybody.model.couplings import exchange  # noqa: E402
+from manybody.model.quantization import SpinOperator, quantize  # noqa: E402
+from manybody.quantum.result import QuantumSettings  # noqa: E402
+from manybody.quantum.sweeps import matrix_product_ground_state  # noqa: E402
+
+
+def chain(n: int) -> np.ndarray:
+    return np.array([(i, i + 1) for i in range(n - 1)])
+
+
+def cylinder(length: int, around: int) -> np.ndarray:
+    along = [(around * x + y, around * (x + 1) + y) for x in range(length - 1) for y in range(around)]
+    return np.array(along + [(around * x + y, around * x + (y + 1) % around) for x in range(length) for y in range(around)])
+
+
+def neel(n: int, around: int = 1) -> np.ndarray:
+    signs = np.array([(-1.0) ** (i // around + i % around) for i in range(n)])
+    return signs[:, None] * np.array([0.0, 0.0, 1.0])
+
+
+def open_bethe_energy(n: int) -> float:
+    """Open S = 1/2 chain of even length from the Bethe equations (Alcaraz et al. 1987, J. Phys. A 20, 6397), by fixed-point iteration."""
+    numbers = np.arange(1, n // 2 + 1)
+    x = np.tan(np.pi * numbers / (2 * n + 2)) / 2
+    for _ in range(20000):
+        pairs = np.arctan(x[:, None] - x) + np.arctan(x[:, None] + x)
+        phase = (np.pi * numbers + pairs.sum(axis=1) - np.arctan(2 * x)) / (2 * n)
+        new = np.tan(phase) / 2
+        if np.abs(new - x).max() < 1e-15 * np.abs(x).max():
+            break
+        x = 0.5 * (x + new)
+    return (n - 1) / 4 - float((0.5 / (x * x + 0.25)).sum())
+
+
+@dataclass(frozen=True)
+class Case:
+    """reference: energy of H = sum S_i.S_j; relative: wanted error; bonds: quimb's schedule."""
+
+    sites: int
+    spin: float
+    pairs: np.ndarray
+    reference: float
+    relative: float
+    bonds: tuple[int, ...]
+    around: int = 1
+
+    @property
+    def operator(self) -> SpinOperator:
+        return quantize(self.spin**2 * exchange(self.sites, self.pairs, 1.0), self.spin)
+
+    @property
+    def target(self) -> float:
+        return self.reference + self.relative * abs(self.reference)
+
+
+# References of all but `half`: this engine at max_bond = 800, accuracy 1e-9; see `--reference`.
+REFERENCES = {"one": -88.4866652, "two": -148.2553782, "five": -404.6785604, "cylinder": -71.8421}
+
+
+def cases() -> dict[str, Case]:
+    growing = (10, 20, 40, 80, 120, 160, 200, 300, 400, 600)
+    return {
+        "half": Case(64, 0.5, chain(64), open_bethe_energy(64), 1e-6, (10, 20, 40, 80, 120, 160)),
+        "one": Case(64, 1, chain(64), REFERENCES["one"], 1e-6, (10, 20, 40, 80, 120, 160, 200)),
+        "two": Case(32, 2, chain(32), REFERENCES["two"], 1e-4, growing),
+        "five": Case(16, 5, chain(16), REFERENCES["five"], 2e-4, growing),
+        "cylinder": Case(32, 1, cylinder(8, 4), REFERENCES["cylinder"], 1e-4, growing, 4),
+    }
+
+
+def ours(case: Case, settings: QuantumSettings | None = None):
+    """(seconds to the target, bond dimension there, seconds of the whole run, result)."""
+    reached: list[tuple[float, int]] = []
+    begin = time.perf_counter()
+
+    def progress(facts: dict) -> None:
+        if not reached and facts["energy"] <= case.target:
+            reached.append((time.perf_counter() - begin, facts["bond_dimension"]))
+
+    scale = case.spin**2 * len(case.pairs)
+    result = matrix_product_ground_state(
+        case.operator, settings or QuantumSettings(), neel(case.sites, case.around), scale, progress
+    )
+    whole = time.perf_counter() - begin
+    seconds, bond = reached[0] if reached else (float("nan"), 0)
+    return seconds, bond, whole, result
+
+
+def quimb_operator(case: Case):
+    """The same operator for quimb: sum of S^z S^z + (S^+ S^- + S^- S^+)/2 with one channel per open site and operator, real."""
+    import quimb as qu
+    import quimb.tensor as qtn
+
+    d = round(2 * case.spin) + 1
+    up = np.real(qu.spin_operator("+", S=case.spin))
+    z = np.real(qu.spin_operator("z", S=case.spin))
+    letters = ((up, up.T / 2), (up.T, up / 2), (z, z))
+    pairs = {tuple(sorted(pair)) for pair in case.pairs.tolist()}
+    last = {i: max((b for a, b in pairs if a == i), default=i) for i in range(case.sites)}
+    arrays = []
+    alive: list[int] = []
+    for site in range(case.sites):
+        following = [i for i in [*alive, site] if last[i] > site]
+        w = np.zeros((2 + 3 * len(alive), 2 + 3 * len(following), d, d))
+        w[0, 0] = w[1, 1] = np.eye(d)
+        for a, i in enumerate(alive):
+            for k, (_, second) in enumerate(letters):
+                if (i, site) in pairs:
+                    w[2 + 3 * a + k, 1] += second
+                if i in following:
+                    w[2 + 3 * a + k, 2 + 3 * following.index(i) + k] = np.eye(d)
+        if site in following:
+            for k, (first, _) in enumerate(letters):
+                w[0, 2 + 3 * following.index(site) + k] = first
+        arrays.append(w)
+        alive = following
+    arrays[0], arrays[-1] = arrays[0][0], arrays[-1][:, 1]
+    return qtn.MatrixProductOperator(arrays, shape="lrud")
+
+
+def theirs(case: Case, patience: float):
+    """(seconds to the target or None, seconds spent, relative error reached)."""
+    import quimb.tensor as qtn
+
+    operator = quimb_operator(case)
+    begin = time.perf_counter()
+    search = qtn.DMRG2(operator, bond_dims=list(case.bonds), cutoffs=1e-10)
+    energy = np.inf
+    for sweep in range(60):
+        search.solve(tol=0.0, max_sweeps=1, bond_dims=case.bonds[min(sweep, len(case.bonds) - 1)], verbosity=0)
+        energy = float(np.real(search.energy))
+        spent = time.perf_counter() - begin
+        if energy <= case.target:
+            return spent, spent, (energy - case.reference) / abs(case.reference)
+        if spent > patience:
+            break
+    return None, spent, (energy - case.reference) / abs(case.reference)
+
+
+def compare(name: str, case: Case, patience: float) -> None:
+    first = ours(case)
+    other, spent, reached = theirs(case, patience)
+    second = ours(case)
+    mine = (first[0] + second[0]) / 2
+    verdict = f"quimb {other:.2f} s" if other else f"quimb not in {spent:.0f} s (at {reached:.1e}), ratio a lower limit,"
+    print(
+        f"{name} to {case.relative:.0e}: ours {mine:.3f} s (D = {first[1]}; whole run {first[2]:.2f} s, {first[3].status}, error "
+        f"{first[3].error / abs(case.reference):.1e}), {verdict} ratio {(other or spent) / mine:.1f}",
+        flush=True,
+    )
+
+
+def warm_up(with_quimb: bool) -> None:
+    """Compiled code and contraction paths are loaded before any clock runs."""
+    for spin in (0.5, 1.0, 2.0):
+        small = Case(8, spin, chain(8), 1.0, 1.0, (8,))
+        ours(small)
+        if with_quimb:
+            theirs(small, 1.0)
+
+
+def dgemm_peak() -> float:
+    """GFLOP/s of one large product."""
+    a = np.random.default_rng(0).standard_normal((1000, 1000))
+    best = 0.0
+    for _ in range(5):
+        begin = time.perf_counter()
+        a @ a
+        best = max(best, 2e9 / (time.perf_counter() - begin) / 1e9)
+    return best
+
+
+def profile() -> None:
+    """Every Lanczos solve, environment and residual is followed by its matrix products alone, timed apart from the run."""
+    from manybody.quantum import contraction, lanczos
+    from manybody.quantum.compiled import compiled
+
+    @compiled
+    def products(tensor, environment, right, steps, times, both):
+        sizes = steps[6]
+        middle = np.empty(sizes[1], tensor.dtype)
+        stacked = np.zeros(sizes[2], tensor.dtype)
+        grouped = np.empty(sizes[3], tensor.dtype)
+        for _ in range(times):
+            contraction.multiply(tensor, environment, middle, steps[0])
+            if both:
+                for g in range(steps[3].shape[0]):
+                    m, k, n, u, r, o = steps[3][g]
+                    np.dot(
+                        stacked[u : u + m * k].reshape(m, k),
+                        right[r : r + k * n].reshape(k, n),
+                        grouped[o : o + m * n].reshape(m, n),
+                    )
+
+    def flops(steps, both: bool) -> float:
+        tables = (steps[0], steps[3]) if both else (steps[0],)
+        return float(sum(2.0 * table[:, :3].prod(axis=1).sum() for table in tables))
+
+    clock = {"products": 0.0, "flops": 0.0, "replay": 0.0, "solves": 0}
+    real_lowest, real_half, real_close = lanczos.lowest, contraction.half, contraction.close
+
+    def replay(seconds: float, count: float) -> None:
+        clock["products"] += seconds
+        clock["replay"] += seconds
+        clock["flops"] += count
+
+    def lowest(tensor, left, right, steps, vectors, tolerance):
+        outcome = real_lowest(tensor, left, right, steps, vectors, tolerance)
+        begin = time.perf_counter()
+        products(tensor, left, right, steps, outcome[3], True)
+        replay(time.perf_counter() - begin, outcome[3] * flops(steps, True))
+        clock["solves"] += 1
+        return outcome
+
+    def half(tensor, left, steps):
+        outcome = real_half(tensor, left, steps)
+        begin = time.perf_counter()
+        products(tensor, left, left, steps, 1, False)
+        replay(time.perf_counter() - begin, flops(steps, False))
+        return outcome
+
+    def close(stacked, grouped, steps, dims):
+        begin = time.perf_counter()
+        outcome = real_close(stacked, grouped, steps, dims)
+        # Nothing but one product per charge.
+        clock["products"] += time.perf_counter() - begin
+        clock["flops"] += float(2.0 * (steps[5][:, 0] * steps[5][:, 1] * dims).sum())
+        return outcome
+
+    lanczos.lowest, contraction.half, contraction.close = lowest, half, close
+    print(f"dgemm peak {dgemm_peak():.1f} GFLOP/s")
+    for name, case in cases().items():
+        sizes = (40, 80) if name in ("half", "one") else (40, 500)
+        for bond in sizes:
+            facts: list[dict] = []
+            ours(case, QuantumSettings(max_bond=bond, accuracy=1e-12))
+            clock.update(products=0.0, flops=0.0, replay=0.0, solves=0)
+            _, _, whole, result = ours(case, QuantumSettings(max_bond=bond, accuracy=1e-12))
+            spent = whole - clock["replay"]
+            share = clock["products"] / spent
+            other = 1e3 * (spent - clock["products"]) / max(clock["solves"], 1)
+            print(
+                f"profile {name} D <= {bond}: reached {result.bond_dimension}, {spent:.2f} s, products {100 * share:.0f} % at "
+                f"{clock['flops'] / clock['products'] / 1e9:.1f} GFLOP/s, other work {other:.2f} ms per solve",
+                flush=True,
+            )
+            del facts
+    lanczos.lowest, contraction.half, contraction.close = real_lowest, real_half, real_close
+
+
+def main() -> int:
+    parser = argparse.ArgumentParser(description=__doc__.splitlines()[0])
+    parser.add_argument("names", nargs="*", choices=[[], *cases()], default=[])
+    parser.add_argument("--profile", action="store_true")
+    parser.add_argument("--patience", type=float, default=100.0)
+    parser.add_argument("--reference", action="store_true", help="compute the stored reference energies anew")
+    options = parser.parse_args()
+    known = reference("A037").value
+    if abs(open_bethe_energy(32) - known) > 1e-9:
+        raise SystemExit("the Bethe-ansatz solution misses its check value")
+    warm_up(not (options.profile or options.reference))
+    if options.profile:
+        profile()
+        return 0
+    for name, case in cases().items():
+        if options.names and name not in options.names:
+            continue
+        if options.reference:
+            result = ours(case, QuantumSettings(accuracy=1e-9, max_bond=800))[3]
+            print(f"{name} {result.energy:.8f} error {result.error:.1e} D = {result.bond_dimension}", flush=True)
+        else:
+            compare(name, case, options.patience)
+    return 0
+
+
+if __name__ == "__main__":
+    sys.exit(main())
