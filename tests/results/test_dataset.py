@@ -69,7 +69,6 @@ def test_file_gives_back_what_was_written(records, tmp_path):
     tree = records_to_tree(records, ATTRS)
     dataset.write_tree(tmp_path / "a.nc", tree)
     xr.testing.assert_identical(tree, open_results(tmp_path / "a.nc"))
-    assert open_results(tmp_path / "a.nc").identical(open_results(tmp_path / "a.nc"))
 
 
 def test_order_of_records_does_not_matter(records):
@@ -96,9 +95,7 @@ def test_a_single_failed_point_is_a_dataset():
 
 
 def test_classical_records_alone_are_a_dataset(tmp_path):
-    write_results(tmp_path / "r.nc", [{"sites": 5, "parameters": {"d": 0.1}, "classical_energy": -1.0}])
-    assert open_results(tmp_path)["classical_energy"].values.tolist() == [[-1.0]] if False else True
-    os.rename(tmp_path / "r.nc", tmp_path / "results.nc")
+    write_results(tmp_path / "results.nc", [{"sites": 5, "parameters": {"d": 0.1}, "classical_energy": -1.0}])
     assert open_results(tmp_path)["classical_energy"].values.tolist() == [[-1.0]]
 
 
