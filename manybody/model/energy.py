@@ -154,9 +154,16 @@ class EnergyFunction:
 
     def value_and_gradient(self, n: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
         """f (...) and its Riemannian gradient (..., N, 3) at n (..., N, 3)."""
-        columns, shape = self._columns(n)
-        values, gradients = self.evaluation.value_and_gradient(columns)
-        return values.reshape(shape)[()], self._rows(gradients, shape)
+        n = self._checked(n)
+        flat = n.reshape(-1, self.sites, 3)
+        values, gradients = np.empty(len(flat)), np.empty(flat.shape)
+        # In slices of the batch whose scratch arrays stay in the cache, and in memory that is not given back each time.
+        step = max(8, 12288 // (3 * self.sites))
+        for start in range(0, len(flat), step):
+            part = slice(start, start + step)
+            values[part], columns = self.evaluation.value_and_gradient(self._columns(flat[part])[0])
+            gradients[part] = np.moveaxis(columns, 2, 0)
+        return values.reshape(n.shape[:-2])[()], gradients.reshape(n.shape)
 
     def hessian(self, n: np.ndarray) -> np.ndarray:
         """Riemannian Hessian (..., 3 N, 3 N) at n (..., N, 3), ambient, with normal directions annihilated."""

@@ -61,33 +61,39 @@ class Evaluation:
 
     def value(self, n: np.ndarray) -> np.ndarray:
         """n (N, 3, B) -> (B,)."""
-        return self._value_and_euclidean(n, gradient=False)[0]
+        x = n.reshape(3 * self.sites, -1)
+        values = self.constant + self.linear @ x + 0.5 * np.einsum("xb,xb->b", self.matrix @ x, x)
+        for term in self.higher:
+            values += term.value(n)
+        return values
 
     def value_and_gradient(self, n: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
         """n (N, 3, B) -> values (B,), Riemannian gradients (N, 3, B)."""
-        values, gradient = self._value_and_euclidean(n)
-        return values, _tangential(n, gradient)
+        values, gradient, radial = self._value_and_euclidean(n)
+        _subtract_along(gradient, n, radial)
+        return values, gradient
 
-    def _value_and_euclidean(self, n: np.ndarray, gradient: bool = True) -> tuple[np.ndarray, np.ndarray]:
+    def _value_and_euclidean(self, n: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+        """Values (B,), Euclidean gradients (N, 3, B) and their radial parts (N, B)."""
         x = n.reshape(3 * self.sites, -1)
-        field = self.matrix @ x
-        values = self.constant + self.linear @ x + 0.5 * np.einsum("xb,xb->b", field, x)
-        field += self.linear[:, None]
-        field = field.reshape(n.shape)
+        field = (self.matrix @ x).reshape(n.shape)
+        radial = _dot(n, field)
+        values = self.constant + 0.5 * radial.sum(axis=0)
+        if self.linear.any():
+            values += self.linear @ x
+            linear = self.linear.reshape(-1, 3, 1)
+            field += linear
+            radial += _dot(n, linear)
         for term in self.higher:
-            if gradient:
-                value, slope = term.value_and_gradient(n)
-                field += slope
-            else:
-                value = term.value(n)
+            value, slope = term.value_and_gradient(n)
             values += value
-        return values, field
+            field += slope
+            radial += _dot(n, slope)
+        return values, field, radial
 
     def hessian(self, configuration: np.ndarray) -> sparse.csr_array:
         """Riemannian Hessian (3 N, 3 N) at (N, 3): P H P - (n . gradient) P, P the tangent projection."""
-        n = configuration[..., None]
-        _, field = self._value_and_euclidean(n)
-        radial = np.einsum("nab,nab->n", n, field)
+        radial = self._value_and_euclidean(np.ascontiguousarray(configuration)[..., None])[2][:, 0]
         euclidean = self.matrix
         for term in self.higher:
             euclidean = euclidean + term.hessian(configuration)
@@ -100,8 +106,7 @@ class Evaluation:
 
     def hessian_product(self, n: np.ndarray, v: np.ndarray) -> np.ndarray:
         """Riemannian Hessian at n times the tangential part of v, both (N, 3, B)."""
-        _, field = self._value_and_euclidean(n)
-        radial = np.einsum("nab,nab->nb", n, field)[:, None]
+        radial = self._value_and_euclidean(n)[2][:, None]
         v = _tangential(n, v)
         product = (self.matrix @ v.reshape(3 * self.sites, -1)).reshape(n.shape)
         for term in self.higher:
@@ -310,7 +315,29 @@ def _curvature(rank: int, outer: np.ndarray, vectors: np.ndarray) -> np.ndarray:
 
 
 def _tangential(n: np.ndarray, v: np.ndarray) -> np.ndarray:
-    return v - n * np.einsum("nab,nab->nb", n, v)[:, None]
+    result = v.copy()
+    _subtract_along(result, n, _dot(n, v))
+    return result
+
+
+# An operation on a whole batch allocates fresh memory pages each time, which costs more than the arithmetic: these two
+# reuse one scratch array.
+
+
+def _dot(n: np.ndarray, v: np.ndarray) -> np.ndarray:
+    """n . v at every site, (N, B) for (N, 3, B)."""
+    total = n[:, 0] * v[:, 0]
+    scratch = np.empty_like(total)
+    for a in (1, 2):
+        total += np.multiply(n[:, a], v[:, a], out=scratch)
+    return total
+
+
+def _subtract_along(v: np.ndarray, n: np.ndarray, radial: np.ndarray) -> None:
+    """v -= n radial, in place: v and n (N, 3, B), radial (N, B)."""
+    scratch = np.empty_like(radial)
+    for a in range(3):
+        v[:, a] -= np.multiply(n[:, a], radial, out=scratch)
 
 
 def _block_index(numbers: np.ndarray, axis: int) -> np.ndarray:
