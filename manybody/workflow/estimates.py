@@ -9,11 +9,15 @@ from __future__ import annotations
 import functools
 import math
 
+import numpy as np
+
 from manybody.workflow.document import Settings
 from manybody.workflow.points import Cluster, Point, TermRecipe
 
 SMALL = 3000  # dimension of the whole space below which every solve is quick and small
 HUGE = 1e11  # and above which no sector can be diagonalized
+COUNTED = 128  # sites up to which the operator is built for an estimate of sweeps
+HALF_SWEEPS = 8  # half sweeps at full bond dimension that cost as much as a whole run with its growing bonds
 LIBRARIES = 5e7  # bytes a first solve may add by loading compiled code
 
 
@@ -48,17 +52,7 @@ def quantum(point: Point, settings: Settings) -> tuple[str, float, float]:
         cost = _exact(_AsKind(point), settings.memory, bool(settings.observables))
         if cost is not None:
             return "exact", cost[0], LIBRARIES + cost[1]
-    return "sweeps", *_sweeps(point, settings)
-
-
-def _sweeps(point: Point, settings: Settings) -> tuple[float, float]:
-    """Matrix-product sweeps at the largest bond dimension allowed, w operator channels, about 20 sweeps."""
-    n, levels = point.cluster.sites, 2 * point.spin + 1
-    bond = min(float(settings.max_bond), 10 ** min(0.5 * point.log10_dimension, 15.0))
-    width = 2 + 3 * max(1.0, point.cluster.couplings / n)
-    seconds = 0.1 * n * levels + 4e-10 * n * bond**3 * levels * width
-    size = 8 * n * bond**2 * (levels + width) / 2 + 16 * 8 * bond**2 * levels * width / 3
-    return seconds, LIBRARIES + min(size, float(settings.memory))
+    return "sweeps", *_sweeps(_AsKind(point), settings.max_bond, settings.memory)
 
 
 class _AsKind:
@@ -102,3 +96,24 @@ def _exact(kind: _AsKind, memory: int, observables: bool) -> tuple[float, float]
     if not math.isfinite(cost.seconds):
         return None
     return cost.seconds, float(cost.bytes)
+
+
+@functools.lru_cache(maxsize=4096)
+def _sweeps(kind: _AsKind, max_bond: int, memory: int) -> tuple[float, float]:
+    """(seconds, bytes) of matrix-product sweeps at the largest bond dimension allowed, as many as a usual run takes."""
+    from manybody.model.quantization import quantize
+    from manybody.quantum.memory import estimate
+    from manybody.quantum.problem import prepare
+
+    point = kind.point
+    n, levels = point.cluster.sites, 2 * point.spin + 1
+    bond = min(float(max_bond), 10 ** min(0.5 * point.log10_dimension, 15.0))
+    if n <= COUNTED and point.cluster.couplings <= 10 * COUNTED:
+        operator = quantize(point.cluster.build().energy, point.spin, point.rule)
+        problem = prepare(operator, np.tile([0.0, 0.0, 1.0], (n, 1)))
+        cost = estimate(problem, int(bond), vectors=int(min(3 + point.spin, 12)))
+        return HALF_SWEEPS * cost.seconds, LIBRARIES + min(cost.bytes, float(memory))
+    # too large to build the operator for an estimate: w operator channels, half of them wide open
+    width = 2 + 3 * max(1.0, point.cluster.couplings / n)
+    seconds = 0.1 * n * levels + HALF_SWEEPS * 1e-10 * n * bond**3 * levels * width
+    return seconds, LIBRARIES + min(4 * n * bond**2 * (levels + width) + 45 * bond**2 * levels * width, float(memory))

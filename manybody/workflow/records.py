@@ -57,9 +57,6 @@ def _point_record(point: Point, keys: PointKeys, parts: dict[str, dict], entries
         return {"status": "undefined", "message": point.undefined}
     classical, harmonic, quantum, bounds = (parts.get(key, {}) for key in keys.all())
     record = assemble(point.spin, classical, harmonic, quantum, bounds)
-    if "configuration" in classical:
-        # one configuration per cluster in the dataset; which minimum a rule selects can differ from rule to rule
-        record["classical_configuration"] = classical["configuration"]
     for key, name in ((keys.classical, "classical"), (keys.harmonic, "harmonic"), (keys.bounds, "bounds")):
         entry = entries.get(key)
         if entry is not None and entry.status != "finished":
@@ -103,14 +100,21 @@ def study_attrs(study: Study, journal: Journal) -> dict:
         "hosts": len(hosts),
         "seconds_by_part": {kind: round(total, 3) for kind, total in sorted(seconds.items())},
         "notes": "\n".join(study.notes),
-        "term_keys": _term_keys(study),
+        **_terms(study),
     }
 
 
-def _term_keys(study: Study) -> list:
-    """Keys of the groups of terms that occur; looked up on the first and last cluster of each lattice."""
+def _terms(study: Study) -> dict:
+    """What the figures need to know of the terms, looked up on the first and last cluster of each lattice.
+
+    term_keys: keys of the groups of terms that occur; symmetry_axes: about how many axes all vectors can be turned.
+    """
     ends: dict[str, list] = {}
     for cluster in study.clusters:
         ends.setdefault(cluster.lattice, [cluster, cluster])[1] = cluster
-    found = {group.key for pair in ends.values() for cluster in pair for group in cluster.build().energy.groups}
-    return json.loads(json.dumps(sorted(found)))
+    energies = [cluster.build().energy for pair in ends.values() for cluster in pair]
+    keys = {group.key for energy in energies for group in energy.groups}
+    return {
+        "term_keys": json.loads(json.dumps(sorted(keys))),
+        "symmetry_axes": min(len(energy.symmetry_axes()) for energy in energies),
+    }
