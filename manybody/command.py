@@ -90,27 +90,40 @@ def status(folder: Folder) -> None:
     print(status_text(folder))
 
 
+Normalization = Annotated[str, typer.Option(help="energy, or spin for H = sum J S.S, where that is one factor.")]
+
+
 @app.command()
 def draw(
     folder: Folder,
     out: Annotated[Path | None, typer.Option(help="Folder for the pictures. Default: DIR/figures.")] = None,
-    form: Annotated[str, typer.Option("--format", help="png, svg or pdf.")] = "png",
+    form: Annotated[list[str] | None, typer.Option("--format", help="png, svg or pdf; may be repeated.")] = None,
+    normalization: Normalization = "energy",
 ) -> None:
-    """Draw the figures of a dataset."""
+    """Draw the figures of a dataset, and say which are left out and why."""
     from manybody.results.figures import draw as draw_figures
 
     with _about(folder):
-        for path in draw_figures(folder, out or folder / "figures", form):
+        outcome = draw_figures(folder, out or folder / "figures", form or ("png", "svg"), normalization)
+    for figure in outcome.drawn:
+        for path in figure.paths:
             print(path)
+    for name, reason in outcome.left_out.items():
+        print(f"not drawn: {name}: {reason}")
 
 
 @app.command()
-def report(folder: Folder) -> None:
+def report(
+    folder: Folder,
+    normalization: Normalization = "energy",
+    tolerance: Annotated[float, typer.Option(help="Relative gap that counts as good enough.")] = 0.05,
+) -> None:
     """Write DIR/report.html, one self-contained page."""
     from manybody.results.report import write_report
 
     with _about(folder):
-        print(write_report(folder))
+        path = write_report(folder, None, normalization, tolerance)
+    print(path)
 
 
 class BadInput(ValueError):
@@ -119,14 +132,14 @@ class BadInput(ValueError):
 
 @contextlib.contextmanager
 def _about(folder: Path):
-    """What is wrong with a results file is the user's to know; anything else is a fault of ours."""
+    """What is wrong with a results file or with the choice of figures is the user's to know."""
     from manybody.results.dataset import open_results
 
     try:
         open_results(folder)
-    except ValueError as error:
+        yield
+    except (ValueError, FileNotFoundError) as error:
         raise BadInput(str(error)) from None
-    yield
 
 
 def _workers(workers: int | None) -> int:

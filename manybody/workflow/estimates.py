@@ -9,14 +9,12 @@ from __future__ import annotations
 import functools
 import math
 
-import numpy as np
-
+from manybody.model.lattice import DIMENSIONS
 from manybody.workflow.document import Settings
 from manybody.workflow.points import Cluster, Point, TermRecipe
 
 SMALL = 3000  # dimension of the whole space below which every solve is quick and small
 HUGE = 1e11  # and above which no sector can be diagonalized
-COUNTED = 128  # sites up to which the operator is built for an estimate of sweeps
 HALF_SWEEPS = 8  # half sweeps at full bond dimension that cost as much as a whole run with its growing bonds
 LIBRARIES = 5e7  # bytes a first solve may add by loading compiled code
 
@@ -100,20 +98,31 @@ def _exact(kind: _AsKind, memory: int, observables: bool) -> tuple[float, float]
 
 @functools.lru_cache(maxsize=4096)
 def _sweeps(kind: _AsKind, max_bond: int, memory: int) -> tuple[float, float]:
-    """(seconds, bytes) of matrix-product sweeps at the largest bond dimension allowed, as many as a usual run takes."""
-    from manybody.model.quantization import quantize
-    from manybody.quantum.memory import estimate
-    from manybody.quantum.problem import prepare
+    """(seconds, bytes) of matrix-product sweeps at the largest bond dimension allowed, as many as a usual run takes.
 
+    w operator channels; a conserved charge splits a bond into about `share` equal blocks, and work falls with its square.
+    """
     point = kind.point
     n, levels = point.cluster.sites, 2 * point.spin + 1
     bond = min(float(max_bond), 10 ** min(0.5 * point.log10_dimension, 15.0))
-    if n <= COUNTED and point.cluster.couplings <= 10 * COUNTED:
-        operator = quantize(point.cluster.build().energy, point.spin, point.rule)
-        problem = prepare(operator, np.tile([0.0, 0.0, 1.0], (n, 1)))
-        cost = estimate(problem, int(bond), vectors=int(min(3 + point.spin, 12)))
-        return HALF_SWEEPS * cost.seconds, LIBRARIES + min(cost.bytes, float(memory))
-    # too large to build the operator for an estimate: w operator channels, half of them wide open
-    width = 2 + 3 * max(1.0, point.cluster.couplings / n)
-    seconds = 0.1 * n * levels + HALF_SWEEPS * 1e-10 * n * bond**3 * levels * width
-    return seconds, LIBRARIES + min(4 * n * bond**2 * (levels + width) + 45 * bond**2 * levels * width, float(memory))
+    width = 2 + 3 * _bonds_cut(point.cluster)
+    conserved = len(point.cluster.build().energy.symmetry_axes()) > 0
+    share = 2.0 * math.sqrt(point.spin + 0.5) if conserved else 1.0
+    vectors = min(3 + point.spin, 12)
+    half_sweep = 5e-4 * n + 4 * (vectors + 3) * n * levels * width * bond**3 / share**2 / 1.5e10
+    size = 8 * bond**2 / share * (n * (width + levels) + 1.5 * levels * (2 * width + vectors + 6))
+    return HALF_SWEEPS * half_sweep, LIBRARIES + min(size, float(memory))
+
+
+def _bonds_cut(cluster: Cluster) -> float:
+    """Couplings that a cut across the longest direction crosses, about: they decide how many channels the operator has."""
+    n, recipe = cluster.sites, cluster.recipe
+    each = max(1.0, cluster.couplings / n)
+    if not isinstance(recipe, TermRecipe):
+        return each * math.sqrt(n)
+    lattice = recipe.lattice
+    if lattice.shape in ("complete", "star", "bipartite"):
+        return 1.0  # every site couples to the same sum over others
+    if not lattice.cell:
+        return each * math.sqrt(n)
+    return max(1.0, each / DIMENSIONS.get(lattice.shape, 1) * n / max(lattice.extent))

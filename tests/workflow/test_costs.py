@@ -61,9 +61,14 @@ def test_estimates_grow_with_size_and_spin_and_keep_to_the_memory_allowed():
     _, short, _ = estimates.quantum(points("chain", [64], 2)[0], Settings(max_bond=1000))
     _, long, _ = estimates.quantum(points("chain", [64], 2)[0], Settings(max_bond=4000))
     assert 40 < long / short < 64  # the cube of the bond dimension, less what does not depend on it
-    _, one, small = estimates.quantum(points("chain", [300], 2)[0], Settings())  # too large to be counted in detail
-    _, two, large = estimates.quantum(points("chain", [600], 2)[0], Settings())
-    assert 1.9 < two / one < 2.1 and small < large
+
+
+def test_sweeps_on_wide_clusters_cost_more_than_on_chains():
+    chain = estimates.quantum(points("chain", [64], 1)[0], Settings())
+    ladder = estimates.quantum(points("ladder", [64], 1)[0], Settings())
+    complete = estimates.quantum(points("complete", [64], 1)[0], Settings())
+    assert chain[1] < ladder[1] and chain[2] < ladder[2]
+    assert complete[1] < 2 * ladder[1]  # each site couples to one sum over the others
 
 
 def test_times_and_sizes_read_well():
