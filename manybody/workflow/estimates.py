@@ -15,7 +15,7 @@ from manybody.workflow.points import Cluster, Point, TermRecipe
 
 SMALL = 3000  # dimension of the whole space below which every solve is quick and small
 HUGE = 1e11  # and above which no sector can be diagonalized
-HALF_SWEEPS = 8  # half sweeps at full bond dimension that cost as much as a whole run with its growing bonds
+HALF_SWEEPS = 12  # half sweeps at the final bond dimension that cost as much as a whole run with its growing bonds
 LIBRARIES = 5e7  # bytes a first solve may add by loading compiled code
 
 
@@ -98,24 +98,26 @@ def _exact(kind: _AsKind, memory: int, observables: bool) -> tuple[float, float]
 
 @functools.lru_cache(maxsize=4096)
 def _sweeps(kind: _AsKind, max_bond: int, memory: int) -> tuple[float, float]:
-    """(seconds, bytes) of matrix-product sweeps at the largest bond dimension allowed, as many as a usual run takes.
+    """(seconds, bytes) of matrix-product sweeps: bytes at the largest bond dimension allowed, seconds at the one that the
+    usual accuracy takes on gapless chains, growing with spin and with the width of the cluster.
 
-    w operator channels; a conserved charge splits a bond into about `share` equal blocks, and work falls with its square.
+    A conserved charge splits a bond into about `share` equal blocks; work falls with its square.
     """
     point = kind.point
     n, levels = point.cluster.sites, 2 * point.spin + 1
     bond = min(float(max_bond), 10 ** min(0.5 * point.log10_dimension, 15.0))
-    width = 2 + 3 * _bonds_cut(point.cluster)
+    cut = _bonds_cut(point.cluster)
+    width, usual = 2 + 3 * cut, min(bond, 80 * (1 + point.spin) * cut)
     conserved = len(point.cluster.build().energy.symmetry_axes()) > 0
     share = 2.0 * math.sqrt(point.spin + 0.5) if conserved else 1.0
     vectors = min(3 + point.spin, 12)
-    half_sweep = 5e-4 * n + 4 * (vectors + 3) * n * levels * width * bond**3 / share**2 / 1.5e10
+    half_sweep = 5e-4 * n + 4 * (vectors + 3) * n * levels * width * usual**3 / share**2 / 1.5e10
     size = 8 * bond**2 / share * (n * (width + levels) + 1.5 * levels * (2 * width + vectors + 6))
     return HALF_SWEEPS * half_sweep, LIBRARIES + min(size, float(memory))
 
 
 def _bonds_cut(cluster: Cluster) -> float:
-    """Couplings that a cut across the longest direction crosses, about: they decide how many channels the operator has."""
+    """Couplings that a cut across the longest direction crosses, about: they make the channels of the operator."""
     n, recipe = cluster.sites, cluster.recipe
     each = max(1.0, cluster.couplings / n)
     if not isinstance(recipe, TermRecipe):

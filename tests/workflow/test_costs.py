@@ -58,8 +58,8 @@ def test_estimates_grow_with_size_and_spin_and_keep_to_the_memory_allowed():
     assert 3e7 < sizes[-1] - estimates.LIBRARIES < 3e8
     kind, _, size = estimates.quantum(points("chain", [64], 2)[0], Settings(max_bond=4096, memory=2**30))
     assert kind == "sweeps" and size <= 2**30 + estimates.LIBRARIES
-    _, short, _ = estimates.quantum(points("chain", [64], 2)[0], Settings(max_bond=1000))
-    _, long, _ = estimates.quantum(points("chain", [64], 2)[0], Settings(max_bond=4000))
+    _, short, _ = estimates.quantum(points("chain", [64], 2)[0], Settings(max_bond=60))
+    _, long, _ = estimates.quantum(points("chain", [64], 2)[0], Settings(max_bond=240))
     assert 40 < long / short < 64  # the cube of the bond dimension, less what does not depend on it
 
 
