@@ -72,6 +72,10 @@ class Run:
         done = len(self.stages) > 2 and self.error <= self.limits.goal
         return done or self.bounded or self.allowed <= LEAST_ALLOWED or self.stages[-1].variance <= self.limits.floor**2
 
+    def repeat(self) -> None:
+        """A stage at the truncation of the last one, after the chain was changed from outside."""
+        self._stage()
+
     def advance(self) -> None:
         """One more stage."""
         if not self.stages:
@@ -82,6 +86,9 @@ class Run:
                 ratio = self.limits.goal / max(self.error, 1e-300)
                 self.allowed = max(self.allowed * float(np.clip(ratio / 4, 0.03, 0.1)), LEAST_ALLOWED)
             self.ceiling = min(max(GROWTH * self.stages[-1].bond_dimension, FIRST_BOND), self.limits.largest)
+        self._stage()
+
+    def _stage(self) -> None:
         energies: list[float] = []
         gains = [np.inf]
         while len(energies) < MOST_SWEEPS:

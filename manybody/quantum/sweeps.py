@@ -1,5 +1,6 @@
 """The ground state of any quantized operator as a matrix-product state."""
 
+import functools
 import time
 from collections.abc import Callable
 from dataclasses import astuple
@@ -9,7 +10,7 @@ from typing import Protocol
 import numpy as np
 
 from manybody.model.quantization import SpinOperator
-from manybody.quantum import matrix_product_state, memory
+from manybody.quantum import matrix_product_state, memory, spin_flip, variance
 from manybody.quantum.chain import Chain
 from manybody.quantum.extrapolation import Stage
 from manybody.quantum.local_basis import enlarge, wanted_levels
@@ -21,6 +22,8 @@ from manybody.quantum.start_state import classical_start
 
 SAVE_EVERY = 120.0
 """Seconds between two savings of a long run."""
+MIXED = 1e-3
+"""A state of S^z = 0 whose overlap with its turned-over self misses 1 by more than this is a mixture of both parities."""
 WIDE = 12
 """From this many operator channels on one-site steps are cheaper than pairs."""
 
@@ -126,8 +129,7 @@ class _Solver:
         if self.isotropic and first <= half + 0.5:
             # Every multiplet has a state of S^z = 0 or 1/2: no other sector can be lower.
             return self._begin(int(np.ceil(half)))
-        flips = self.isotropic or self._symmetric_under_flip()
-        search = SectorSearch(self._begin, int(np.ceil(half)) if flips else 0, whole)
+        search = SectorSearch(self._begin, int(np.ceil(half)) if self.flips else 0, whole)
         best = search.search(first)
         rivals = search.undecided(best)
         while rivals:
@@ -150,7 +152,9 @@ class _Solver:
             for run in (search.runs[t] for t in (best, *rivals))
         )
 
-    def _symmetric_under_flip(self) -> bool:
+    @functools.cached_property
+    def flips(self) -> bool:
+        """A turn by pi about x leaves the solved operator unchanged."""
         turned = self.op.rotated(self.problem.frames).symbol
         flip = np.diag([1.0, -1.0, -1.0])
         return turned.rotated(flip).allclose(turned, 1e-12, 1e-13 * self.problem.norm)
@@ -160,6 +164,8 @@ class _Solver:
             while not run.finished:
                 run.advance()
                 self._save(run)
+            if self._unmixed(run):
+                continue
             levels = wanted_levels(run.chain, self.problem, run.limits.goal)
             if levels is None:
                 return
@@ -167,6 +173,21 @@ class _Solver:
             run.chain = enlarge(run.chain, self.problem)
             run.stages.clear()
             run.allowed *= 10
+
+    def _unmixed(self, run: Run) -> bool:
+        """Replace a mixture of states of both spin-flip parities by the lower part and sweep once more; whether that was needed."""
+        chain = run.chain
+        if not self.problem.conserved or 2 * chain.total != round(2 * self.problem.spins.sum()) or not self.flips:
+            return False
+        if abs(spin_flip.overlap(chain)) > 1 - MIXED:
+            return False
+        parts = [spin_flip.parity_part(chain, sign) for sign in (1.0, -1.0)]
+        energies = [variance.at_centre(part)[0] for part in parts]
+        if min(energies) > run.energy - self.limits.floor:
+            return False
+        run.chain = parts[int(np.argmin(energies))]
+        run.repeat()
+        return True
 
     def _guard(self, run: Run) -> Run:
         """A cheap second run from random directions in the same sector, coarser than the first."""
