@@ -180,7 +180,9 @@ def assemble(spin: float, classical: dict, harmonic: dict, quantum: dict, bounds
     if "harmonic_coefficient" in harmonic and classical:
         record["harmonic_energy"] = classical["classical_energy"] + harmonic["harmonic_coefficient"] / spin
     if "configuration" in classical:
-        record["classical_configuration"] = harmonic.get("selected", classical["configuration"])
+        record["classical_configuration"] = classical["configuration"]
+    if "selected" in harmonic:
+        record["selected_configuration"] = harmonic["selected"]
     record["seconds"] = sum(
         part.get(f"{name}_seconds", 0.0) for name, part in zip(PARTS[1:], (harmonic, quantum, bounds))
     )
@@ -200,6 +202,7 @@ def _observables(found: dict, n: np.ndarray) -> dict:
     part = {}
     if "entanglement" in found:
         part["entanglement_entropy"] = found["entanglement"]
+        part["entanglement_order"] = found["entanglement_order"]
     if "coherent_overlap" in found:
         part["overlap_per_site"] = float(found["coherent_overlap"])
     if "moments" in found:

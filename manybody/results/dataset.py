@@ -18,8 +18,8 @@ from pathlib import Path
 
 import numpy as np
 
-from . import derived
-from .schema import COMPONENTS, CONVENTIONS, GROUPS, POINT_KEYS, VARIABLES, Variable
+from manybody.results. import derived
+from manybody.results.schema import COMPONENTS, CONVENTIONS, GROUPS, POINT_KEYS, VARIABLES, Variable
 
 FILE_NAME = "results.nc"
 _COORDINATES = {
@@ -30,7 +30,6 @@ _COORDINATES = {
     "site": {"long_name": "site number, from 0", "units": "1"},
     "other_site": {"long_name": "site number of the partner, from 0", "units": "1"},
     "component": {"long_name": "Cartesian component"},
-    "other_component": {"long_name": "Cartesian component of the partner"},
     "place": {"long_name": "place in the order of the cuts, from 0", "units": "1"},
     "cut": {"long_name": "cut between neighbouring positions, from 0", "units": "1"},
     "stage": {"long_name": "stage of the quantum branch, from 0", "units": "1"},
@@ -74,7 +73,7 @@ def write_results(path, records, attrs=None, scaling=True):
     """Write records as one netCDF file, with the fits of scaling.py unless told not to; returns the tree."""
     tree = records_to_tree(records, attrs)
     if scaling:
-        from .scaling import scaling_dataset
+        from manybody.results.scaling import scaling_dataset
 
         fits = scaling_dataset(tree)
         if fits.data_vars:
@@ -216,16 +215,17 @@ def _places(records, axes):
             geometry = (number["lattice"][record.get("lattice") or ""], *geometry)
         parameters = record.get("parameters") or {}
         cluster = geometry + tuple(number[name][float(parameters[name])] for name in axes if name in parameters)
-        point = None
+        point = by_rule = None
         if _is_point(record):
             point = (*cluster, number["spin"][float(record["spin"])], number["rule"][record["rule"]])
+            by_rule = (*cluster, point[-1])
             if point in seen:
                 raise ValueError(
                     f"two records for sites {record['sites']}, spin {record['spin']}, rule {record['rule']}, "
                     f"parameters {parameters}"
                 )
             seen.add(point)
-        places.append({"lattice": geometry, "cluster": cluster, "point": point})
+        places.append({"lattice": geometry, "cluster": cluster, "point": point, "rule": by_rule})
     return places
 
 
@@ -235,6 +235,8 @@ def _dims(axes, per):
         return names
     if per == "cluster":
         return names[:-2]
+    if per == "rule":
+        return [*names[:-2], "rule"]
     return [n for n in ("lattice", "sites") if n in axes]
 
 
@@ -352,7 +354,7 @@ def _group(name, records, axes, places, unit):
     variables = {v.name: _filled(v, records, axes, places, [lengths[d] for d in v.dims], unit) for v in present}
     coords = _coordinates({n: axes[n] for n in axes if any(n in dims for dims, _, _ in variables.values())})
     for dim, length in lengths.items():
-        if dim in ("component", "other_component"):
+        if dim == "component":
             coords[dim] = (dim, np.array(COMPONENTS[:length], dtype=object), _COORDINATES[dim])
         elif dim in _COORDINATES:
             coords[dim] = (dim, np.arange(length), _COORDINATES[dim])

@@ -5,7 +5,7 @@ Computed here and nowhere else, so that tables, figures and files cannot differ.
 
 import numpy as np
 
-from .schema import VARIABLES
+from manybody.results.schema import VARIABLES
 
 ROUNDING = 1e-9
 """Energies that differ by less than this fraction of the energy scale count as equal: both branches round."""

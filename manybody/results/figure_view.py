@@ -6,7 +6,7 @@ from typing import Any
 
 import numpy as np
 
-from .normalization import factor
+from manybody.results.normalization import factor
 
 
 class NotDrawn(Exception):

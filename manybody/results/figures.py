@@ -3,13 +3,13 @@
 from dataclasses import dataclass, field
 from pathlib import Path
 
-from . import figure_style
-from .dataset import open_results
-from .figure_view import NotDrawn, look
-from .figures_energy import convergence, ladder
-from .figures_gap import gap_against_sites, gap_against_spin
-from .figures_map import relative_gap_map, trusted_spin_map
-from .figures_space import configuration
+from manybody.results. import figure_style
+from manybody.results.dataset import open_results
+from manybody.results.figure_view import NotDrawn, look
+from manybody.results.figures_energy import convergence, ladder
+from manybody.results.figures_gap import gap_against_sites, gap_against_spin
+from manybody.results.figures_map import relative_gap_map, trusted_spin_map
+from manybody.results.figures_space import configuration
 
 FIGURES = {
     "ladder": ("Energy ladder", ladder),

@@ -2,8 +2,18 @@
 
 import numpy as np
 
-from .figure_style import COLOURS, INK, MARKERS, QUIET, below, new_figure, spin_axis, spin_text, unit_text
-from .figure_view import NotDrawn
+from manybody.results.figure_style import (
+    COLOURS,
+    INK,
+    MARKERS,
+    QUIET,
+    below,
+    new_figure,
+    spin_axis,
+    spin_text,
+    unit_text,
+)
+from manybody.results.figure_view import NotDrawn
 
 _RUNGS = (
     # name, label, colour, marker, line, filled

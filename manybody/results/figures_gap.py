@@ -2,7 +2,7 @@
 
 import numpy as np
 
-from .figure_style import (
+from manybody.results.figure_style import (
     COLOURS,
     INK,
     MARKERS,
@@ -14,11 +14,11 @@ from .figure_style import (
     spin_text,
     unit_text,
 )
-from .figure_view import NotDrawn
-from .normalization import factor_at
-from .published import matching
-from .scaling import limit_at
-from .scaling_spin import evaluate_class
+from manybody.results.figure_view import NotDrawn
+from manybody.results.normalization import factor_at
+from manybody.results.published import matching
+from manybody.results.scaling import limit_at
+from manybody.results.scaling_spin import evaluate_class
 
 
 def gap_against_spin(view):

@@ -2,9 +2,19 @@
 
 import numpy as np
 
-from .figure_style import COLOURS, INK, MARKERS, below, even_choice, log_ticks, new_figure, spin_text, value_ticks
-from .figure_view import NotDrawn
-from .schema import RESERVED_NAMES
+from manybody.results.figure_style import (
+    COLOURS,
+    INK,
+    MARKERS,
+    below,
+    even_choice,
+    log_ticks,
+    new_figure,
+    spin_text,
+    value_ticks,
+)
+from manybody.results.figure_view import NotDrawn
+from manybody.results.schema import RESERVED_NAMES
 
 
 def relative_gap_map(view):

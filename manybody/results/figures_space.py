@@ -2,9 +2,9 @@
 
 import numpy as np
 
-from .dataset import flag_words
-from .figure_style import INK, WIDTH, depth_colours, new_figure
-from .figure_view import NotDrawn
+from manybody.results.dataset import flag_words
+from manybody.results.figure_style import INK, WIDTH, depth_colours, new_figure
+from manybody.results.figure_view import NotDrawn
 
 MOST_SITES = 900
 

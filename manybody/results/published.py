@@ -11,7 +11,7 @@ from dataclasses import dataclass
 from fractions import Fraction
 from importlib import resources
 
-from .normalization import PAIR_FACTORS
+from manybody.results.normalization import PAIR_FACTORS
 
 _SHAPES = {"chain": "chain", "ring": "chain"}
 

@@ -14,13 +14,13 @@ from pathlib import Path
 
 import numpy as np
 
-from . import wording
-from .dataset import flag_words, open_results, points_table
-from .figure_view import look
-from .figures import figures_of, save
-from .normalization import title as normalization_title
-from .schema import VARIABLES
-from .verdict import answer, cautions
+from manybody.results. import wording
+from manybody.results.dataset import flag_words, open_results, points_table
+from manybody.results.figure_view import look
+from manybody.results.figures import figures_of, save
+from manybody.results.normalization import title as normalization_title
+from manybody.results.schema import VARIABLES
+from manybody.results.verdict import answer, cautions
 
 MOST_ROWS = 100
 RUNGS = (

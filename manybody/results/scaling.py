@@ -6,11 +6,11 @@ themselves are in scaling_spin.py, scaling_sites.py and trust.py.
 
 import numpy as np
 
-from .derived import energy_scale
-from .scaling_sites import extrapolate
-from .scaling_spin import PARITIES, POWERS, SHIFTS, evaluate, fit_spins
-from .schema import units_text
-from .trust import STATES, UNKNOWN, trust
+from manybody.results.derived import energy_scale
+from manybody.results.scaling_sites import extrapolate
+from manybody.results.scaling_spin import PARITIES, POWERS, SHIFTS, evaluate, fit_spins
+from manybody.results.schema import units_text
+from manybody.results.trust import STATES, UNKNOWN, trust
 
 TOLERANCES = (0.1, 0.05, 0.02, 0.01)
 LIMITS = {

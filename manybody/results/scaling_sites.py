@@ -11,8 +11,8 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from .fits import fit
-from .scaling_spin import ROUNDING
+from manybody.results.fits import fit
+from manybody.results.scaling_spin import ROUNDING
 
 SHIFT = 1.5
 """Weight of the movement under leaving one size out. 1.5 gives the stated coverage; with three sizes, where no second

@@ -10,9 +10,9 @@ term, the others where the criterion asks for it.
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.stats import t as student
+from scipy.special import stdtrit
 
-from .fits import fit
+from manybody.results.fits import fit
 
 POWERS = 6
 PARITIES = ("integer", "half_integer")
@@ -169,4 +169,4 @@ def _first_alone(x, centre, sigma, columns, order, first):
 
 def _inflation(result):
     """Factor on standard errors that come from truncation, also for how few values there are to spare."""
-    return ONE_SIGN * student.ppf(0.8413, result.freedom) if result.tau > 0 else 1.0
+    return ONE_SIGN * stdtrit(result.freedom, 0.8413) if result.tau > 0 else 1.0

@@ -6,6 +6,7 @@ nothing else in this room has to change. Records (plain dicts, one per point) us
 Kinds of dimension, `Variable.per`:
     "cluster"  lattice, sites and the parameters: what does not depend on spin or rule
     "point"    the same, then spin and rule
+    "rule"     the cluster's and rule
     "lattice"  lattice and sites only: geometry
 Behind those come `Variable.dims`, the array dimensions of one value, padded to the longest in a study.
 
@@ -23,7 +24,7 @@ POINT_KEYS = ("lattice", "sites", "spin", "rule", "parameters")
 
 # the last four are keywords of xarray's own selections: such a dimension could not be selected by keyword
 _RESERVED = """
-lattice sites spin rule site other_site component other_component place cut stage pair end direction
+lattice sites spin rule site other_site component place cut stage pair end direction
 parity power other_power within
 method tolerance drop indexers
 """
@@ -254,6 +255,15 @@ _GROUPED = (
         group="configuration",
     ),
     Variable(
+        "selected_configuration",
+        "unit vectors of the classical minimum that the first quantum correction selects",
+        per="rule",
+        units="1",
+        dims=("site", "component"),
+        group="configuration",
+        meaning="the start of the quantum branch; which of several tied minima it is can depend on the rule",
+    ),
+    Variable(
         "positions",
         "position of the site, in units of the lattice constant",
         per="lattice",
@@ -316,13 +326,6 @@ _GROUPED = (
         group="moments",
     ),
     Variable(
-        "quantum_moment_square",
-        "quadratic moment <S_i^a S_i^b>/S^2, symmetrized",
-        units="1",
-        dims=("site", "component", "other_component"),
-        group="moments",
-    ),
-    Variable(
         "classical_moment",
         "classical moment n_i",
         units="1",
@@ -346,16 +349,16 @@ _GROUPED = (
     ),
     Variable(
         "quantum_correlation_component",
-        "quantum correlation by components <S_i^a S_j^b>/S^2",
+        "quantum correlation by component <S_i^a S_j^a>/S^2",
         units="1",
-        dims=("site", "other_site", "component", "other_component"),
+        dims=("site", "other_site", "component"),
         group="correlations",
     ),
     Variable(
         "classical_correlation_component",
-        "classical correlation by components n_i^a n_j^b",
+        "classical correlation by component n_i^a n_j^a",
         units="1",
-        dims=("site", "other_site", "component", "other_component"),
+        dims=("site", "other_site", "component"),
         group="correlations",
     ),
     Variable(

@@ -5,10 +5,10 @@ What is not known is said to be unknown.
 
 import numpy as np
 
-from . import wording
-from .dataset import flag_words
-from .scaling import rule_spread, trust_spin
-from .trust import STATES
+from manybody.results. import wording
+from manybody.results.dataset import flag_words
+from manybody.results.scaling import rule_spread, trust_spin
+from manybody.results.trust import STATES
 
 JUDGE = (
     "These numbers compare two descriptions of the same model. Whether the model, the rule and the tolerance suit your "
@@ -100,6 +100,8 @@ def _limit_of_gap(view, rule, spin, unit):
     value, error = float(one["limit_gap"]), float(one["limit_gap_error"])
     if not np.isfinite(value):
         return ""
+    if error > abs(value) / 2:
+        return "; these sizes do not determine its limit for many sites"
     factor = float(view.factor.sel(rule=rule, spin=spin))
     text = wording.measured(abs(value) * factor, error * factor)
     return (

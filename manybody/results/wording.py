@@ -2,7 +2,7 @@
 
 import math
 
-from .figure_style import spin_text
+from manybody.results.figure_style import spin_text
 
 MINUS = "\N{MINUS SIGN}"
 RAISED = str.maketrans("-0123456789", "\N{SUPERSCRIPT MINUS}⁰¹²³⁴⁵⁶⁷⁸⁹")

@@ -9,7 +9,7 @@ from manybody.results.schema import GROUPS, RESERVED_NAMES, VARIABLES, units_tex
 def test_entry_is_complete_and_consistent(variable):
     assert re.fullmatch(r"[a-z][a-z0-9_]*", variable.name)
     assert variable.name not in RESERVED_NAMES
-    assert variable.per in ("point", "cluster", "lattice")
+    assert variable.per in ("point", "cluster", "rule", "lattice")
     assert variable.units in ("energy", "energy2", "1", "s", "bytes", "")
     assert (variable.dtype == "flag") == bool(variable.flags)
     assert (variable.units == "") == (variable.dtype in ("flag", "text"))
