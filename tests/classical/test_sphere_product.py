@@ -48,7 +48,9 @@ def test_retraction_agrees_with_the_great_circle_to_third_order(step):
 
 
 def test_rows_of_any_size_are_normalized():
-    assert np.allclose(normalized(np.array([[3e-200, 4e-200, 0.0], [0.0, 3e200, 4e200]])), [[0.6, 0.8, 0], [0, 0.6, 0.8]])
+    assert np.allclose(
+        normalized(np.array([[3e-200, 4e-200, 0.0], [0.0, 3e200, 4e200]])), [[0.6, 0.8, 0], [0, 0.6, 0.8]]
+    )
     assert np.array_equal(normalized(np.zeros(3)), [0.0, 0.0, 1.0])
     assert np.array_equal(normalized(np.zeros((1, 3)), fallback=np.array([[1.0, 0, 0]])), [[1.0, 0, 0]])
 

@@ -1,0 +1,147 @@
+"""Speed of the classical branch as ratios measured in one run; by hand: python tests/benchmarks/minimize.py [--large]
+
+Prints, beside what is asked for:
+  value and gradient of 64 configurations on 16 x 16 triangular sites over the scipy CSR product of the coupling matrix   (at most 3)
+  scipy's L-BFGS-B on angles with analytic gradient over `minimize`, 64 starts on the same lattice                         (at least 10)
+  bytes of an energy function per bond at three sizes                                                                     (constant)
+  minimum with certificate of 64 x 64 square sites with random bonds                                                      (under 60 s)
+With --large also 10^6 sites of a square and a triangular lattice: time and peak memory.
+"""
+
+import resource
+import sys
+import time
+import tracemalloc
+
+import numpy as np
+from scipy.optimize import minimize as scipy_minimize
+
+from manybody.classical.minimize import MinimizeSettings, minimize
+from manybody.classical.search import find_ground_state
+from manybody.classical.sphere_product import random_points
+from manybody.model import lattice as lattices
+from manybody.model.couplings import exchange
+
+
+def triangular(extent):
+    lattice = lattices.triangular([extent, extent], periodic=True)
+    return exchange(lattice.sites, lattice.pairs("nearest"), 1.0)
+
+
+def best_of(call, repeats=20):
+    times = []
+    for _ in range(repeats):
+        began = time.perf_counter()
+        call()
+        times.append(time.perf_counter() - began)
+    return min(times)
+
+
+def evaluation():
+    f = triangular(16)
+    n = random_points(np.random.default_rng(0), f.sites, (64,))
+    matrix = f.quadratic_form()[0]
+    columns = np.ascontiguousarray(n.reshape(64, -1).T)
+    ours, plain = best_of(lambda: f.value_and_gradient(n)), best_of(lambda: matrix @ columns)
+    print(
+        f"value and gradient / CSR product: {ours / plain:.2f}  ({1e3 * ours:.2f} ms / {1e3 * plain:.2f} ms; at most 3)"
+    )
+
+
+def angles_search(f, starts):
+    """One scipy search per start, on polar and azimuthal angles; returns the energies and the largest gradient left."""
+    matrix = f.quadratic_form()[0]
+
+    def value_and_gradient(angles):
+        theta, phi = angles.reshape(2, -1)
+        st, ct, sp, cp = np.sin(theta), np.cos(theta), np.sin(phi), np.cos(phi)
+        n = np.stack([st * cp, st * sp, ct], axis=1)
+        slope = (matrix @ n.reshape(-1)).reshape(n.shape)
+        by_theta = np.sum(slope * np.stack([ct * cp, ct * sp, -st], axis=1), axis=1)
+        by_phi = np.sum(slope * np.stack([-st * sp, st * cp, np.zeros_like(st)], axis=1), axis=1)
+        return 0.5 * np.sum(slope * n), np.concatenate([by_theta, by_phi])
+
+    energies, slopes = [], []
+    for n in starts:
+        angles = np.concatenate([np.arccos(n[:, 2]), np.arctan2(n[:, 1], n[:, 0])])
+        options = {"maxiter": 20_000, "maxfun": 20_000, "ftol": 1e-14, "gtol": 1e-8}
+        found = scipy_minimize(value_and_gradient, angles, jac=True, method="L-BFGS-B", options=options)
+        energies.append(found.fun)
+        slopes.append(np.abs(found.jac).max())
+    return np.array(energies), max(slopes)
+
+
+def search():
+    f = triangular(16)
+    minimize(f, MinimizeSettings(starts=2))  # compile
+    began = time.perf_counter()
+    ours = minimize(f, MinimizeSettings(starts=64))
+    seconds = time.perf_counter() - began
+    began = time.perf_counter()
+    energies, slope = angles_search(f, random_points(np.random.default_rng(0), f.sites, (64,)))
+    reference = time.perf_counter() - began
+    hits = sum(m.count for m in ours.minima if m.energy < ours.energy + 1e-6)
+    print(
+        f"L-BFGS-B on angles / minimize: {reference / seconds:.1f}  ({reference:.2f} s / {seconds:.2f} s; at least 10)\n"
+        f"    lowest {energies.min():.9f} ({(energies < energies.min() + 1e-6).sum()} of 64, gradient {slope:.0e}) against "
+        f"{ours.energy:.9f} ({hits} of 64, gradient {ours.gradient_norm:.0e})"
+    )
+
+
+def memory():
+    for extent in (32, 64, 128):
+        lattice = lattices.triangular([extent, extent], periodic=True)
+        pairs = lattice.pairs("nearest")
+        n = random_points(np.random.default_rng(0), lattice.sites)
+        tracemalloc.start()
+        f = exchange(lattice.sites, pairs, 1.0)
+        f.value_and_gradient(n)
+        held, peak = tracemalloc.get_traced_memory()
+        tracemalloc.stop()
+        print(
+            f"memory at {len(pairs):6d} bonds: {held / len(pairs):.0f} bytes per bond held, {peak / len(pairs):.0f} at the peak"
+        )
+
+
+def certificate():
+    lattice = lattices.square([64, 64], periodic=True)
+    pairs = lattice.pairs("nearest")
+    for kind in ("gaussian", "plus-minus"):
+        generator = np.random.default_rng(0)
+        bonds = (
+            generator.standard_normal(len(pairs)) if kind == "gaussian" else generator.choice([-1.0, 1.0], len(pairs))
+        )
+        f = exchange(lattice.sites, pairs, bonds[:, None, None])
+        began = time.perf_counter()
+        found = find_ground_state(f, starts=7)
+        seconds = time.perf_counter() - began
+        print(
+            f"64 x 64 {kind} bonds: {seconds:.1f} s for minimum and certificate (under 60), method {found.certificate.method}, "
+            f"gap {found.certificate.gap / abs(found.result.energy):.1e} relative"
+        )
+
+
+def large():
+    for shape in ("square", "triangular"):
+        began = time.perf_counter()
+        lattice = getattr(lattices, shape)([1000, 1000], periodic=True)
+        f = exchange(lattice.sites, lattice.pairs("nearest"), 1.0)
+        built = time.perf_counter() - began
+        found = minimize(f)
+        seconds = time.perf_counter() - began
+        peak = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 2**20
+        print(
+            f"{shape} 1000 x 1000: {seconds:.0f} s ({built:.0f} s to build), energy per site {found.energy / f.sites:.8f}, "
+            f"relative gradient {found.gradient_norm:.0e}, converged {found.converged}, proven {found.proven}, "
+            f"{found.starts_used} starts, peak {peak:.1f} GiB so far",
+            flush=True,
+        )
+
+
+if __name__ == "__main__":
+    evaluation()
+    search()
+    memory()
+    certificate()
+    if "--large" in sys.argv:
+        large()
