@@ -18,7 +18,7 @@ from pathlib import Path
 
 import numpy as np
 
-from manybody.results. import derived
+from manybody.results import derived
 from manybody.results.schema import COMPONENTS, CONVENTIONS, GROUPS, POINT_KEYS, VARIABLES, Variable
 
 FILE_NAME = "results.nc"

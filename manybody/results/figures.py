@@ -3,7 +3,7 @@
 from dataclasses import dataclass, field
 from pathlib import Path
 
-from manybody.results. import figure_style
+from manybody.results import figure_style
 from manybody.results.dataset import open_results
 from manybody.results.figure_view import NotDrawn, look
 from manybody.results.figures_energy import convergence, ladder

@@ -14,7 +14,7 @@ from pathlib import Path
 
 import numpy as np
 
-from manybody.results. import wording
+from manybody.results import wording
 from manybody.results.dataset import flag_words, open_results, points_table
 from manybody.results.figure_view import look
 from manybody.results.figures import figures_of, save

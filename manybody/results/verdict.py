@@ -5,7 +5,7 @@ What is not known is said to be unknown.
 
 import numpy as np
 
-from manybody.results. import wording
+from manybody.results import wording
 from manybody.results.dataset import flag_words
 from manybody.results.scaling import rule_spread, trust_spin
 from manybody.results.trust import STATES
