@@ -98,8 +98,8 @@ def _exact(kind: _AsKind, memory: int, observables: bool) -> tuple[float, float]
 
 @functools.lru_cache(maxsize=4096)
 def _sweeps(kind: _AsKind, max_bond: int, memory: int) -> tuple[float, float]:
-    """(seconds, bytes) of matrix-product sweeps: bytes at the largest bond dimension allowed, seconds at the one that the
-    usual accuracy takes on gapless chains, growing with spin and with the width of the cluster.
+    """(seconds, bytes) of matrix-product sweeps: bytes at the largest bond dimension allowed, seconds at the one that
+    the usual accuracy takes on gapless chains, growing with spin and with the width of the cluster.
 
     A conserved charge splits a bond into about `share` equal blocks; work falls with its square.
     """
