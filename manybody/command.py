@@ -175,15 +175,15 @@ def main() -> None:
 
 def _exit_code(error: Exception) -> int | None:
     """2 for what a user can put right before anything is written, 1 for trouble outside; None: a fault of ours."""
-    from manybody.workflow.journal import JournalError
+    from manybody.workflow.journal import JournalError, NoStudy
     from manybody.workflow.lock import FolderInUse
     from manybody.workflow.problems import DocumentError
     from manybody.workflow.study import FolderError
     from manybody.workflow.tasks import EngineError
 
-    if isinstance(error, (DocumentError, FolderError, FolderInUse, BadInput, FileNotFoundError)):
+    if isinstance(error, (DocumentError, FolderError, FolderInUse, BadInput, NoStudy, FileNotFoundError)):
         return 2
-    if isinstance(error, (JournalError, EngineError)):
+    if isinstance(error, (JournalError, EngineError, OSError)):
         return 1
     return None
 

@@ -44,6 +44,10 @@ class JournalError(RuntimeError):
     """The journal cannot be read or written; the message says why and what to do."""
 
 
+class NoStudy(JournalError):
+    """The folder holds no journal."""
+
+
 @dataclass(frozen=True)
 class Entry:
     """One stored part without its result."""
@@ -100,7 +104,7 @@ class Journal:
         path = self.folder / JOURNAL
         if not write:
             if not path.is_file():
-                raise JournalError(f"{self.folder} holds no study: {path} does not exist.")
+                raise NoStudy(f"{self.folder} holds no study: {path} does not exist.")
             self._database = self._guard(lambda: self._open(path, None))
             return
         self.lock = FolderLock(self.folder / LOCK)

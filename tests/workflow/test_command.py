@@ -108,7 +108,7 @@ def test_bad_input_is_one_message_status_2_and_nothing_written(manybody, study, 
 
 def test_folder_without_a_study_is_told(manybody, tmp_path):
     code, _, errors = manybody("status", tmp_path)
-    assert code != 0 and "holds no study" in errors
+    assert code == 2 and "holds no study" in errors
 
 
 def test_second_run_is_refused(manybody, study, tmp_path):
