@@ -214,6 +214,25 @@ def test_plain_lines_tell_counts_failures_and_long_parts(monkeypatch):
     assert "to do, about" in text and "finished: quantum-1 (quantum) in 1 s" in text
 
 
+def test_long_runs_write_what_they_have_now_and_then(monkeypatch, tmp_path):
+    from manybody.workflow import engine
+
+    monkeypatch.setattr(engine, "MEANWHILE", 0.3)
+    monkeypatch.setattr(engine, "NOTE_EVERY", 0.1)
+    seen = []
+    with Journal(tmp_path) as journal:
+        tasks = [fake_task(i, sleep=0.1, seconds=5.0) for i in range(12)]
+        run_tasks(
+            tasks,
+            run_fake,
+            journal,
+            InProcess(1e9),
+            meanwhile=lambda: seen.append((len(journal.entries()), journal.notes())),
+        )
+    assert 2 <= len(seen) <= 5 and all(0 < count < 12 for count, _ in seen)
+    assert '"quantum-' in seen[0][1]["running"]
+
+
 def test_live_display_shows_what_runs_where():
     import io
 
