@@ -1,4 +1,6 @@
-"""Kills at random moments, in full: PYTHONPATH=.:tests python tests/benchmarks/faults.py [kills=500] [seed=1] [bad files=1000].
+"""Kills at random moments and malformed workflow files, in full.
+
+PYTHONPATH=.:tests python tests/benchmarks/faults.py [kills=500] [seed=1] [bad files=1000]
 
 Every round starts a run of a study of short parts in a process of its own and kills it, or one of its workers, at a
 random moment, and resumes. Checked: nothing that the journal had as finished is computed again, no entry is torn, and
@@ -45,7 +47,7 @@ ROUNDS = (  # workers, parts, seconds of a part, kills per study
 
 
 def malformed(count, seed):
-    """Mutations of the ready workflow files: each that is no workflow ends with status 2 and a place, and leaves nothing."""
+    """Mutations of the ready workflow files: each that is none any more ends with status 2 and a place, nothing else."""
     from manybody import command
     from manybody.workflow.problems import DocumentError
     from manybody.workflow.study import as_study
@@ -72,7 +74,7 @@ def malformed(count, seed):
             bad += 1
             sys.argv = ["manybody", "run", str(file), "--out", str(out)]
             words = io.StringIO()
-            with contextlib.redirect_stderr(words), contextlib.suppress(SystemExit):
+            with contextlib.redirect_stderr(words):
                 code = 0
                 try:
                     command.main()
