@@ -119,8 +119,11 @@ class Journal:
 
     def _open(self, path: Path | str, schema: str | None) -> sqlite3.Connection:
         if schema is None:
-            address = f"file:{Path(path).resolve().as_posix().replace('%', '%25').replace('?', '%3f')}?mode=ro"
-            database = sqlite3.connect(address, uri=True, timeout=60, isolation_level=None)
+            # mode=rw makes no file, but lets SQLite roll back what a killed run left half written
+            database = sqlite3.connect(
+                f"{Path(path).resolve().as_uri()}?mode=rw", uri=True, timeout=60, isolation_level=None
+            )
+            database.execute("pragma query_only = on")
         else:
             database = sqlite3.connect(path, timeout=60, isolation_level=None, check_same_thread=False)
             database.execute("pragma journal_mode = delete")

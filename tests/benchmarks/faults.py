@@ -47,7 +47,7 @@ ROUNDS = (  # workers, parts, seconds of a part, kills per study
 
 
 def malformed(count, seed):
-    """Mutations of the ready workflow files: each that is none any more ends with status 2 and a place, nothing else."""
+    """Mutations of the ready workflow files: each that is none any more ends with status 2 and its places named."""
     from manybody import command
     from manybody.workflow.problems import DocumentError
     from manybody.workflow.study import as_study

@@ -71,6 +71,21 @@ def test_damaged_file_is_set_aside_and_good_entries_carried_over(tmp_path):
         journal.store([(tasks[0], Outcome(tasks[0].key, "finished", pack({"number": 0})))])
 
 
+def test_reading_after_a_kill_in_the_middle_of_writing(tmp_path):
+    tasks = stored(tmp_path)
+    script = (
+        "import os, sqlite3, sys; database = sqlite3.connect(sys.argv[1], isolation_level=None)\n"
+        "database.execute('pragma cache_size = 1'); database.execute('begin immediate')\n"
+        "database.execute('update parts set message = ?', ('x' * 100_000,)); os.kill(os.getpid(), 9)"
+    )
+    subprocess.run([sys.executable, "-c", script, str(tmp_path / JOURNAL)], check=False)
+    assert (tmp_path / f"{JOURNAL}-journal").stat().st_size > 0  # what SQLite rolls back from
+    with Journal(tmp_path, write=False) as journal:
+        assert [entry.message for entry in journal.entries().values()] == [""] * len(tasks)
+    with Journal(tmp_path) as journal:
+        assert not journal.dropped and len(journal.entries()) == len(tasks)
+
+
 def test_file_that_is_no_database_is_set_aside(tmp_path):
     (tmp_path / JOURNAL).write_bytes(b"something else entirely" * 1000)
     with Journal(tmp_path) as journal:
