@@ -19,6 +19,7 @@ from manybody.model import harmonics
 from manybody.model.evaluation import Evaluation
 
 Key = tuple[tuple[int, int], ...]
+COMPILED_BATCH = 12_000  # numbers in a batch of configurations from which compiled code pays for being loaded
 
 
 @dataclass(frozen=True, eq=False)
@@ -157,6 +158,14 @@ class EnergyFunction:
         n = self._checked(n)
         flat = n.reshape(-1, self.sites, 3)
         values, gradients = np.empty(len(flat)), np.empty(flat.shape)
+        if not self.evaluation.higher and len(flat) >= 4 and flat.size >= COMPILED_BATCH:
+            from manybody.model.batch_kernels import value_and_gradient
+
+            matrix = self.evaluation.matrix
+            form = matrix.indptr, matrix.indices, matrix.data, self.evaluation.linear
+            value_and_gradient(np.ascontiguousarray(flat), *form, values, gradients)
+            values += self.evaluation.constant
+            return values.reshape(n.shape[:-2])[()], gradients.reshape(n.shape)
         # In slices of the batch whose scratch arrays stay in the cache, and in memory that is not given back each time.
         step = max(8, 12288 // (3 * self.sites))
         for start in range(0, len(flat), step):
