@@ -65,7 +65,7 @@ def spin_text(spin) -> str:
 
 def unit_text(unit) -> str:
     """How an axis names the unit of energy."""
-    return "units of the couplings" if unit in ("", "1") else unit
+    return "coupling units" if unit in ("", "1") else unit
 
 
 def depth_colours():
@@ -107,7 +107,7 @@ def spin_axis(axis, spins):
 
 def below(axes, handles):
     """One legend under all panels of a figure, {label: handle}, in as many columns as fit its width."""
-    widest = max(len(label) for label in handles) * 0.062 + 0.75
+    widest = max(len(label) for label in handles) * 0.052 + 0.6
     columns = int(np.clip(axes.figure.get_figwidth() / widest, 1, len(handles)))
     axes.figure.legend(handles.values(), handles.keys(), loc="outside lower center", ncols=columns, columnspacing=1.4)
 
@@ -115,4 +115,4 @@ def below(axes, handles):
 def value_ticks(axis, values):
     """Ticks at the swept values themselves, or at some of them."""
     chosen = even_choice(values, 8)
-    axis.set_ticks(chosen, [f"{value:g}" for value in chosen])
+    axis.set_ticks(chosen, [f"{value:.3g}" for value in chosen])

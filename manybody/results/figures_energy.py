@@ -35,6 +35,7 @@ def ladder(view):
     figure, axes = new_figure(len(rules))
     classical = view.energy("classical_energy").sel(sites=size) / size
     handles, must, may = {}, [], []
+    rungs = {}
     for axis, rule in zip(axes[0], rules):
         mask = usable.sel(sites=size, rule=rule).values
         at = view.spins[mask]
@@ -58,6 +59,7 @@ def ladder(view):
                 ms=7,
                 zorder=3,
             )[0]
+            rungs.setdefault(label, []).append(values)
             (must if name in ("product_energy", "coherent_energy") else may).append(values)
         bars = axis.errorbar(
             at, energy, yerr=[np.nan_to_num(error), 0 * energy], fmt="D", color=COLOURS[0], ms=4, zorder=4
@@ -65,13 +67,20 @@ def ladder(view):
         handles["quantum, 95 % error"] = bars
         axis.set_title(f"rule: {rule}", loc="left")
         spin_axis(axis.xaxis, view.spins)
-    _frame(axes[0, 0], must, may)
+    low, high = _frame(axes[0, 0], must, may)
+    outside = [
+        label
+        for label, values in rungs.items()
+        if not np.any(np.abs(_finite(values) - (low + high) / 2) < (high - low) / 2)
+    ]
+    handles = {label: handle for label, handle in handles.items() if label not in outside}
     axes[0, 0].set_ylabel(f"energy per site ({unit_text(view.unit)})")
     below(axes[0, 0], handles)
     error_note = "Error bars reach down to where the true quantum energy may lie; most are smaller than the symbols."
+    cut = f" ({', '.join(outside)} wholly)" if outside else ""
     caption = (
         f"Energy ladder per site against spin, {size} sites. {error_note} Bounds and corrections far outside the frame "
-        f"at small spin are cut off.{view.note()}"
+        f"are cut off{cut}.{view.note()}"
     )
     return figure, caption
 
@@ -137,6 +146,7 @@ def _frame(axis, must, may):
     near = others[(others > low - 0.5 * spread) & (others < high + 0.5 * spread)]
     low, high = min(low, near.min(initial=low)), max(high, near.max(initial=high))
     axis.set_ylim(low - 0.08 * spread, high + 0.08 * spread)
+    return axis.get_ylim()
 
 
 def _finite(arrays):

@@ -95,7 +95,7 @@ def gap_against_sites(view):
     spins = even_choice([s for s in view.spins if bool(np.isfinite(gaps.sel(spin=s)).any())])
     figure, axes = new_figure(len(rules))
     published = matching(view.root)
-    handles, cited, extrapolated = {}, [], False
+    handles, cited, extrapolated, shown = {}, [], False, [0.0]
     for axis, rule in zip(axes[0], rules):
         for k, spin in enumerate(spins):
             colour, marker = COLOURS[k % len(COLOURS)], MARKERS[k]
@@ -105,6 +105,7 @@ def gap_against_sites(view):
             factor = float(view.factor.sel(place))
             error = (view.energy("quantum_energy_error").sel(place) / view.point["sites"]).values
             _bars(axis, 1 / view.sites[good], value[good], error[good], colour, marker)
+            shown += [*value[good], *(value[good] - error[good])]
             handles[f"S = {spin_text(spin)}"] = axis.plot([], [], color=colour, marker=marker, ls="")[0]
             index = dict(view.place) | {
                 "spin": int(np.flatnonzero(view.spins == spin)[0]),
@@ -116,6 +117,7 @@ def gap_against_sites(view):
                 inverse = np.linspace(1 / max(limit.sizes), 1 / min(limit.sizes), 80)
                 axis.plot(inverse, limit.curve.at("gap", 1 / inverse) * factor, color=colour, lw=1)
                 end = limit.values["gap"] * factor
+                shown.append(end)
                 last = limit.curve.at("gap", np.array([max(limit.sizes)]))[0] * factor
                 axis.plot([0, inverse[0]], [end, last], color=colour, lw=1, ls=(0, (1.5, 1.5)))
                 axis.errorbar([0], [end], yerr=2 * limit.errors["gap"] * factor, fmt=marker, mfc="white", color=colour)
@@ -130,10 +132,13 @@ def gap_against_sites(view):
         axis.set_title(f"rule: {rule}", loc="left")
         axis.set_xlabel("1 / number of sites")
         axis.set_xlim(-0.04 / view.sites.min(), 1.06 / view.sites.min())
+    spread = max(shown) - min(shown)
+    axes[0, 0].set_ylim(min(shown) - 0.25 * spread, max(shown) + 0.25 * spread)
     axes[0, 0].set_ylabel(f"quantum \N{MINUS SIGN} classical\nenergy per site ({unit_text(view.unit)})")
     below(axes[0, 0], dict(sorted(handles.items(), key=lambda item: not item[0].startswith("S ="))))
     what = (
-        " Solid: leading form, over the sizes that were extrapolated; open symbols at zero: limit of many sites."
+        " Solid: leading form, over the sizes that were extrapolated; open symbols at zero: limit of many "
+        "sites, whose error may leave the frame."
         if extrapolated
         else " No limit of many sites: that needs three sizes of one family."
     )

@@ -131,9 +131,11 @@ def _trusted_lines(view, name, verdict, size, tolerance):
         )
         axis.plot(at[~beyond], value[~beyond], MARKERS[k], color=colour)
         axis.plot(at[beyond], value[beyond], MARKERS[k], mfc="white", color=colour)
-    axis.set_yscale("log")
     axis.margins(y=0.12)
-    log_ticks(axis.yaxis, spin_text)
+    low, high = axis.get_ylim()
+    if low > 0 and high / low > 6:
+        axis.set_yscale("log")
+        log_ticks(axis.yaxis, spin_text)
     axis.set_xlabel(name)
     axis.set_ylabel("smallest trustworthy spin")
     axis.legend()

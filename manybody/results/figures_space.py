@@ -24,11 +24,13 @@ def configuration(view):
     size = int(sizes[-1])
     n = vectors.sel(sites=size).transpose("site", "component").values[:size]
     r = positions.sel(sites=size).transpose("site", "component").values[:size]
-    r, axes_of_view = _facing(r)
-    n = n @ axes_of_view.T
+    line = np.linalg.matrix_rank(r - r.mean(axis=0), tol=1e-9) <= 1
     turned = int(view.root.attrs.get("symmetry_axes", 0)) == 3
     if turned:
         n = _lying(n)
+    r, axes_of_view = _along(r, n) if line and not turned else _facing(r)
+    if not turned:
+        n = n @ axes_of_view.T
     reach = _spacing(r)
     low, high = r[:, :2].min(axis=0) - reach, r[:, :2].max(axis=0) + reach
     ratio = (high[1] - low[1]) / (high[0] - low[0])
@@ -37,50 +39,53 @@ def configuration(view):
     if "pairs" in data:
         pairs = _at(data["pairs"], view).sel(sites=size).values
         _bonds(axis, r, pairs[(pairs >= 0).all(axis=1)])
-    look = {"cmap": depth_colours(), "edgecolor": INK, "linewidth": 0.4}
-    colour = axis.quiver(
-        *(r[:, 0], r[:, 1], n[:, 0], n[:, 1], n[:, 2]),
-        **{"angles": "xy", "scale_units": "xy", "scale": 1.3 / reach, "pivot": "mid", "clim": (-1, 1), "zorder": 3},
-        **{"width": 0.07 * reach, "units": "xy", "headwidth": 3.4, "headlength": 3.6, "headaxislength": 3.6},
-        **look,
-    )
-    flat = np.hypot(n[:, 0], n[:, 1]) < 0.25
-    for up, marker in ((True, "o"), (False, "X")):
-        chosen = flat & ((n[:, 2] > 0) == up)
-        axis.scatter(
-            *r[chosen, :2].T,
-            marker=marker,
-            s=34,
-            c=n[chosen, 2],
-            cmap="PuOr",
-            vmin=-1,
-            vmax=1,
-            ec=INK,
-            lw=0.6,
-            zorder=4,
-        )
+    upright = np.hypot(n[:, 0], n[:, 1]) < 0.45
+    colour = _arrows(axis, r, n, upright, reach)
     axis.set_aspect("equal")
     axis.grid(False)
-    turned_view = not np.array_equal(axes_of_view, np.eye(3))
-    for label, name in ((axis.set_xlabel, "x"), (axis.set_ylabel, "y")):
-        label(f"{name}{' as seen' if turned_view else ''} (lattice constants)")
     axis.set_xlim(low[0], high[0])
     axis.set_ylim(low[1], high[1])
+    if line:
+        axis.set_xlabel("position along the line (lattice constants)")
+        axis.set_yticks([])
+    else:
+        seen = "" if np.array_equal(axes_of_view, np.eye(3)) else " as seen"
+        axis.set_xlabel(f"x{seen} (lattice constants)")
+        axis.set_ylabel(f"y{seen} (lattice constants)")
     if np.abs(n[:, 2]).max() > 0.02:
-        figure.colorbar(colour, cax=axis.inset_axes([1.03, 0, 0.035, 1]), label="component out of the plane")
-    proof = _proof(view, size)
-    axis.set_title(f"classical minimum, {proof[0]}", loc="left")
-    seen = (
-        " The energy does not change when all vectors are turned together; here they are turned into the plane."
-        if turned
-        else ""
-    )
-    deep = " Sites are seen from the direction in which they spread least." if np.ptp(r[:, 2]) > 1e-9 else ""
+        figure.colorbar(colour, cax=axis.inset_axes([1.03, 0, 0.035, 1]), label="component out\nof the plane")
+    title, proof = _proof(view, size)
+    axis.set_title(f"classical minimum, {title}", loc="left")
+    notes = []
+    if upright.any():
+        notes.append("Circle: mostly out of the plane towards the reader, cross: away from the reader.")
+    if turned:
+        notes.append("The energy does not change when all vectors are turned together; here they lie in the plane.")
+    elif line:
+        notes.append("The plane shown holds the line of sites and the main direction of the vectors across it.")
+    elif np.ptp(r[:, 2]) > 1e-9:
+        notes.append("The sites are seen from the direction in which they spread least.")
     caption = (
-        f"Classical minimum, {size} sites. {proof[1]} Circle: out of the plane towards the reader, cross: away from "
-        f"the reader.{seen}{deep} Other minima of the same energy may exist.{view.note()}"
+        f"Classical minimum, {size} sites. {' '.join([proof, *notes])} Other minima of the same energy may exist."
+        f"{view.note()}"
     )
     return figure, caption
+
+
+def _arrows(axis, r, n, upright, reach):
+    """Arrows for vectors in the plane, circles and crosses for upright ones; returns what a colour bar needs."""
+    shades = depth_colours()
+    arrows = axis.quiver(
+        *(np.ma.masked_array(column, upright) for column in (r[:, 0], r[:, 1], n[:, 0], n[:, 1], n[:, 2])),
+        **{"angles": "xy", "scale_units": "xy", "scale": 1.3 / reach, "pivot": "mid", "clim": (-1, 1), "zorder": 3},
+        **{"width": 0.07 * reach, "units": "xy", "headwidth": 3.4, "headlength": 3.6, "headaxislength": 3.6},
+        **{"cmap": shades, "edgecolor": INK, "linewidth": 0.4},
+    )
+    for up, marker in ((True, "o"), (False, "X")):
+        chosen = upright & ((n[:, 2] > 0) == up)
+        colours = shades((n[chosen, 2] + 1) / 2)
+        axis.scatter(*r[chosen, :2].T, marker=marker, s=48, c=colours, edgecolor=INK, linewidth=0.6, zorder=4)
+    return arrows
 
 
 def _at(array, view):
@@ -96,6 +101,19 @@ def _facing(r):
     if np.linalg.det(axes) < 0:
         axes[2] *= -1
     return spread @ axes.T, axes
+
+
+def _along(r, n):
+    """The same for sites on one line: the picture holds the line and what the vectors mainly do across it."""
+    first = np.linalg.svd(r - r.mean(axis=0), full_matrices=True)[2][0]
+    first = first * np.sign(first[np.argmax(np.abs(first))])
+    across = np.linalg.svd(n - np.outer(n @ first, first), full_matrices=True)[2][0]
+    across = across - (across @ first) * first
+    if np.linalg.norm(across) < 1e-6:
+        across = np.linalg.svd(first[None])[2][1]
+    across = across / np.linalg.norm(across) * (np.sign(across[np.argmax(np.abs(across))]))
+    axes = np.stack([first, across, np.cross(first, across)])
+    return (r - r[0]) @ axes.T, axes
 
 
 def _lying(n):
