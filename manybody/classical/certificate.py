@@ -1,6 +1,7 @@
 """Proof that a configuration is a global minimum, or the best lower bound that could be had.
 
-METHODS lists what a certificate can rest on. Every bound but the last kind is rigorous, floating-point rounding included.
+METHODS lists what a certificate can rest on. Every bound but the last kind is rigorous, floating-point rounding
+included.
 """
 
 import math
@@ -30,10 +31,11 @@ FEW_CLUSTERS = 12  # inequivalent clusters that are worth minimizing for a quadr
 
 @dataclass(frozen=True)
 class CertificateSettings:
-    """tolerance: largest distance of energy and bound that counts as proof, relative to |f - f_mean| at the configuration.
+    """tolerance: largest distance of energy and bound that counts as proof, relative to |f - f_mean| at the
+    configuration.
 
-    relaxation: whether the semidefinite relaxation may be solved where plain multipliers fail; relaxed_sites: only up to this number of
-    sites. roundings: configurations made from its solution. seed: of its random start.
+    relaxation: whether the semidefinite relaxation may be solved where plain multipliers fail; relaxed_sites: only up
+    to this number of sites. roundings: configurations made from its solution. seed: of its random start.
     """
 
     tolerance: float = 1e-8
@@ -45,10 +47,12 @@ class CertificateSettings:
 
 @dataclass(frozen=True)
 class Certificate:
-    """bound <= min f if `rigorous`. certified: the configuration is a global minimum within the tolerance (only from rigorous bounds).
+    """bound <= min f if `rigorous`. certified: the configuration is a global minimum within the tolerance (only from
+    rigorous bounds).
 
-    method: a key of METHODS. gap: f(configuration) - bound. starts (r, N, 3): configurations made from the relaxation, for `minimize`;
-    r may be 0. rank: columns of the solution of the relaxation (0 without one); it is tight if at most 3.
+    method: a key of METHODS. gap: f(configuration) - bound. starts (r, N, 3): configurations made from the relaxation,
+    for `minimize`; r may be 0. rank: columns of the solution of the relaxation (0 without one); it is tight if at most
+    3.
     """
 
     bound: float

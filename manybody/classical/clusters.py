@@ -1,12 +1,13 @@
-"""A lower bound of any energy function: the sum of the minima of small clusters (Anderson 1951, Phys. Rev. 83, 1260, for classical terms).
+"""A lower bound of any energy function: the sum of the minima of small clusters (Anderson 1951, Phys. Rev. 83, 1260,
+for classical terms).
 
-f is written as a sum of functions of few sites: every term goes to the clusters that hold all its sites, in equal shares, so that the sum
-is f again. Clusters are the bonds (the sets of sites of the terms) or, where they exist, triangles of bonds. Clusters that are
-equal up to the numbering of sites are minimized once.
+f is written as a sum of functions of few sites: every term goes to the clusters that hold all its sites, in equal
+shares, so that the sum is f again. Clusters are the bonds (the sets of sites of the terms) or, where they exist,
+triangles of bonds. Clusters that are equal up to the numbering of sites are minimized once.
 
-The minimum of a cluster is bounded rigorously by multipliers or the relaxation where it is quadratic, exactly where it is a polynomial in
-n_1.n_2, and by branch and bound for two vectors, or three with common rotations (small_clusters.py). Larger clusters of higher degree get
-the lowest of many starts: then the bound is not rigorous.
+The minimum of a cluster is bounded rigorously by multipliers or the relaxation where it is quadratic, exactly where it
+is a polynomial in n_1.n_2, and by branch and bound for two vectors, or three with common rotations (small_clusters.py).
+Larger clusters of higher degree get the lowest of many starts: then the bound is not rigorous.
 """
 
 import itertools
@@ -33,7 +34,8 @@ class ClusterSum:
 
 
 def cluster_sum(f: EnergyFunction, seed: int = 1, most: int | None = None) -> ClusterSum | None:
-    """The best of the cluster bounds of f, a rigorous one where there is one. `f` should be scaled to couplings of order one.
+    """The best of the cluster bounds of f, a rigorous one where there is one. `f` should be scaled to couplings of
+    order one.
 
     most: coverings with more inequivalent clusters than this are left out; None if no covering remains.
     """
@@ -122,7 +124,9 @@ def _cluster_minimum(piece: EnergyFunction, seed: int, evaluations: int = 400_00
 
 
 def _function_of_product(piece: EnergyFunction) -> float:
-    """Minimum over x = n_1.n_2 in [-1, 1] of a polynomial: its values at the ends and at the zeros of its derivative."""
+    """Minimum over x = n_1.n_2 in [-1, 1] of a polynomial: its values at the ends and at the zeros of
+    its derivative.
+    """
     degree = max(group.ranks[0] for group in piece.groups)
     x = chebyshev.chebpts1(degree + 1)
     up = np.broadcast_to([0.0, 0.0, 1.0], (len(x), 3))

@@ -1,4 +1,6 @@
-"""Telling minima apart: two configurations are one minimum when a rotation that leaves f unchanged carries one into the other."""
+"""Telling minima apart: two configurations are one minimum when a rotation that leaves f unchanged carries one into the
+other.
+"""
 
 import numpy as np
 
@@ -18,8 +20,8 @@ def coupled_sites(f: EnergyFunction) -> np.ndarray:
 class Comparison:
     """Distances between configurations modulo the common rotations of every connected cluster that f allows.
 
-    Only rotations about `f.symmetry_axes()` count, applied to each cluster of connected sites by itself; permutations of sites and
-    reflections do not. Sites on which f does not depend are left out.
+    Only rotations about `f.symmetry_axes()` count, applied to each cluster of connected sites by itself; permutations
+    of sites and reflections do not. Sites on which f does not depend are left out.
     """
 
     def __init__(self, f: EnergyFunction):
@@ -32,7 +34,9 @@ class Comparison:
             self.clusters = [np.flatnonzero(touched)]
 
     def distance(self, one: np.ndarray, many: np.ndarray) -> np.ndarray:
-        """Root mean square over the sites of |one_i - R many_i|, R the best allowed rotation: one (N, 3), many (P, N, 3) -> (P,)."""
+        """Root mean square over the sites of |one_i - R many_i|, R the best allowed rotation: one (N, 3), many (P, N,
+        3) -> (P,).
+        """
         total = np.zeros(len(many))
         for cluster in self.clusters:
             # |a - R b|^2 summed = 2 (sites - tr(R C)), C = sum b a^T
@@ -44,7 +48,8 @@ class Comparison:
     def _best(self, overlap: np.ndarray) -> np.ndarray:
         """Largest tr(R C) over the allowed rotations R, for overlaps C (P, 3, 3)."""
         if len(self.axes) == 3:
-            # Kabsch 1976, Acta Cryst. A 32, 922: proper rotations, so the last singular value takes the sign of the determinant
+            # Kabsch 1976, Acta Cryst. A 32, 922: proper rotations, so the last singular value takes the sign of the
+            # determinant
             singular = np.linalg.svd(overlap, compute_uv=False)
             return singular[:, 0] + singular[:, 1] + np.where(np.linalg.det(overlap) < 0, -1, 1) * singular[:, 2]
         trace = np.trace(overlap, axis1=1, axis2=2)

@@ -1,13 +1,14 @@
 """Harmonic fluctuations about a classical minimum: frequencies, zero modes, and e_1 of one configuration.
 
-At a minimum n*, A is the 2N x 2N Riemannian Hessian of f in orthonormal tangent frames (e_1, e_2 = n x e_1). Its symplectic eigenvalues
-omega_k >= 0 are the moduli of the eigenvalues +- i omega of J A, equal to the singular values (each twice) of A^(1/2) J A^(1/2). With the
-quantized energy E = f_min + e_1 / S + O(1/S^2),
+At a minimum n*, A is the 2N x 2N Riemannian Hessian of f in orthonormal tangent frames (e_1, e_2 = n x e_1). Its
+symplectic eigenvalues omega_k >= 0 are the moduli of the eigenvalues +- i omega of J A, equal to the singular values
+(each twice) of A^(1/2) J A^(1/2). With the quantized energy E = f_min + e_1 / S + O(1/S^2),
 
-    e_1 = 1/2 sum omega + kappa tr A,     kappa = +1/4 toeplitz, 0 weyl, -1/4 wick,
+e_1 = 1/2 sum omega + kappa tr A,     kappa = +1/4 toeplitz, 0 weyl, -1/4 wick,
 
-and `substitution` as `wick` plus the 1/S part of its lower symbol at n* (manybody.model.quantization.lower_symbol_correction).
-The symmetric form keeps small frequencies to machine precision where an eigenvalue solver for J A loses half the digits at zero modes.
+and `substitution` as `wick` plus the 1/S part of its lower symbol at n*
+(manybody.model.quantization.lower_symbol_correction). The symmetric form keeps small frequencies to machine precision
+where an eigenvalue solver for J A loses half the digits at zero modes.
 """
 
 from dataclasses import dataclass
@@ -46,7 +47,8 @@ class TooLarge(HarmonicTrouble):
 class Fluctuations:
     """Frequencies (N,) ascending, zero_modes among them, and tr A, all in the units of f and for one configuration.
 
-    flat: tangent vectors (k, N, 3) spanning the null space of A (its own zero modes, which move the configuration at no cost).
+    flat: tangent vectors (k, N, 3) spanning the null space of A (its own zero modes, which move the configuration at no
+    cost).
     """
 
     frequencies: np.ndarray
@@ -66,9 +68,10 @@ class Fluctuations:
 def fluctuations(f: EnergyFunction, n: np.ndarray) -> Fluctuations:
     """Harmonic frequencies of f at a minimum n (N, 3).
 
-    Connected clusters are treated one by one; sites on which f does not depend have frequency zero. Raises UnstablePoint where n is not
-    stationary or A has a negative eigenvalue, TooLarge beyond DENSE_SITES sites in a cluster (SPLIT_SITES for coplanar configurations
-    whose motions in and out of the plane separate). Cost: a few dense decompositions of 2N x 2N, or N x N where they separate.
+    Connected clusters are treated one by one; sites on which f does not depend have frequency zero. Raises
+    UnstablePoint where n is not stationary or A has a negative eigenvalue, TooLarge beyond DENSE_SITES sites in a
+    cluster (SPLIT_SITES for coplanar configurations whose motions in and out of the plane separate). Cost: a few dense
+    decompositions of 2N x 2N, or N x N where they separate.
     """
     n = np.asarray(n, dtype=float)
     if n.shape != (f.sites, 3):
@@ -138,11 +141,14 @@ def _cluster_frequencies(hessian: sp.csr_array, n: np.ndarray, size: float) -> t
 
 
 def _nonnegative(block: np.ndarray, size: float) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
-    """Positive eigenvalues, their vectors, and the null vectors of a symmetric matrix that must not have negative ones."""
+    """Positive eigenvalues, their vectors, and the null vectors of a symmetric matrix that must not
+    have negative ones.
+    """
     values, vectors = np.linalg.eigh(block)
     if values[0] < -UNSTABLE * size:
         raise UnstablePoint(
-            f"the configuration is not a minimum: its curvature is negative in some direction ({values[0] / size:.1e} of the largest)"
+            "the configuration is not a minimum: its curvature is negative in some direction "
+            f"({values[0] / size:.1e} of the largest)"
         )
     kept = values > ZERO_MODE * size
     return values[kept], vectors[:, kept], vectors[:, ~kept]

@@ -1,9 +1,10 @@
 """The first quantum correction e_1, minimized over everything that ties classically: selection by quantum fluctuations.
 
-Where minima form a manifold, or several inequivalent minima tie, the quantum ground energy to order 1/S is f_min plus the LOWEST e_1 / S
-(Villain et al. 1980, J. Phys. France 41, 1263; Henley 1989, Phys. Rev. Lett. 62, 2056). Manifolds are explored along the null
-vectors of the Hessian: step, fall back onto the manifold by Newton steps, compare. Configurations made as collinear, or as non-collinear, as
-the manifold allows are tried beside the given ones, since e_1 often is lowest at a kink there that no small step hits exactly.
+Where minima form a manifold, or several inequivalent minima tie, the quantum ground energy to order 1/S is f_min plus
+the LOWEST e_1 / S (Villain et al. 1980, J. Phys. France 41, 1263; Henley 1989, Phys. Rev. Lett. 62, 2056). Manifolds
+are explored along the null vectors of the Hessian: step, fall back onto the manifold by Newton steps, compare.
+Configurations made as collinear, or as non-collinear, as the manifold allows are tried beside the given ones, since e_1
+often is lowest at a kink there that no small step hits exactly.
 """
 
 from dataclasses import dataclass
@@ -22,7 +23,6 @@ from manybody.classical.sphere_product import normalized, project, retract
 from manybody.model.couplings import biquadratic
 from manybody.model.energy import EnergyFunction
 
-
 __all__ = ["HarmonicCorrection", "HarmonicTrouble", "SelectionSettings", "UnstablePoint", "harmonic_correction"]
 
 
@@ -30,7 +30,8 @@ __all__ = ["HarmonicCorrection", "HarmonicTrouble", "SelectionSettings", "Unstab
 class SelectionSettings:
     """evaluations: how many configurations may be compared, reduced for large systems: evaluations x sites^3 <= work.
 
-    tie: energies within this distance, relative to |f - f_mean|, tie. seed: of the random steps along the manifold. step: the smallest one.
+    tie: energies within this distance, relative to |f - f_mean|, tie. seed: of the random steps along the manifold.
+    step: the smallest one.
     """
 
     evaluations: int = 300
@@ -44,9 +45,9 @@ class SelectionSettings:
 class HarmonicCorrection:
     """e1 of the selected configuration (N, 3): E = f_min + e1 / S + O(1/S^2).
 
-    frequencies (N,) ascending and trace = tr A at it; zero_modes of the frequencies. spread: largest minus smallest e1 met among the
-    configurations that tie (0 where there is one). evaluations: how many were compared. exhausted: the search along a manifold ended
-    because e1 no longer fell, not because the allowed evaluations were spent.
+    frequencies (N,) ascending and trace = tr A at it; zero_modes of the frequencies. spread: largest minus smallest e1
+    met among the configurations that tie (0 where there is one). evaluations: how many were compared. exhausted: the
+    search along a manifold ended because e1 no longer fell, not because the allowed evaluations were spent.
     """
 
     e1: float
@@ -67,8 +68,8 @@ def harmonic_correction(
 ) -> HarmonicCorrection:
     """First quantum correction of f under a rule, minimized over the configurations that tie.
 
-    n: a minimum (N, 3), several (M, N, 3) with the lowest first, or the result of `minimize`; all that tie with the lowest are compared.
-    Raises HarmonicTrouble (UnstablePoint, TooLarge) as `fluctuations` does at the lowest.
+    n: a minimum (N, 3), several (M, N, 3) with the lowest first, or the result of `minimize`; all that tie with the
+    lowest are compared. Raises HarmonicTrouble (UnstablePoint, TooLarge) as `fluctuations` does at the lowest.
     """
     settings = settings or SelectionSettings()
     if isinstance(n, ClassicalResult):
@@ -144,7 +145,9 @@ class _Search:
         return point
 
     def _better(self, point: _Point) -> bool:
-        """Lower e1; at a difference that rounding can make beside a kink, where e1 is good to half the digits, more zero modes."""
+        """Lower e1; at a difference that rounding can make beside a kink, where e1 is good to half the digits, more
+        zero modes.
+        """
         best = self.best
         if abs(point.e1 - best.e1) <= self._noise() and point.fluctuations.zero_modes != best.fluctuations.zero_modes:
             return point.fluctuations.zero_modes > best.fluctuations.zero_modes
@@ -162,14 +165,16 @@ class _Search:
         basis = flat.reshape(len(flat), -1)
         if len(rotations):
             turned = rotations.reshape(len(rotations), -1)
-            left, weight, right = np.linalg.svd(turned, full_matrices=False)
+            _, weight, right = np.linalg.svd(turned, full_matrices=False)
             span = right[weight > 1e-8 * max(weight[0], 1e-300)]
             basis = basis - (basis @ span.T) @ span
         _, weight, right = np.linalg.svd(basis, full_matrices=False)
         return right[weight > 1e-5].reshape(-1, self.f.sites, 3)
 
     def shaped(self) -> list[np.ndarray]:
-        """Minima of f with a small preference for collinear, or for orthogonal, neighbours: e1 is often extremal there."""
+        """Minima of f with a small preference for collinear, or for orthogonal, neighbours: e1 is
+        often extremal there.
+        """
         pairs = {tuple(sites) for g in self.f.groups for sites in g.sites.tolist() if len(sites) == 2}
         if not pairs or self.f.sites > 400:
             return []

@@ -1,7 +1,8 @@
 """Minima of an energy function on the product of spheres: many starts, descent, polishing, distinct minima.
 
-Quadratic functions run through compiled alignment sweeps and Newton steps, one start after the other; functions of higher degree through
-batched quasi-Newton and Newton steps. Starts come in rounds, so that a proof of global minimality can end the search.
+Quadratic functions run through compiled alignment sweeps and Newton steps, one start after the other; functions of
+higher degree through batched quasi-Newton and Newton steps. Starts come in rounds, so that a proof of global minimality
+can end the search.
 """
 
 import math
@@ -22,9 +23,9 @@ class MinimizeSettings:
     """starts: how many starting configurations; seed: of the random ones, equal seeds give equal results.
 
     tolerance: wanted largest tangential gradient at a site, relative to the strongest sum of couplings at a site.
-    max_site_starts: at most this many sites x starts are spent (but at least two starts): on 10^6 sites fewer starts than asked for are
-    made, and `starts_used` says how many. sweeps: alignment sweeps of a start (quasi-Newton steps: five times as many), newton_steps:
-    polishing steps, at most.
+    max_site_starts: at most this many sites x starts are spent (but at least two starts): on 10^6 sites fewer starts
+    than asked for are made, and `starts_used` says how many. sweeps: alignment sweeps of a start (quasi-Newton steps:
+    five times as many), newton_steps: polishing steps, at most.
     """
 
     starts: int = 64
@@ -54,8 +55,9 @@ class Minimum:
 class ClassicalResult:
     """energy, configuration (N, 3): the lowest minimum found. minima: all distinct ones, lowest first.
 
-    gradient_norm: largest tangential gradient at a site over the strongest sum of couplings at a site, at `configuration`.
-    converged: gradient_norm reached the tolerance. proven: a proof of global minimality ended the search.
+    gradient_norm: largest tangential gradient at a site over the strongest sum of couplings at a site, at
+    `configuration`. converged: gradient_norm reached the tolerance. proven: a proof of global minimality ended the
+    search.
     """
 
     energy: float
@@ -161,7 +163,8 @@ class QuadraticProblem:
         budget = max(2000, min(10 * inner, 3_000_000_000 // form.sites))
         arrays = (form.indptr, form.neighbours, form.weights, form.blocks)
         for k in range(len(x)):
-            # plain alignment first: it leaves high random states and saddle points fastest; over-relaxation for the long waves
+            # plain alignment first: it leaves high random states and saddle points fastest; over-relaxation for the
+            # long waves
             compiled.descend(x[k], *arrays, self.shifted, self.field, 1.0, min(10, settings.sweeps), 1e-2 * strength)
             compiled.descend(x[k], *arrays, self.shifted, self.field, 1.7, settings.sweeps, 5e-3 * strength)
             energy, gradients[k], _ = compiled.newton(
@@ -216,7 +219,9 @@ class GeneralProblem:
 
 
 def _rounds(problem, settings: MinimizeSettings, extra: np.ndarray | None) -> Iterator[np.ndarray]:
-    """Batches of starts: those handed in, one placed along the bonds, then growing mixtures of eigenvector and random starts."""
+    """Batches of starts: those handed in, one placed along the bonds, then growing mixtures of eigenvector and random
+    starts.
+    """
     form = problem.form
     generator = np.random.default_rng(settings.seed)
     left = min(settings.starts, max(2, settings.max_site_starts // form.sites))
@@ -227,7 +232,8 @@ def _rounds(problem, settings: MinimizeSettings, extra: np.ndarray | None) -> It
         yield normalized(extra)
     yield starts.placed_start(form, generator)[None]
     left -= 1
-    # half eigenvector starts while they are few, then mostly random ones: these reach minima that the matrix alone does not know
+    # half eigenvector starts while they are few, then mostly random ones: these reach minima that the matrix alone does
+    # not know
     size, of_modes = 6, 3
     while left > 0:
         size = min(size, left)

@@ -2,12 +2,12 @@
 
 With f = c + 1/2 x^T M x - h.x and any numbers L_i, every configuration satisfies
 
-    f(n) >= c + 1/2 [ sum_i L_i + (number of sites) * lambda ],      lambda <= smallest eigenvalue of M - L,
+f(n) >= c + 1/2 [ sum_i L_i + (number of sites) * lambda ],      lambda <= smallest eigenvalue of M - L,
 
-since |n_i| = 1. A field is homogenized: one more site holds a vector t of length one, and -h.n becomes -(h.n) t; then the matrix is
-[[M, -h], [-h^T, 0]], and there is one more multiplier. The bound holds for any multipliers; those of the relaxation (relaxation.py) are the
-best, those of a stationary point prove that point wherever the matrix is positive semidefinite (Lyons and Kaplan 1960, Phys. Rev. 120,
-1580, for the idea with site-dependent multipliers).
+since |n_i| = 1. A field is homogenized: one more site holds a vector t of length one, and -h.n becomes -(h.n) t; then
+the matrix is [[M, -h], [-h^T, 0]], and there is one more multiplier. The bound holds for any multipliers; those of the
+relaxation (relaxation.py) are the best, those of a stationary point prove that point wherever the matrix is positive
+semidefinite (Lyons and Kaplan 1960, Phys. Rev. 120, 1580, for the idea with site-dependent multipliers).
 """
 
 import math
@@ -27,9 +27,11 @@ FACTORIZED = 60_000  # matrix dimension up to which a sparse factorization is tr
 
 @dataclass(frozen=True)
 class DualForm:
-    """The homogenized quadratic form: `matrix` over sites * rows rows, site i owning rows i * rows ... (i + 1) * rows - 1.
+    """The homogenized quadratic form: `matrix` over sites * rows rows, site i owning rows i * rows ... (i + 1) * rows -
+    1.
 
-    rows: 1 (isotropic, no field) or 3. homogenized: the last site is the vector t, in its first row; its other rows are empty.
+    rows: 1 (isotropic, no field) or 3. homogenized: the last site is the vector t, in its first row; its other rows are
+    empty.
     """
 
     matrix: sp.csr_array
@@ -67,7 +69,9 @@ def multipliers_at(form: DualForm, n: np.ndarray) -> np.ndarray:
 
 
 def dual_bound(form: DualForm, multipliers: np.ndarray) -> float | None:
-    """The rigorous lower bound of f from the multipliers, rounding included; None where the matrix is too large to factorize."""
+    """The rigorous lower bound of f from the multipliers, rounding included; None where the matrix is too large to
+    factorize.
+    """
     shifted = sp.csr_array(form.matrix - sp.diags_array(np.repeat(multipliers, form.rows)))[: form.used, : form.used]
     lowest = eigenvalue_bound(shifted)
     if lowest is None:
@@ -81,9 +85,10 @@ def dual_bound(form: DualForm, multipliers: np.ndarray) -> float | None:
 def eigenvalue_bound(matrix: sp.csr_array) -> float | None:
     """A number that is certainly not above the smallest eigenvalue of a symmetric matrix; None where it is too large.
 
-    Gershgorin's circles where they show that it is not negative beyond rounding; all eigenvalues of a small matrix, with the backward error
-    of the solver; else the smallest shift for which the pivots of a sparse triangular factorization without exchanges are all positive,
-    with the rounding error of that factorization (Higham 2002, Accuracy and Stability of Numerical Algorithms, theorem 10.3).
+    Gershgorin's circles where they show that it is not negative beyond rounding; all eigenvalues of a small matrix,
+    with the backward error of the solver; else the smallest shift for which the pivots of a sparse triangular
+    factorization without exchanges are all positive, with the rounding error of that factorization (Higham 2002,
+    Accuracy and Stability of Numerical Algorithms, theorem 10.3).
     """
     size = matrix.shape[0]
     norm = _norm(matrix)
@@ -128,7 +133,9 @@ def _by_factorization(matrix: sp.csr_array, norm: float, lowest: float) -> float
 
 
 def _positive_definite(matrix: sp.csr_array, shift: float) -> float | None:
-    """None unless matrix + shift factorizes with positive pivots; then a bound of the norm of the factorization error."""
+    """None unless matrix + shift factorizes with positive pivots; then a bound of the norm of the
+    factorization error.
+    """
     size = matrix.shape[0]
     if matrix.nnz > 0.15 * size**2:
         try:

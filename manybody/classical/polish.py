@@ -1,8 +1,9 @@
 """Descent and polishing of many configurations at once for energy functions of any degree.
 
-Riemannian limited-memory quasi-Newton descent (Liu and Nocedal 1989, Math. Program. 45, 503; vectors are carried between tangent spaces
-by projection), then truncated Newton steps by conjugate gradients (Steihaug 1983, SIAM J. Numer. Anal. 20, 626). All arrays are
-(R, N, 3) for R configurations; every configuration has its own step lengths and drops out when it is done.
+Riemannian limited-memory quasi-Newton descent (Liu and Nocedal 1989, Math. Program. 45, 503; vectors are carried
+between tangent spaces by projection), then truncated Newton steps by conjugate gradients (Steihaug 1983, SIAM J. Numer.
+Anal. 20, 626). All arrays are (R, N, 3) for R configurations; every configuration has its own step lengths and drops
+out when it is done.
 """
 
 from collections.abc import Callable
@@ -38,7 +39,8 @@ def quasi_newton(
 ) -> Polished:
     """Descent until the largest |gradient_i| is at most `goal`, or `steps` iterations.
 
-    value_and_gradient: (R, N, 3) -> (R,), (R, N, 3). scale: an upper bound of the usual gradient per site; sets the first step.
+    value_and_gradient: (R, N, 3) -> (R,), (R, N, 3). scale: an upper bound of the usual gradient per site; sets the
+    first step.
     """
     n = n.copy()
     values, gradients = value_and_gradient(n)
@@ -116,10 +118,12 @@ def truncated_newton(
     outer: int = 60,
     inner: int = 400,
 ) -> Polished:
-    """Newton steps until the largest |gradient_i| is at most `tolerance`, a step no longer helps, or `outer` steps are done.
+    """Newton steps until the largest |gradient_i| is at most `tolerance`, a step no longer helps, or `outer` steps are
+    done.
 
-    hessian_product: (R, N, 3), (R, N, 3) -> (R, N, 3), the Riemannian Hessian. Directions of negative curvature are followed downhill.
-    At minima of fourth order a Newton step covers only a third of the way: there a threefold step is tried first.
+    hessian_product: (R, N, 3), (R, N, 3) -> (R, N, 3), the Riemannian Hessian. Directions of negative curvature are
+    followed downhill. At minima of fourth order a Newton step covers only a third of the way: there a threefold step is
+    tried first.
     """
     n = n.copy()
     values, gradients = value_and_gradient(n)
@@ -161,7 +165,9 @@ def truncated_newton(
 
 
 def _newton_direction(hessian_product, x, g, scale, accuracy, inner):
-    """Conjugate gradients for H d = -g to |residual|^2 <= accuracy |g|^2; returns d and where negative curvature was met."""
+    """Conjugate gradients for H d = -g to |residual|^2 <= accuracy |g|^2; returns d and where negative curvature was
+    met.
+    """
     d = np.zeros_like(g)
     r, p = -g, -g
     rr = _dot(r, r)

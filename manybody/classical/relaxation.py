@@ -1,10 +1,11 @@
 """The semidefinite relaxation of a quadratic function on a product of spheres, in low-rank form.
 
-x x^T is replaced by a positive semidefinite matrix Y Y^T whose diagonal block at each site has trace one: Y has r columns and one row per
-site (isotropic couplings; then row i is a unit vector of r components) or three. The minimum over Y is the dual bound with the best
-multipliers, L_i = <Y_i, (M Y)_i> (Burer and Monteiro 2003, Math. Program. 95, 329; no spurious minima once r(r+1)/2 exceeds the number of
-sites: Boumal, Voroninski, Bandeira 2016, arXiv:1606.04970). The bound is computed from the multipliers alone (multipliers.py), so it holds
-however well the search for Y has converged.
+x x^T is replaced by a positive semidefinite matrix Y Y^T whose diagonal block at each site has trace one: Y has r
+columns and one row per site (isotropic couplings; then row i is a unit vector of r components) or three. The minimum
+over Y is the dual bound with the best multipliers, L_i = <Y_i, (M Y)_i> (Burer and Monteiro 2003, Math. Program. 95,
+329; no spurious minima once r(r+1)/2 exceeds the number of sites: Boumal, Voroninski, Bandeira 2016, arXiv:1606.04970).
+The bound is computed from the multipliers alone (multipliers.py), so it holds however well the search for Y has
+converged.
 """
 
 import math
@@ -97,7 +98,9 @@ def relax(
 
 
 def rounded(form: DualForm, solution: Relaxation, generator: np.random.Generator, count: int) -> np.ndarray:
-    """(count, N, 3) configurations: the principal part of Y first, then random projections of it (Goemans and Williamson 1995)."""
+    """(count, N, 3) configurations: the principal part of Y first, then random projections of it (Goemans and
+    Williamson 1995).
+    """
     y = solution.factor
     starts = []
     for k in range(count):

@@ -6,9 +6,11 @@ from numba import njit
 
 @njit(cache=True, fastmath={"contract", "reassoc"})
 def sweep(y, rows, indptr, indices, data, omega):
-    """One pass over the sites, in place: the rows of a site (`rows` of them, 1 or 3) move towards - M y and keep unit Frobenius norm.
+    """One pass over the sites, in place: the rows of a site (`rows` of them, 1 or 3) move towards - M y and keep unit
+    Frobenius norm.
 
-    y: (sites * rows, r); M: CSR, its on-site blocks negative semidefinite; 0 < omega < 2. Returns the largest change of a site.
+    y: (sites * rows, r); M: CSR, its on-site blocks negative semidefinite; 0 < omega < 2. Returns the largest change of
+    a site.
     """
     r = y.shape[1]
     g = np.empty((rows, r))

@@ -12,8 +12,9 @@ from manybody.model.energy import EnergyFunction
 
 @dataclass(frozen=True)
 class GroundState:
-    """result: the lowest minimum found. certificate: proof or lower bound, None where none was asked for. message: what the user must
-    know about them, empty where all is well."""
+    """result: the lowest minimum found. certificate: proof or lower bound, None where none was asked for. message: what
+    the user must know about them, empty where all is well.
+    """
 
     result: ClassicalResult
     certificate: Certificate | None
@@ -31,9 +32,9 @@ def find_ground_state(
 ) -> GroundState:
     """Search the global minimum of f and prove it, or give the best lower bound.
 
-    A few starts and their own multipliers come first; where these prove nothing the relaxation is solved once, its roundings are the next
-    starts, and its bound ends the search as soon as a configuration reaches it. extra_starts (r, N, 3) are tried first. report is
-    called with {"starts": used so far, "energy": lowest so far} between rounds.
+    A few starts and their own multipliers come first; where these prove nothing the relaxation is solved once, its
+    roundings are the next starts, and its bound ends the search as soon as a configuration reaches it. extra_starts (r,
+    N, 3) are tried first. report is called with {"starts": used so far, "energy": lowest so far} between rounds.
     """
     settings = MinimizeSettings(starts=starts, seed=seed)
     if not prove:

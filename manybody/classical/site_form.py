@@ -1,10 +1,10 @@
 """A quadratic energy function as a sparse matrix of site blocks, the form the compiled sweeps work on.
 
-    f(x) = constant + 1/2 sum_ij x_i^T M_ij x_j - sum_i h_i.x_i
+f(x) = constant + 1/2 sum_ij x_i^T M_ij x_j - sum_i h_i.x_i
 
-When every M_ij (i != j) is a multiple of the identity and every diagonal block too, the form is `isotropic`: it keeps one number per
-pair, and the same matrix acts on vectors with any number of components. The diagonal multiple then is a constant on the sphere and
-moves into `constant`.
+When every M_ij (i != j) is a multiple of the identity and every diagonal block too, the form is `isotropic`: it keeps
+one number per pair, and the same matrix acts on vectors with any number of components. The diagonal multiple then is a
+constant on the sphere and moves into `constant`.
 """
 
 from dataclasses import dataclass
@@ -15,7 +15,9 @@ import scipy.sparse as sp
 
 @dataclass(frozen=True)
 class SiteForm:
-    """Row i holds neighbours[indptr[i]:indptr[i+1]] with `weights` (isotropic) or `blocks`; `diagonal` (N, 3, 3) or (0, 3, 3)."""
+    """Row i holds neighbours[indptr[i]:indptr[i+1]] with `weights` (isotropic) or `blocks`; `diagonal` (N, 3, 3) or (0,
+    3, 3).
+    """
 
     indptr: np.ndarray  # (N+1,) int64
     neighbours: np.ndarray  # (nnz,) uint32: unsigned indices spare the compiled loops a sign test
@@ -35,7 +37,9 @@ class SiteForm:
         return self.indptr, self.neighbours, self.weights, self.blocks, self.diagonal, self.field
 
     def strength(self) -> float:
-        """Largest over the sites of the sum of the coupling norms and the field at that site: bounds every local field."""
+        """Largest over the sites of the sum of the coupling norms and the field at that site: bounds
+        every local field.
+        """
         if self.isotropic:
             size = np.abs(self.weights)
         else:

@@ -1,10 +1,11 @@
 """A rigorous lower bound of the minimum over two or three unit vectors, by branch and bound.
 
-The product of spheres, reduced by the common rotations that leave f unchanged, is cut into cells of at most four dimensions. Along any
-product of great circles a part of f with rank k_i at site i is a bounded function of exponential type, so its second derivative is at
-most sup|part| (sum_i k_i v_i)^2 for speeds v_i (Bernstein's inequality); this bounds f on a cell by value and gradient at its centre. About a
-known minimum with positive curvature the bound of the third derivative of the same kind gives a ball in which nothing is lower. Cells that
-are neither above the known minimum nor inside such a ball are halved.
+The product of spheres, reduced by the common rotations that leave f unchanged, is cut into cells of at most four
+dimensions. Along any product of great circles a part of f with rank k_i at site i is a bounded function of exponential
+type, so its second derivative is at most sup|part| (sum_i k_i v_i)^2 for speeds v_i (Bernstein's inequality); this
+bounds f on a cell by value and gradient at its centre. About a known minimum with positive curvature the bound of the
+third derivative of the same kind gives a ball in which nothing is lower. Cells that are neither above the known minimum
+nor inside such a ball are halved.
 """
 
 from dataclasses import dataclass
@@ -20,7 +21,9 @@ HALF_FACE = np.pi / 4
 
 @dataclass(frozen=True)
 class _Slice:
-    """How the vectors are parametrized: `kinds` per site, "fixed", "arc" (half a great circle from `axis`) or "sphere"."""
+    """How the vectors are parametrized: `kinds` per site, "fixed", "arc" (half a great circle from
+    `axis`) or "sphere".
+    """
 
     kinds: tuple[str, ...]
     axis: np.ndarray
@@ -47,8 +50,8 @@ def can_be_bounded(f: EnergyFunction) -> bool:
 def lower_bound(f: EnergyFunction, minima: np.ndarray, evaluations: int = 400_000) -> float:
     """A number not above min f. minima (M, N, 3): the known lowest minima, polished.
 
-    It equals their value, up to about 1e-10 of the couplings, where these are isolated apart from common rotations; otherwise it is what
-    the allowed number of evaluations gave.
+    It equals their value, up to about 1e-10 of the couplings, where these are isolated apart from common rotations;
+    otherwise it is what the allowed number of evaluations gave.
     """
     cut = _slice(f)
     bounds = _Bounds(f, cut)

@@ -1,7 +1,7 @@
 """The product of N unit spheres: points, tangent frames, projection and retraction.
 
-Every array carries the batch in front: a configuration has shape (..., N, 3), a tangent vector at it the same shape with each
-(3,) row orthogonal to the row of the configuration.
+Every array carries the batch in front: a configuration has shape (..., N, 3), a tangent vector at it the same shape
+with each (3,) row orthogonal to the row of the configuration.
 """
 
 import numpy as np
@@ -38,8 +38,9 @@ def retract(n: np.ndarray, v: np.ndarray) -> np.ndarray:
 def tangent_frames(n: np.ndarray, normal: np.ndarray | None = None) -> tuple[np.ndarray, np.ndarray]:
     """Orthonormal tangent vectors (e1, e2) with e2 = n x e1, so that (e1, e2, n) is right-handed; all (..., N, 3).
 
-    Without `normal`, e1 is built from the coordinate axis farthest from n. With a unit vector `normal` (3,), orthogonal to all rows
-    of n (a coplanar configuration), e1 is that vector: then e2 lies in the plane, and out-of-plane motion is the first coordinate.
+    Without `normal`, e1 is built from the coordinate axis farthest from n. With a unit vector `normal` (3,), orthogonal
+    to all rows of n (a coplanar configuration), e1 is that vector: then e2 lies in the plane, and out-of-plane motion
+    is the first coordinate.
     """
     n = np.asarray(n, dtype=float)
     if normal is None:

@@ -1,4 +1,6 @@
-"""Starting configurations: random, from the lowest eigenvectors of the coupling matrix, and placed along the strongest bonds."""
+"""Starting configurations: random, from the lowest eigenvectors of the coupling matrix, and placed along the strongest
+bonds.
+"""
 
 import numpy as np
 import scipy.sparse as sp
@@ -13,11 +15,13 @@ DENSE_EIGENVECTORS = 800  # matrix dimension up to which the lowest eigenspace i
 
 
 def lowest_mode_starts(form: SiteForm, generator: np.random.Generator, count: int) -> np.ndarray:
-    """(count, N, 3) configurations made of the lowest eigenvectors of the coupling matrix (Luttinger and Tisza 1946, Phys. Rev. 70, 954).
+    """(count, N, 3) configurations made of the lowest eigenvectors of the coupling matrix (Luttinger and Tisza 1946,
+    Phys. Rev. 70, 954).
 
     Small matrices: a random vector and its normalization are projected in turn on the lowest eigenspace, which finds a
-    configuration of unit vectors in that space where there is one. Large ones: the projection is a Chebyshev polynomial of the
-    matrix that keeps the lowest part of the spectrum. A little noise is added, so that no start sits on a saddle point.
+    configuration of unit vectors in that space where there is one. Large ones: the projection is a Chebyshev polynomial
+    of the matrix that keeps the lowest part of the spectrum. A little noise is added, so that no start sits on a saddle
+    point.
     """
     if form.sites * (1 if form.isotropic else 3) <= DENSE_EIGENVECTORS:
         configurations = _projected(form, generator, count)
@@ -40,7 +44,9 @@ def _projected(form: SiteForm, generator: np.random.Generator, count: int) -> np
 
 
 def _filtered(form: SiteForm, generator: np.random.Generator, count: int) -> np.ndarray:
-    """Filter and normalize in turn: the nonlinear step sorts out a single domain where the filter alone leaves several."""
+    """Filter and normalize in turn: the nonlinear step sorts out a single domain where the filter
+    alone leaves several.
+    """
     from manybody.classical.vector_sweeps import filter_step, gradient, product
 
     arrays = form.arrays[:5]
@@ -88,7 +94,8 @@ def _filtered(form: SiteForm, generator: np.random.Generator, count: int) -> np.
 
 
 def placed_start(form: SiteForm, generator: np.random.Generator) -> np.ndarray:
-    """(N, 3): sites placed one after the other along a spanning tree of the strongest bonds, each against the field of those before.
+    """(N, 3): sites placed one after the other along a spanning tree of the strongest bonds, each against the field of
+    those before.
 
     The minimum wherever no bond is frustrated.
     """
@@ -119,7 +126,8 @@ def placed_start(form: SiteForm, generator: np.random.Generator) -> np.ndarray:
 def unfrustrated_bound(form: SiteForm) -> float:
     """A lower bound of f - constant that is reached where no term is frustrated.
 
-    Isotropic couplings: -1/2 sum |J_ij| - sum |h_i|; blocks: their largest singular values, and the lowest on-site eigenvalues.
+    Isotropic couplings: -1/2 sum |J_ij| - sum |h_i|; blocks: their largest singular values, and the lowest on-site
+    eigenvalues.
     """
     if form.isotropic:
         pairs = np.abs(form.weights).sum()

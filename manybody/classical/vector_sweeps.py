@@ -1,9 +1,11 @@
-"""Compiled inner loops for quadratic functions of unit vectors: alignment sweeps and truncated Newton steps on one configuration.
+"""Compiled inner loops for quadratic functions of unit vectors: alignment sweeps and truncated Newton steps on one
+configuration.
 
-x is (N, 3). The form is passed as the arrays of `SiteForm`: pair numbers `weights` or 3 x 3 `blocks`, whichever is not empty; `field`
-and `diagonal` may be empty. Sweeps treat the on-site block through `shift` (N,): at least its largest eigenvalue per site. Subtracting
-shift_i |n_i|^2 / 2 changes f by a constant and makes it concave in each n_i, so that aligning n_i against its local field never raises f
-(majorization by the tangent plane); without on-site blocks `shift` is empty and alignment is the exact minimum over n_i.
+x is (N, 3). The form is passed as the arrays of `SiteForm`: pair numbers `weights` or 3 x 3 `blocks`, whichever is not
+empty; `field` and `diagonal` may be empty. Sweeps treat the on-site block through `shift` (N,): at least its largest
+eigenvalue per site. Subtracting shift_i |n_i|^2 / 2 changes f by a constant and makes it concave in each n_i, so that
+aligning n_i against its local field never raises f (majorization by the tangent plane); without on-site blocks `shift`
+is empty and alignment is the exact minimum over n_i.
 
 Only this file and relaxed_sweeps.py need numba; they are imported where they are used.
 """
@@ -59,7 +61,9 @@ def product(x, indptr, neighbours, weights, blocks, diagonal, out):
 
 @njit(cache=True, fastmath=FAST)
 def _sweep_numbers(x, indptr, neighbours, weights, field, omega):
-    """One sweep of `descend` for an isotropic form; `field` (N, 3) has a row for every site. Returns the square of the field met."""
+    """One sweep of `descend` for an isotropic form; `field` (N, 3) has a row for every site. Returns the square of the
+    field met.
+    """
     worst = 0.0
     for i in range(len(x)):
         g0 = -field[i, 0]
@@ -96,7 +100,9 @@ def _sweep_numbers(x, indptr, neighbours, weights, field, omega):
 
 @njit(cache=True, fastmath=FAST)
 def _sweep_blocks(x, indptr, neighbours, blocks, diagonal, field, omega):
-    """One sweep for 3 x 3 blocks, with the on-site blocks already shifted to be negative semidefinite: both (N, ...) in full."""
+    """One sweep for 3 x 3 blocks, with the on-site blocks already shifted to be negative semidefinite: both (N, ...) in
+    full.
+    """
     worst = 0.0
     for i in range(len(x)):
         x0 = x[i, 0]
@@ -136,9 +142,9 @@ def _sweep_blocks(x, indptr, neighbours, blocks, diagonal, field, omega):
 def descend(x, indptr, neighbours, weights, blocks, shifted, field, omega, sweeps, goal):
     """Sweeps x_i <- unit vector along x_i + omega (aligned_i - x_i), in place, 0 < omega < 2.
 
-    `aligned` is the unit vector against the local field (over-relaxation beyond omega = 1; no step raises the energy). Here `field` has
-    N rows, and `shifted` too unless the form is isotropic. Stops when the largest tangential field met in a sweep is at most `goal`.
-    Returns (that field, sweeps spent).
+    `aligned` is the unit vector against the local field (over-relaxation beyond omega = 1; no step raises the energy).
+    Here `field` has N rows, and `shifted` too unless the form is isotropic. Stops when the largest tangential field met
+    in a sweep is at most `goal`. Returns (that field, sweeps spent).
     """
     worst = 0.0
     for spent in range(sweeps):
@@ -153,7 +159,8 @@ def descend(x, indptr, neighbours, weights, blocks, shifted, field, omega, sweep
 
 @njit(cache=True, fastmath=FAST)
 def place(x, order, indptr, neighbours, weights, blocks, field):
-    """Sites in the given order, each against the field of those before it; x (N, 3) holds directions for sites that feel none.
+    """Sites in the given order, each against the field of those before it; x (N, 3) holds directions for sites that
+    feel none.
 
     Exact for couplings without frustration when `order` walks along the bonds.
     """
@@ -198,7 +205,9 @@ def filter_step(now, before, indptr, neighbours, weights, blocks, diagonal, cent
 
 @njit(cache=True, fastmath=FAST)
 def gradient(x, indptr, neighbours, weights, blocks, diagonal, field, g, multipliers):
-    """Tangential gradient into g, x_i.(M x - h)_i into multipliers; returns (f - constant, largest |g_i|). `field` has N rows."""
+    """Tangential gradient into g, x_i.(M x - h)_i into multipliers; returns (f - constant, largest |g_i|). `field` has
+    N rows.
+    """
     product(x, indptr, neighbours, weights, blocks, diagonal, g)
     energy = 0.0
     worst = 0.0
@@ -322,10 +331,12 @@ def _newton_direction(
 
 @njit(cache=True, fastmath=FAST)
 def newton(x, indptr, neighbours, weights, blocks, diagonal, field, tolerance, scale, outer, inner, budget):
-    """Truncated Newton steps, in place, until the largest |gradient_i| is at most `tolerance`, or `budget` Hessian products are spent.
+    """Truncated Newton steps, in place, until the largest |gradient_i| is at most `tolerance`, or `budget` Hessian
+    products are spent.
 
-    Returns (f - constant, largest |gradient_i|, Hessian products). Directions of negative curvature are followed downhill. At
-    minima of fourth order a Newton step covers a third of the way, so a threefold step is tried when convergence is slow.
+    Returns (f - constant, largest |gradient_i|, Hessian products). Directions of negative curvature are followed
+    downhill. At minima of fourth order a Newton step covers a third of the way, so a threefold step is tried when
+    convergence is slow.
     """
     g = np.empty_like(x)
     new_g = np.empty_like(x)

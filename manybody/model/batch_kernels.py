@@ -1,8 +1,8 @@
 """Compiled value and gradient of a quadratic function for a batch of configurations.
 
-Configurations are taken eight at a time: their components are interleaved in a scratch array that stays in the first cache, so that the
-sparse product runs over the eight with vector instructions, and everything else happens in the same pass. Only this file of
-manybody/model needs numba; it is imported for large batches only.
+Configurations are taken eight at a time: their components are interleaved in a scratch array that stays in the first
+cache, so that the sparse product runs over the eight with vector instructions, and everything else happens in the same
+pass. Only this file of manybody/model needs numba; it is imported for large batches only.
 """
 
 import numpy as np
@@ -13,7 +13,9 @@ LANES = 8
 
 @njit(cache=True, fastmath={"contract", "reassoc"})
 def value_and_gradient(n, indptr, indices, data, linear, values, gradients):
-    """values[r] = linear.x + x.M x / 2 and the tangential gradient for every configuration n[r] (N, 3), x = n[r] flat."""
+    """values[r] = linear.x + x.M x / 2 and the tangential gradient for every configuration n[r] (N,
+    3), x = n[r] flat.
+    """
     batch, sites = n.shape[0], n.shape[1]
     flat = n.reshape(batch, 3 * sites)
     slopes = gradients.reshape(batch, 3 * sites)

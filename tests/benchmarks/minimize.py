@@ -1,10 +1,13 @@
 """Speed of the classical branch as ratios measured in one run; by hand: python tests/benchmarks/minimize.py [--large]
 
 Prints, beside what is asked for:
-  value and gradient of 64 configurations on 16 x 16 triangular sites over the scipy CSR product of the coupling matrix   (at most 3)
-  scipy's L-BFGS-B on angles with analytic gradient over `minimize`, 64 starts on the same lattice                         (at least 10)
-  bytes of an energy function per bond at three sizes                                                                     (constant)
-  minimum with certificate of 64 x 64 square sites with random bonds                                                      (under 60 s)
+
+- value and gradient of 64 configurations on 16 x 16 triangular sites over the scipy CSR product of the coupling matrix
+  with the same batch (at most 3)
+- scipy's L-BFGS-B on angles with analytic gradient over `minimize`, 64 starts on the same lattice (at least 10)
+- bytes of an energy function per bond at three sizes (constant)
+- minimum with certificate of 64 x 64 square sites with random bonds (under 60 s)
+
 With --large also 10^6 sites of a square and a triangular lattice: time and peak memory.
 """
 
@@ -82,8 +85,10 @@ def search():
     reference = time.perf_counter() - began
     hits = sum(m.count for m in ours.minima if m.energy < ours.energy + 1e-6)
     print(
-        f"L-BFGS-B on angles / minimize: {reference / seconds:.1f}  ({reference:.2f} s / {seconds:.2f} s; at least 10)\n"
-        f"    lowest {energies.min():.9f} ({(energies < energies.min() + 1e-6).sum()} of 64, gradient {slope:.0e}) against "
+        f"L-BFGS-B on angles / minimize: {reference / seconds:.1f}  "
+        f"({reference:.2f} s / {seconds:.2f} s; at least 10)\n"
+        f"    lowest {energies.min():.9f} ({(energies < energies.min() + 1e-6).sum()} of 64, gradient {slope:.0e}) "
+        "against "
         f"{ours.energy:.9f} ({hits} of 64, gradient {ours.gradient_norm:.0e})"
     )
 
@@ -99,7 +104,8 @@ def memory():
         held, peak = tracemalloc.get_traced_memory()
         tracemalloc.stop()
         print(
-            f"memory at {len(pairs):6d} bonds: {held / len(pairs):.0f} bytes per bond held, {peak / len(pairs):.0f} at the peak"
+            f"memory at {len(pairs):6d} bonds: {held / len(pairs):.0f} bytes per bond held, "
+            f"{peak / len(pairs):.0f} at the peak"
         )
 
 
@@ -116,8 +122,8 @@ def certificate():
         found = find_ground_state(f, starts=7)
         seconds = time.perf_counter() - began
         print(
-            f"64 x 64 {kind} bonds: {seconds:.1f} s for minimum and certificate (under 60), method {found.certificate.method}, "
-            f"gap {found.certificate.gap / abs(found.result.energy):.1e} relative"
+            f"64 x 64 {kind} bonds: {seconds:.1f} s for minimum and certificate (under 60), "
+            f"method {found.certificate.method}, gap {found.certificate.gap / abs(found.result.energy):.1e} relative"
         )
 
 
@@ -131,8 +137,9 @@ def large():
         seconds = time.perf_counter() - began
         peak = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 2**20
         print(
-            f"{shape} 1000 x 1000: {seconds:.0f} s ({built:.0f} s to build), energy per site {found.energy / f.sites:.8f}, "
-            f"relative gradient {found.gradient_norm:.0e}, converged {found.converged}, proven {found.proven}, "
+            f"{shape} 1000 x 1000: {seconds:.0f} s ({built:.0f} s to build), "
+            f"energy per site {found.energy / f.sites:.8f}, relative gradient {found.gradient_norm:.0e}, "
+            f"converged {found.converged}, proven {found.proven}, "
             f"{found.starts_used} starts, peak {peak:.1f} GiB so far",
             flush=True,
         )

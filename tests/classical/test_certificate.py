@@ -36,7 +36,9 @@ def form_of(f):
 
 
 def convex_bound(f):
-    """The dual bound from a general convex solver: max sum L / 2 with [[M, -h], [-h^T, 0]] - L positive semidefinite."""
+    """The dual bound from a general convex solver: max sum L / 2 with [[M, -h], [-h^T, 0]] - L
+    positive semidefinite.
+    """
     matrix, h, constant = f.quadratic_form()
     size = matrix.shape[0]
     big = np.zeros((size + 1, size + 1))
@@ -141,7 +143,9 @@ def test_small_random_bonds_are_tight(seed):
 @pytest.mark.parametrize("shape", ["square", "triangular"])
 @pytest.mark.parametrize("seed", range(3))
 def test_random_antiferromagnets_are_certified(shape, seed):
-    """12 x 12 sites, couplings 0.5 to 1.5: not frustrated on the square, frustrated but tight on the triangular lattice."""
+    """12 x 12 sites, couplings 0.5 to 1.5: not frustrated on the square, frustrated but tight on the triangular
+    lattice.
+    """
     lattice = getattr(lattices, shape)([12, 12], periodic=True)
     generator = np.random.default_rng(seed)
     pairs = lattice.pairs("nearest")

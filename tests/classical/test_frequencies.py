@@ -26,10 +26,11 @@ def gapped(seed):
 
 
 def boson_frequencies(f, n):
-    """Quadratic bosons diagonalized with numpy alone, by the Cholesky form of the para-unitary problem (Colpa 1978, Physica A 93, 327).
+    """Quadratic bosons diagonalized with numpy alone, by the Cholesky form of the para-unitary problem (Colpa 1978,
+    Physica A 93, 327).
 
-    n + sqrt(2) Re[(e1 - i e2) b] to first order makes f = const + 1/2 (b*, b) G (b, b*)^T; the frequencies are the eigenvalues of K g K^T
-    with G = K^T K and g = diag(1, -1), divided by two pairs.
+    n + sqrt(2) Re[(e1 - i e2) b] to first order makes f = const + 1/2 (b*, b) G (b, b*)^T; the frequencies are the
+    eigenvalues of K g K^T with G = K^T K and g = diag(1, -1), divided by two pairs.
     """
     sites = len(n)
     e1, e2 = tangent_frames(n)

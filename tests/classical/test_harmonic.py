@@ -1,4 +1,6 @@
-"""First quantum correction against the rows C of data/reference_values.csv, exact diagonalization, and selection among ties."""
+"""First quantum correction against the rows C of data/reference_values.csv, exact diagonalization, and selection among
+ties.
+"""
 
 import math
 
@@ -153,10 +155,11 @@ def two_shells(ring, second):
 
 
 def spiral(second, sizes=tuple(range(24, 180, 6))):
-    """In the frame that turns with the spiral, couplings depend on the distance alone, so that every ring fits its angle.
+    """In the frame that turns with the spiral, couplings depend on the distance alone, so that every ring fits its
+    angle.
 
-    The frequencies have kinks at wave numbers 0 and +-Q; the sum over a ring then differs from the integral by terms B_p(x) / N^p with
-    Bernoulli polynomials of the distance x of Q from the grid (Euler-Maclaurin).
+    The frequencies have kinks at wave numbers 0 and +-Q; the sum over a ring then differs from the integral by terms
+    B_p(x) / N^p with Bernoulli polynomials of the distance x of Q from the grid (Euler-Maclaurin).
     """
     angle = math.acos(-1 / (4 * second))
 
@@ -233,9 +236,11 @@ def cubic_neel(n):
 
 
 def zone_limit(extent=6, grids=(20, 28, 36, 44, 52, 60)):
-    """Simple cubic antiferromagnet: tori affordable in real space are too small, so the zone is summed from the Hessian of one.
+    """Simple cubic antiferromagnet: tori affordable in real space are too small, so the zone is summed from the Hessian
+    of one.
 
-    Turning one sublattice about x makes state and couplings uniform; the Hessian between site 0 and the others gives A(k), 2 x 2.
+    Turning one sublattice about x makes state and couplings uniform; the Hessian between site 0 and the others gives
+    A(k), 2 x 2.
     """
     lattice = lattices.cubic([extent] * 3, periodic=True)
     n = cubic_neel(extent)
@@ -339,7 +344,9 @@ def ground_energy(f, spin, rule):
 
 @pytest.mark.parametrize("rule", RULES)
 def test_exact_diagonalization_approaches_the_correction(rule):
-    """Dimer with anisotropic exchange, field, single-ion and biquadratic terms: S (E - f_min) -> e_1, next order removed."""
+    """Dimer with anisotropic exchange, field, single-ion and biquadratic terms: S (E - f_min) -> e_1, next order
+    removed.
+    """
     pair = [[0, 1]]
     f = exchange(2, pair, [1.0, 0.7, 1.3]) + antisymmetric(2, pair, [0.1, 0.2, 0.3]) + biquadratic(2, pair, -0.2)
     f += field(2, [0, 1], [[0.2, 0.1, 0.9], [0.2, 0.1, 0.4]]) + anisotropy(2, [0], [1, 1, 0], 0.4)
@@ -371,7 +378,9 @@ def test_rules_differ_by_the_curvature(seed):
 
 
 def test_collinear_stripes_are_selected():
-    """Square J1-J2 beyond J2 = 1/2: two free sublattices at any angle; fluctuations choose collinear (Henley 1989; row C038)."""
+    """Square J1-J2 beyond J2 = 1/2: two free sublattices at any angle; fluctuations choose collinear (Henley 1989; row
+    C038).
+    """
     f = two_shells(lattices.square([4, 4], periodic=True), 1.0)
     stripe = polished(f, square_stripe(4)) * 16
     i, j = np.divmod(np.arange(16), 4)

@@ -164,7 +164,9 @@ def test_reference_minima(key):
 
 @pytest.mark.parametrize("key", INCOMMENSURATE)
 def test_incommensurate_spiral(key):
-    """The infinite chain lies between the cluster bound, exact for these triangles, and every ring; long rings come close."""
+    """The infinite chain lies between the cluster bound, exact for these triangles, and every ring; long rings come
+    close.
+    """
     second, row = INCOMMENSURATE[key], reference(key)
     bound = cluster_sum(two_shells(lattices.ring(12), second))
     assert bound.rigorous
@@ -207,7 +209,9 @@ def test_common_rotations_are_one_minimum():
 
 
 def test_quadratic_and_general_descent_agree():
-    """A biquadratic term of strength zero would be dropped; a tiny one sends the same problem through the other path."""
+    """A biquadratic term of strength zero would be dropped; a tiny one sends the same problem through
+    the other path.
+    """
     f = two_shells(torus("triangular", 4, 4), 0.2) + field(16, range(16), [0.3, 0, 0.1])
     other = minimize(f + biquadratic(16, torus("triangular", 4, 4).pairs("nearest"), 1e-13))
     assert other.energy == pytest.approx(minimize(f).energy, rel=1e-12)

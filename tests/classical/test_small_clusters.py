@@ -7,7 +7,7 @@ from hypothesis import strategies as st
 
 from manybody.classical import small_clusters
 from manybody.classical.clusters import cluster_sum
-from manybody.classical.minimize import MinimizeSettings, minimize
+from manybody.classical.minimize import minimize
 from manybody.classical.small_clusters import can_be_bounded, lower_bound
 from manybody.classical.sphere_product import random_points
 from manybody.model.couplings import anisotropy, biquadratic, exchange, field, product
@@ -101,7 +101,9 @@ def test_cluster_sum_shares_every_term_exactly():
 
 
 def test_cluster_sum_takes_the_better_covering():
-    """Complete graph of four sites: six bonds give -6; four triangles that share every bond in halves give -3; the minimum is -2."""
+    """Complete graph of four sites: six bonds give -6; four triangles that share every bond in halves give -3; the
+    minimum is -2.
+    """
     pairs = [[0, 1], [0, 2], [0, 3], [1, 2], [1, 3], [2, 3]]
     found = cluster_sum(exchange(4, pairs, 1.0))
     assert found.kind == "triangles"
