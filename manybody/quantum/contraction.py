@@ -148,14 +148,14 @@ def multiply(tensor, environment, buffer, first):
 
 
 @compiled
-def move(tensor, buffer, stacked, result, moves, weights, to_result):
-    """The block copies that end in U (to_result false) or O (true)."""
+def move(tensor, buffer, stacked, result, moves, weights, wanted):
+    """The block copies that end in U (wanted = 0) or O (wanted = TO_O)."""
     for index in range(moves.shape[0]):
         flags, source, source_stride, goal, goal_stride, rows, columns = moves[index]
-        if ((flags & TO_O) != 0) != to_result:
+        if (flags & TO_O) != wanted:
             continue
         origin = buffer if flags & FROM_T else tensor
-        target = result if to_result else stacked
+        target = result if wanted != 0 else stacked
         weight = weights[index]
         if flags & ASSIGN:
             for x in range(rows):
@@ -177,7 +177,7 @@ def apply(tensor, result, left, right, steps, buffers):
     first, moves, weights, second, back, _, _ = steps
     middle, stacked, grouped = buffers
     multiply(tensor, left, middle, first)
-    move(tensor, middle, stacked, grouped, moves, weights, False)
+    move(tensor, middle, stacked, grouped, moves, weights, 0)
     if second.shape[0] < back.shape[0]:
         grouped[:] = 0
     for g in range(second.shape[0]):
@@ -187,7 +187,7 @@ def apply(tensor, result, left, right, steps, buffers):
             right[r : r + k * n].reshape(k, n),
             grouped[o : o + m * n].reshape(m, n),
         )
-    move(tensor, middle, stacked, grouped, moves, weights, True)
+    move(tensor, middle, stacked, grouped, moves, weights, TO_O)
     for index in range(back.shape[0]):
         source, source_stride, goal, goal_stride, rows, columns = back[index]
         for x in range(rows):
@@ -204,7 +204,7 @@ def half(tensor, left, steps):
     middle = np.empty(sizes[1], tensor.dtype)
     stacked = np.zeros(sizes[2], tensor.dtype)
     multiply(tensor, left, middle, first)
-    move(tensor, middle, stacked, stacked, moves, weights, False)
+    move(tensor, middle, stacked, stacked, moves, weights, 0)
     return stacked
 
 

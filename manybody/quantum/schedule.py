@@ -69,7 +69,7 @@ class Run:
         """Good enough, or nothing left to try."""
         if not self.stages:
             return False
-        done = len(self.stages) > 2 and self.error <= self.limits.goal
+        done = len(self.stages) > 2 and self.error <= max(self.limits.goal, 2 * self.limits.floor)
         return done or self.bounded or self.allowed <= LEAST_ALLOWED or self.stages[-1].variance <= self.limits.floor**2
 
     def repeat(self) -> None:

@@ -86,12 +86,16 @@ def isotropic_directions(start: np.ndarray, spins: np.ndarray, upright: bool = F
 class SectorSearch:
     """Walks over total charges until the lowest energy is bracketed by its neighbours.
 
-    begin(total) makes a Run; every run visited is advanced by `stages` stages. Energies count as equal within the errors that are not
-    common to neighbours; `undecided` lists runs that a finer solution has to tell apart.
+    begin(total) makes a Run; every run visited is advanced by `stages` stages. `undecided` lists runs that a finer solution has to tell
+    apart. multiplets: the total spin is conserved, so that energies never fall with growing |S^z|, and equal ones belong to one multiplet;
+    the largest |S^z| of it is taken, since its state is the least entangled.
     """
 
-    def __init__(self, begin: Callable[[int], Run], lowest: int, highest: int, stages: int = 2):
+    def __init__(
+        self, begin: Callable[[int], Run], lowest: int, highest: int, multiplets: bool = False, stages: int = 2
+    ):
         self.begin, self.lowest, self.highest, self.stages = begin, lowest, highest, stages
+        self.multiplets = multiplets
         self.runs: dict[int, Run] = {}
 
     def run(self, total: int) -> Run:
@@ -110,17 +114,22 @@ class SectorSearch:
         """The total charge of lowest energy, found downhill from `first`, looking `reach` steps to either side."""
         best = int(np.clip(first, self.lowest, self.highest))
         while True:
-            around = [best + step for step in (1, -1, *(s * k for k in range(2, reach + 1) for s in (1, -1)))]
-            around = [total for total in around if self.lowest <= total <= self.highest]
-            better = next((t for t in around if self.energy(t) < self.energy(best) - self._noise(best)), None)
+            steps = (1, -1) if self.multiplets else (1, -1, *(s * k for k in range(2, reach + 1) for s in (1, -1)))
+            around = [best + step for step in steps if self.lowest <= best + step <= self.highest]
+            better = next((total for total in around if self._better(total, best)), None)
             if better is None:
                 return best
             best = better
 
-    def undecided(self, best: int) -> list[int]:
-        """Other charges whose true energy may still be the lowest."""
-        floor = self.energy(best)
-        return [t for t, run in self.runs.items() if t != best and run.energy - run.error <= floor]
+    def _better(self, total: int, best: int) -> bool:
+        rise = self.energy(total) - self.energy(best)
+        if not self.multiplets:
+            return rise < -self.run(best).limits.floor
+        noise = max(self.run(total).error, self.run(best).error)
+        return rise <= noise if total > best else rise < -noise
 
-    def _noise(self, total: int) -> float:
-        return self.runs[total].limits.floor
+    def undecided(self, best: int) -> list[int]:
+        """Other charges whose true energy may still be the lowest; with multiplets only the next smaller one can tell."""
+        floor = self.energy(best)
+        rivals = [t for t, run in self.runs.items() if t != best and run.energy - run.error <= floor]
+        return [t for t in rivals if t == best - 1] if self.multiplets else rivals

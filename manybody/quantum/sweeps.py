@@ -129,28 +129,23 @@ class _Solver:
         if self.isotropic and first <= half + 0.5:
             # Every multiplet has a state of S^z = 0 or 1/2: no other sector can be lower.
             return self._begin(int(np.ceil(half)))
-        search = SectorSearch(self._begin, int(np.ceil(half)) if self.flips else 0, whole)
+        search = SectorSearch(self._begin, int(np.ceil(half)) if self.flips else 0, whole, self.isotropic)
         best = search.search(first)
         rivals = search.undecided(best)
         while rivals:
-            runs = [search.runs[t] for t in (best, *rivals)]
-            if all(run.finished for run in runs):
+            contenders = {total: search.runs[total] for total in (best, *rivals)}
+            open_runs = [run for run in contenders.values() if not run.finished and run.error > self.limits.goal]
+            if not open_runs:
                 break
-            for run in runs:
-                if not run.finished:
-                    run.advance()
-            best = min((best, *rivals), key=lambda t: (search.runs[t].energy, -abs(t - half)))
-            rivals = [t for t in search.undecided(best) if search.runs[t] in runs]
-            if self._same(search, best, rivals):
-                break
+            for run in open_runs:
+                run.advance()
+            lowest = min(run.energy for run in contenders.values())
+            rivals = [t for t, run in contenders.items() if run.energy - run.error <= lowest]
+            equal = [t for t in rivals if contenders[t].energy <= lowest + self.limits.goal]
+            # Within the wanted accuracy the least entangled state is as good as any.
+            best = max(equal, key=lambda t: (abs(t - half), -t))
+            rivals = [t for t in rivals if t != best]
         return search.runs[best]
-
-    def _same(self, search: SectorSearch, best: int, rivals: list[int]) -> bool:
-        """All rivals lie within the wanted accuracy: whichever is taken, the energy is right."""
-        return all(
-            run.error <= self.limits.goal and abs(run.energy - search.energy(best)) <= self.limits.goal
-            for run in (search.runs[t] for t in (best, *rivals))
-        )
 
     @functools.cached_property
     def flips(self) -> bool:
@@ -203,7 +198,7 @@ class _Solver:
     def _result(self, run: Run, other: Run) -> GroundState:
         problem, last = self.problem, run.stages[-1]
         error = run.error
-        goal = self.limits.goal
+        goal = max(self.limits.goal, 2 * self.limits.floor)
         hit_bond = run.bounded and error > goal and self.limits.bond <= self.limits.memory_bond
         hit_memory = run.bounded and error > goal and not hit_bond
         advice = ""
