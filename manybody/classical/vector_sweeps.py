@@ -7,6 +7,7 @@ eigenvalue per site. Subtracting shift_i |n_i|^2 / 2 changes f by a constant and
 aligning n_i against its local field never raises f (majorization by the tangent plane); without on-site blocks `shift`
 is empty and alignment is the exact minimum over n_i.
 
+`newton` itself is not compiled: its loop is short, and compiling it would take longer than anything else here.
 Only this file and relaxed_sweeps.py need numba; they are imported where they are used.
 """
 
@@ -196,11 +197,9 @@ def place(x, order, indptr, neighbours, weights, blocks, field):
 def filter_step(now, before, indptr, neighbours, weights, blocks, diagonal, centre, factor, out):
     """before <- factor (M - centre) now - before, one step of the Chebyshev recursion."""
     product(now, indptr, neighbours, weights, blocks, diagonal, out)
-    a = now.reshape(now.size)
-    b = before.reshape(before.size)
-    m = out.reshape(out.size)
-    for k in range(len(a)):
-        b[k] = factor * (m[k] - centre * a[k]) - b[k]
+    for i in range(len(now)):
+        for a in range(3):
+            before[i, a] = factor * (out[i, a] - centre * now[i, a]) - before[i, a]
 
 
 @njit(cache=True, fastmath=FAST)
@@ -255,35 +254,7 @@ def hessian_product(x, v, indptr, neighbours, weights, blocks, diagonal, multipl
 
 
 @njit(cache=True, fastmath=FAST)
-def _dot(a, b):
-    a = a.reshape(a.size)
-    b = b.reshape(b.size)
-    total = 0.0
-    for i in range(len(a)):
-        total += a[i] * b[i]
-    return total
-
-
-@njit(cache=True, fastmath=FAST)
-def _add(a, factor, b):
-    """a += factor b"""
-    a = a.reshape(a.size)
-    b = b.reshape(b.size)
-    for i in range(len(a)):
-        a[i] += factor * b[i]
-
-
-@njit(cache=True, fastmath=FAST)
-def _combine(a, factor, b):
-    """a <- factor a + b"""
-    a = a.reshape(a.size)
-    b = b.reshape(b.size)
-    for i in range(len(a)):
-        a[i] = factor * a[i] + b[i]
-
-
-@njit(cache=True, fastmath=FAST)
-def _retract(x, step, d, out):
+def retract(x, step, d, out):
     for i in range(len(x)):
         x0 = x[i, 0] + step * d[i, 0]
         x1 = x[i, 1] + step * d[i, 1]
@@ -295,41 +266,53 @@ def _retract(x, step, d, out):
 
 
 @njit(cache=True, fastmath=FAST)
-def _newton_direction(
-    x, g, multipliers, indptr, neighbours, weights, blocks, diagonal, scale, goal, inner, d, r, p, hp
+def newton_direction(
+    x, g, multipliers, indptr, neighbours, weights, blocks, diagonal, scale, goal, inner, d, r, p, p_rows, hp, hp_rows
 ):
-    """Conjugate gradients for H d = -g until |residual|^2 <= goal |g|^2; returns (products, negative curvature met)."""
-    d[:] = 0.0
-    r[:] = 0.0
-    _add(r, -1.0, g)
-    p[:] = r
-    rr = _dot(r, r)
+    """Conjugate gradients for H d = -g until |residual|^2 <= goal |g|^2; returns (products, negative curvature met).
+
+    g, d, r, p, hp are flat (3 N,); p_rows and hp_rows are the same memory as p and hp, (N, 3).
+    """
+    rr = 0.0
+    for k in range(len(g)):
+        d[k] = 0.0
+        r[k] = -g[k]
+        p[k] = -g[k]
+        rr += g[k] * g[k]
     goal *= rr
-    for k in range(inner):
-        curvature = hessian_product(x, p, indptr, neighbours, weights, blocks, diagonal, multipliers, hp)
-        if curvature <= 1e-13 * scale * _dot(p, p):
-            if k > 0 and curvature >= -1e-9 * scale * _dot(p, p):
-                return k + 1, False
+    for spent in range(inner):
+        curvature = hessian_product(x, p_rows, indptr, neighbours, weights, blocks, diagonal, multipliers, hp_rows)
+        pp = 0.0
+        for k in range(len(p)):
+            pp += p[k] * p[k]
+        if curvature <= 1e-13 * scale * pp:
+            if spent > 0 and curvature >= -1e-9 * scale * pp:
+                return spent + 1, False
             # about half a radian along the direction of negative curvature, downhill
             length = 0.0
-            for i in range(len(p)):
-                length = max(length, p[i, 0] ** 2 + p[i, 1] ** 2 + p[i, 2] ** 2)
-            length = 0.5 / np.sqrt(length)
-            _add(d, -length if _dot(p, g) > 0 else length, p)
-            return k + 1, True
+            slope = 0.0
+            for k in range(len(p)):
+                length = max(length, abs(p[k]))
+                slope += p[k] * g[k]
+            length = -0.5 / length if slope > 0 else 0.5 / length
+            for k in range(len(p)):
+                d[k] += length * p[k]
+            return spent + 1, True
         alpha = rr / curvature
-        _add(d, alpha, p)
-        _add(r, -alpha, hp)
-        new = _dot(r, r)
+        new = 0.0
+        for k in range(len(p)):
+            d[k] += alpha * p[k]
+            r[k] -= alpha * hp[k]
+            new += r[k] * r[k]
         if new <= goal:
-            return k + 1, False
+            return spent + 1, False
         beta = new / rr
         rr = new
-        _combine(p, beta, r)
+        for k in range(len(p)):
+            p[k] = r[k] + beta * p[k]
     return inner, False
 
 
-@njit(cache=True, fastmath=FAST)
 def newton(x, indptr, neighbours, weights, blocks, diagonal, field, tolerance, scale, outer, inner, budget):
     """Truncated Newton steps, in place, until the largest |gradient_i| is at most `tolerance`, or `budget` Hessian
     products are spent.
@@ -342,7 +325,7 @@ def newton(x, indptr, neighbours, weights, blocks, diagonal, field, tolerance, s
     new_g = np.empty_like(x)
     trial = np.empty_like(x)
     d = np.empty_like(x)
-    r = np.empty_like(x)
+    r = np.empty(x.size)
     p = np.empty_like(x)
     hp = np.empty_like(x)
     multipliers = np.empty(len(x))
@@ -352,16 +335,16 @@ def newton(x, indptr, neighbours, weights, blocks, diagonal, field, tolerance, s
     for _ in range(outer):
         if worst <= tolerance or products >= budget:
             break
-        spent, negative = _newton_direction(
-            x, g, multipliers, indptr, neighbours, weights, blocks, diagonal, scale,
-            max(1e-8, min(0.01, worst / scale)), inner, d, r, p, hp,
+        spent, negative = newton_direction(
+            x, g.reshape(-1), multipliers, indptr, neighbours, weights, blocks, diagonal, scale,
+            max(1e-8, min(0.01, worst / scale)), inner, d.reshape(-1), r, p.reshape(-1), p, hp.reshape(-1), hp,
         )  # fmt: skip
         products += spent
         slack = 1e-13 * (abs(energy) + scale)
         step = 3.0 if slow and not negative else 1.0
         accepted = False
         for _ in range(30):
-            _retract(x, step, d, trial)
+            retract(x, step, d, trial)
             new_energy, new_worst = gradient(
                 trial, indptr, neighbours, weights, blocks, diagonal, field, new_g, multipliers
             )
