@@ -7,6 +7,7 @@ from manybody.results.figure_style import INK, WIDTH, depth_colours, new_figure
 from manybody.results.figure_view import NotDrawn
 
 MOST_SITES = 900
+LONGEST_LINE = 24
 
 
 def configuration(view):
@@ -24,8 +25,11 @@ def configuration(view):
     size = int(sizes[-1])
     n = vectors.sel(sites=size).transpose("site", "component").values[:size]
     r = positions.sel(sites=size).transpose("site", "component").values[:size]
+    all_sites = size
     line = np.linalg.matrix_rank(r - r.mean(axis=0), tol=1e-9) <= 1
     turned = int(view.root.attrs.get("symmetry_axes", 0)) == 3
+    if line and size > LONGEST_LINE:
+        size, n, r = LONGEST_LINE, n[:LONGEST_LINE], r[:LONGEST_LINE]
     if turned:
         n = _lying(n)
     r, axes_of_view = _along(r, n) if line and not turned else _facing(r)
@@ -37,8 +41,8 @@ def configuration(view):
     figure, axes = new_figure(width=1.4 * WIDTH, height=float(np.clip(3.9 * ratio + 0.9, 1.6, 5.5)))
     axis = axes[0, 0]
     if "pairs" in data:
-        pairs = _at(data["pairs"], view).sel(sites=size).values
-        _bonds(axis, r, pairs[(pairs >= 0).all(axis=1)])
+        pairs = _at(data["pairs"], view).sel(sites=all_sites).values
+        _bonds(axis, r, pairs[((pairs >= 0) & (pairs < size)).all(axis=1)])
     upright = np.hypot(n[:, 0], n[:, 1]) < 0.45
     colour = _arrows(axis, r, n, upright, reach)
     axis.set_aspect("equal")
@@ -54,9 +58,9 @@ def configuration(view):
         axis.set_ylabel(f"y{seen} (lattice constants)")
     if np.abs(n[:, 2]).max() > 0.02:
         figure.colorbar(colour, cax=axis.inset_axes([1.03, 0, 0.035, 1]), label="component out\nof the plane")
-    title, proof = _proof(view, size)
+    title, proof = _proof(view, all_sites)
     axis.set_title(f"classical minimum, {title}", loc="left")
-    notes = []
+    notes = [f"The first {size} sites are shown."] if size < all_sites else []
     if upright.any():
         notes.append("Circle: mostly out of the plane towards the reader, cross: away from the reader.")
     if turned:
@@ -66,7 +70,7 @@ def configuration(view):
     elif np.ptp(r[:, 2]) > 1e-9:
         notes.append("The sites are seen from the direction in which they spread least.")
     caption = (
-        f"Classical minimum, {size} sites. {' '.join([proof, *notes])} Other minima of the same energy may exist."
+        f"Classical minimum, {all_sites} sites. {' '.join([proof, *notes])} Other minima of the same energy may exist."
         f"{view.note()}"
     )
     return figure, caption

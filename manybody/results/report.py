@@ -252,7 +252,7 @@ def _in_unit(view):
 def _provenance(attrs):
     rows = []
     for key, value in attrs.items():
-        if key in ("title", "workflow", "term_keys"):
+        if key in ("title", "workflow", "term_keys", "symmetry_axes") or value in ("", None):
             continue
         text = str(value)
         if text.startswith("{"):
