@@ -24,6 +24,7 @@ from manybody.workflow.tasks import Batch, EngineError, Slot
 BASE = 0.35e9  # bytes a worker holds before it has any part: interpreter and libraries
 SHARE = 0.9  # of a worker's limit; dask ends a worker at 0.95
 POLL = 5.0  # seconds between looks at the list of workers; changes are also announced
+MESSAGES = 20
 PATIENCE = 60.0  # seconds to wait for a scheduler
 
 THREADS = ("OMP_NUM_THREADS", "MKL_NUM_THREADS", "OPENBLAS_NUM_THREADS", "NUMBA_NUM_THREADS")
@@ -87,7 +88,11 @@ class DaskExecutor:
     # what the engine calls
 
     def start(self, parts: int, wait: Callable[[str], None]) -> list[Slot]:
+        import dask
+
         self._quieten()
+        # dask remembers this many messages with all they carried, a thousand unless told otherwise
+        self._stack.enter_context(dask.config.set({"distributed.admin.low-level-log-length": MESSAGES}))
         client = self._client = self.connect(parts)
         self.dashboard = getattr(client, "dashboard_link", "") or ""
         client.subscribe_topic(self.topic, self._on_message)
@@ -279,7 +284,8 @@ class LocalProcesses(DaskExecutor):
                 threads_per_worker=1,
                 processes=True,
                 memory_limit=int(MEMORY_LIMIT / workers),
-                dashboard_address="127.0.0.1:0" if self._dashboard else None,
+                dashboard_address="127.0.0.1:0",  # any free port: the usual one may be taken, and dask would warn
+                scheduler_kwargs={"dashboard": self._dashboard},
                 silence_logs=logging.CRITICAL,
             )
         self._stack.callback(cluster.close, timeout=10)
