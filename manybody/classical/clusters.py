@@ -44,7 +44,7 @@ def cluster_sum(f: EnergyFunction, seed: int = 1, most: int | None = None) -> Cl
     known: dict[str, tuple[float, bool]] = {}
     sums = []
     for kind, pieces in coverings:
-        evaluations = int(np.clip(4_000_000 / len(pieces), 5_000, 400_000))
+        evaluations = int(np.clip(1_000_000 / len(pieces), 5_000, 150_000))
         for name, (piece, _) in pieces.items():
             if name not in known:
                 known[name] = _cluster_minimum(piece, seed, evaluations)

@@ -11,6 +11,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from manybody.classical.distinct import Comparison
 from manybody.classical.frequencies import Fluctuations, HarmonicTrouble, UnstablePoint, fluctuations
 from manybody.classical.minimize import (
     ClassicalResult,
@@ -30,13 +31,14 @@ __all__ = ["HarmonicCorrection", "HarmonicTrouble", "SelectionSettings", "Unstab
 class SelectionSettings:
     """evaluations: how many configurations may be compared, reduced for large systems: evaluations x sites^3 <= work.
 
-    tie: energies within this distance, relative to |f - f_mean|, tie. seed: of the random steps along the manifold.
-    step: the smallest one.
+    ties: starts of a search for further minima that tie (0: none). tie: energies within this distance, relative to |f -
+    f_mean|, tie. seed: of the random steps along the manifold. step: the smallest one.
     """
 
     evaluations: int = 300
     work: float = 2e9
     tie: float = 1e-9
+    ties: int = 12
     seed: int = 1
     step: float = 1e-7
 
@@ -81,8 +83,8 @@ def harmonic_correction(
     search = _Search(f, configuration, rule, settings)
     search.visit(configuration, must=True)
     if search.spent < search.allowed:
-        for candidate in candidates[1:]:
-            search.visit(candidate)
+        for candidate in [*candidates[1:], *search.others()]:
+            search.visit_new(candidate)
         if len(search.flexible(search.best)):
             for candidate in search.shaped():
                 search.visit(candidate)
@@ -121,6 +123,8 @@ class _Search:
         scaled, _ = rescaled(f)
         newton = MinimizeSettings(starts=1, sweeps=0)
         self.problem = problem_of(scaled, newton)
+        self.comparison = Comparison(f)
+        self.known: list[np.ndarray] = []
         self.best: _Point | None = None
         self.highest = -np.inf
 
@@ -139,10 +143,24 @@ class _Search:
                 raise
             return None
         point = _Point(configuration, found, found.e1(self.f, configuration, self.rule))
+        self.known.append(configuration)
         self.highest = max(self.highest, point.e1)
         if self.best is None or self._better(point):
             self.best = point
         return point
+
+    def visit_new(self, configuration: np.ndarray) -> None:
+        """`visit`, unless the configuration is a known one turned as a whole."""
+        if self.known and self.comparison.distance(configuration, np.array(self.known)).min() < 1e-4:
+            return
+        self.visit(configuration)
+
+    def others(self) -> list[np.ndarray]:
+        """Minima of a few more starts: a search that a proof cut short may not have met all that tie."""
+        if not self.settings.ties or self.f.sites > 400:
+            return []
+        settings = MinimizeSettings(starts=self.settings.ties, seed=self.settings.seed + 1)
+        return [m.configuration for m in minimize(self.f, settings).minima]
 
     def _better(self, point: _Point) -> bool:
         """Lower e1; at a difference that rounding can make beside a kink, where e1 is good to half the digits, more

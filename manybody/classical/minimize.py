@@ -223,7 +223,7 @@ def _rounds(problem, settings: MinimizeSettings, extra: np.ndarray | None) -> It
     starts.
     """
     form = problem.form
-    generator = np.random.default_rng(settings.seed)
+    generator, lowest = np.random.default_rng(settings.seed), starts.LowestModes(form)
     left = min(settings.starts, max(2, settings.max_site_starts // form.sites))
     if extra is not None and len(extra):
         extra = np.asarray(extra, dtype=float)
@@ -238,7 +238,7 @@ def _rounds(problem, settings: MinimizeSettings, extra: np.ndarray | None) -> It
     while left > 0:
         size = min(size, left)
         modes = min(of_modes, size)
-        parts = [starts.lowest_mode_starts(form, generator, modes)] if modes else []
+        parts = [lowest.starts(generator, modes)] if modes else []
         if size > modes:
             parts.append(random_points(generator, form.sites, (size - modes,)))
         yield np.concatenate(parts)

@@ -2,6 +2,8 @@
 bonds.
 """
 
+import functools
+
 import numpy as np
 import scipy.sparse as sp
 from scipy.sparse.csgraph import breadth_first_order, connected_components, minimum_spanning_tree
@@ -14,68 +16,78 @@ FILTER_ROUNDS = 8
 DENSE_EIGENVECTORS = 800  # matrix dimension up to which the lowest eigenspace is computed in full
 
 
-def lowest_mode_starts(form: SiteForm, generator: np.random.Generator, count: int) -> np.ndarray:
-    """(count, N, 3) configurations made of the lowest eigenvectors of the coupling matrix (Luttinger and Tisza 1946,
-    Phys. Rev. 70, 954).
+class LowestModes:
+    """Configurations made of the lowest eigenvectors of the coupling matrix (Luttinger, Tisza 1946, Phys. Rev. 70,
+    954).
 
     Small matrices: a random vector and its normalization are projected in turn on the lowest eigenspace, which finds a
     configuration of unit vectors in that space where there is one. Large ones: the projection is a Chebyshev polynomial
-    of the matrix that keeps the lowest part of the spectrum. A little noise is added, so that no start sits on a saddle
-    point.
+    of the matrix that keeps the lowest part of the spectrum; the normalization in between sorts out a single domain
+    where the filter alone leaves several. A little noise is added, so that no start sits on a saddle point.
     """
-    if form.sites * (1 if form.isotropic else 3) <= DENSE_EIGENVECTORS:
-        configurations = _projected(form, generator, count)
-    else:
-        configurations = _filtered(form, generator, count)
-    return normalized(configurations + 0.03 * generator.standard_normal(configurations.shape))
 
+    def __init__(self, form: SiteForm):
+        self.form = form
+        self.small = form.sites * (1 if form.isotropic else 3) <= DENSE_EIGENVECTORS
 
-def _projected(form: SiteForm, generator: np.random.Generator, count: int) -> np.ndarray:
-    energies, vectors = np.linalg.eigh(form.matrix().toarray())
-    width = energies[-1] - energies[0]
-    x = normalized(generator.standard_normal((count, form.sites, 3)))
-    # every third start takes a wider band: with fields or on-site terms the lowest eigenspace alone says little
-    for k, share in enumerate(np.resize([1e-6, 1e-6, 0.1], count)):
-        basis = vectors[:, energies <= energies[0] + share * width + 1e-300]
+    def starts(self, generator: np.random.Generator, count: int) -> np.ndarray:
+        """(count, N, 3)"""
+        draw = self._projected if self.small else self._filtered
+        # every third start takes a wider band: with fields or on-site terms the lowest eigenspace alone says little
+        x = np.array([draw(generator, wide=k % 3 == 2) for k in range(count)]).reshape(count, self.form.sites, 3)
+        return normalized(x + 0.03 * generator.standard_normal(x.shape))
+
+    @functools.cached_property
+    def _eigenvectors(self) -> tuple[np.ndarray, np.ndarray]:
+        return np.linalg.eigh(self.form.matrix().toarray())
+
+    def _projected(self, generator: np.random.Generator, wide: bool) -> np.ndarray:
+        form, (energies, vectors) = self.form, self._eigenvectors
+        share = 0.1 if wide else 1e-6
+        basis = vectors[:, energies <= energies[0] + share * (energies[-1] - energies[0]) + 1e-300]
+        shape = (form.sites, 3) if form.isotropic else (3 * form.sites, 1)
+        x = normalized(generator.standard_normal((form.sites, 3)))
         for _ in range(40):
-            shape = (form.sites, 3) if form.isotropic else (3 * form.sites, 1)
-            x[k] = normalized((basis @ (basis.T @ x[k].reshape(shape))).reshape(form.sites, 3), fallback=x[k])
-    return x
+            x = normalized((basis @ (basis.T @ x.reshape(shape))).reshape(form.sites, 3), fallback=x)
+        return x
 
+    @functools.cached_property
+    def _band(self) -> tuple[int, float, float]:
+        """Degree of the filter, lower and upper end of the part of the spectrum that it suppresses."""
+        from manybody.classical.vector_sweeps import product
 
-def _filtered(form: SiteForm, generator: np.random.Generator, count: int) -> np.ndarray:
-    """Filter and normalize in turn: the nonlinear step sorts out a single domain where the filter
-    alone leaves several.
-    """
-    from manybody.classical.vector_sweeps import filter_step, gradient, product
+        form = self.form
+        out = np.empty((form.sites, 3))
 
-    arrays = form.arrays[:5]
-    out, multipliers = np.empty((form.sites, 3)), np.empty(form.sites)
-    none = np.zeros((form.sites, 3))
+        def apply(v):
+            product(np.ascontiguousarray(v).reshape(form.sites, 3), *form.arrays[:5], out)
+            return out.reshape(np.shape(v)).copy()
 
-    def apply(v):
-        product(np.ascontiguousarray(v).reshape(form.sites, 3), *arrays, out)
-        return out.reshape(np.shape(v)).copy()
+        size = 3 * form.sites
+        operator = LinearOperator((size, size), matvec=apply, dtype=float)
+        first = np.random.default_rng(0).standard_normal(size)
+        degree = int(np.clip(2 * np.sqrt(form.sites), 100, 1500))
+        # everything within (6 / degree)^2 of the lowest eigenvalue, relative to the width, is amplified by up to
+        # exp(12); the filter is only as sharp as the lowest eigenvalue is known
+        sharpness = (6.0 / degree) ** 2
+        low, high = (
+            float(eigsh(operator, k=1, which=end, tol=tol, v0=first, ncv=40, return_eigenvectors=False)[0])
+            for end, tol in {"SA": 0.2 * sharpness, "LA": 1e-2}.items()
+        )
+        width = max(high - low, 1e-300)
+        return degree, low + width * sharpness, high + 0.02 * width
 
-    operator = LinearOperator((3 * form.sites,) * 2, matvec=apply, dtype=float)
-    first = generator.standard_normal(3 * form.sites)
-    degree = int(np.clip(2 * np.sqrt(form.sites), 100, 1500))
-    # the filter is only as sharp as the lowest eigenvalue is known
-    accuracy = {"SA": 0.2 * (6.0 / degree) ** 2, "LA": 1e-2}
-    low, high = (
-        float(eigsh(operator, k=1, which=end, tol=tol, v0=first, ncv=40, return_eigenvectors=False)[0])
-        for end, tol in accuracy.items()
-    )
-    width = max(high - low, 1e-300)
-    # everything within (6 / degree)^2 of the lowest eigenvalue, relative to the width, is amplified by up to exp(12)
-    cut, top = low + width * (6.0 / degree) ** 2, high + 0.02 * width
-    centre, half = (top + cut) / 2, (top - cut) / 2
-    found = []
-    for _ in range(count):
+    def _filtered(self, generator: np.random.Generator, wide: bool) -> np.ndarray:
+        from manybody.classical.vector_sweeps import filter_step, gradient, product
+
+        form, arrays = self.form, self.form.arrays[:5]
+        degree, cut, top = self._band
+        centre, half = (top + cut) / 2, (top - cut) / 2
+        out, multipliers, none = np.empty((form.sites, 3)), np.empty(form.sites), np.zeros((form.sites, 3))
         x = generator.standard_normal((form.sites, 3))
         energy = np.inf
-        for _ in range(FILTER_ROUNDS):
-            before, now = x.copy(), x
+        for _ in range(2 if wide else FILTER_ROUNDS):
+            before = x.copy()
             product(before, *arrays, out)
             now = (out - centre * before) / half
             for k in range(degree - 1):
@@ -89,8 +101,7 @@ def _filtered(form: SiteForm, generator: np.random.Generator, count: int) -> np.
             last, energy = energy, gradient(x, *arrays, none, out, multipliers)[0]
             if energy > last - 1e-4 * abs(energy):
                 break
-        found.append(x)
-    return np.array(found)
+        return x
 
 
 def placed_start(form: SiteForm, generator: np.random.Generator) -> np.ndarray:

@@ -45,7 +45,7 @@ def boson_frequencies(f, n):
     return np.sort(np.linalg.eigvalsh(lower.conj().T @ metric @ lower))[sites:]
 
 
-@settings(max_examples=20, deadline=None)
+@settings(max_examples=12, deadline=None)
 @given(seeds)
 def test_frequencies_equal_a_boson_diagonalization(seed):
     f = gapped(seed)
@@ -56,7 +56,7 @@ def test_frequencies_equal_a_boson_diagonalization(seed):
     assert found.trace == pytest.approx(np.trace(f.hessian(n)), rel=1e-12)
 
 
-@settings(max_examples=10, deadline=None)
+@settings(max_examples=6, deadline=None)
 @given(seeds)
 def test_frequencies_do_not_depend_on_the_frame(seed):
     f = gapped(seed)

@@ -14,7 +14,7 @@ from manybody.classical.frequencies import UnstablePoint
 from manybody.classical.harmonic import SelectionSettings, harmonic_correction
 from manybody.classical.minimize import MinimizeSettings, minimize
 from manybody.model import lattice as lattices
-from manybody.model.couplings import anisotropy, antisymmetric, biquadratic, exchange, field
+from manybody.model.couplings import anisotropy, antisymmetric, biquadratic, exchange, field, product
 from manybody.model.energy import EnergyFunction
 
 RULES = ("wick", "weyl", "toeplitz", "substitution")
@@ -407,17 +407,19 @@ def test_flat_manifold_has_no_spread():
 
 
 def test_separate_minima_are_compared():
-    """Two wells of equal depth, the narrower one with the larger zero-point energy."""
-    f = field(1, [0], [0, 0, 1.0]) + anisotropy(1, [0], [1, 0, 0], -0.6)
-    n = minimize(f).configuration
-    pair = EnergyFunction(1) + anisotropy(1, [0], [0, 0, 1], -1.0) + anisotropy(1, [0], [1, 0, 0], -1.0)
-    along_z, along_x = np.array([[0, 0, 1.0]]), np.array([[1.0, 0, 0]])
-    assert pair.value(along_z) == pytest.approx(pair.value(along_x))
-    both = harmonic_correction(pair, np.array([along_z, along_x]), "weyl")
-    alone = [harmonic_correction(pair, start, "weyl").e1 for start in (along_z, along_x)]
-    assert both.e1 <= min(alone) + 1e-9
-    mirrored = harmonic_correction(f, np.array([n, n * [-1, 1, 1]]), "weyl")
-    assert mirrored.spread == pytest.approx(0.0, abs=1e-9)
+    """f = -x^2 - z^2 + 2 x^2 z^2 + 0.8 y^2 z^2 is -1 at x and at z; curvatures (4, 2) at x and (4, 3.6) at z."""
+    powers = {(2, 0, 0): -1.0, (0, 0, 2): -1.0, (2, 0, 2): 2.0, (0, 2, 2): 0.8}
+    f = product(1, [[0]], [powers])
+    at_z, at_x = np.array([[0, 0, 1.0]]), np.array([[1.0, 0, 0]])
+    alone = SelectionSettings(ties=0)
+    assert harmonic_correction(f, at_z, "weyl", alone).e1 == pytest.approx(math.sqrt(4 * 3.6) / 2, rel=1e-9)
+    for handed in (np.array([at_z, at_x]), at_z):  # handed in, or found by the few starts of its own
+        found = harmonic_correction(f, handed, "weyl")
+        assert found.e1 == pytest.approx(math.sqrt(8) / 2, rel=1e-9)
+        assert found.spread == pytest.approx((math.sqrt(14.4) - math.sqrt(8)) / 2, rel=1e-9)
+        assert abs(found.configuration[0, 0]) == pytest.approx(1.0)
+    # the rule decides: tr A enters with either sign, here both ways the same minimum has less of it
+    assert harmonic_correction(f, at_z, "toeplitz").e1 == pytest.approx(math.sqrt(8) / 2 + 6 / 4, rel=1e-9)
 
 
 def test_higher_minima_are_no_ties():
