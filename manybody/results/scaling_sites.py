@@ -22,12 +22,12 @@ ACCIDENT = 0.2
 """A form's error is at least this fraction of its distance from the second closest form: small shifts may be luck."""
 SHARPNESS = 1.5
 """Weights are errors to this power, inverted; 2 would trust the apparent errors of wrong forms too much."""
-CALIBRATION = {True: 0.65, False: 0.45}
+CALIBRATION = {True: 0.65, False: 0.4}
 """The scatter above overstates the error of the average, more so with the many forms of an unknown geometry (False).
 With these factors 95 of 100 exact limits lie within two standard errors."""
 _FRACTIONS = np.array([1.0, 0.3, 0.1, 0.03, 0.01, 1e-3, 1e-4])
-HOPELESS = 50.0
-"""A form whose information criterion is worse than the best by more than this does not describe the data at all."""
+PLAUSIBLE = 25.0
+"""A form whose information criterion is this much behind counts e times less, twice as much e^4 times."""
 
 
 @dataclass(frozen=True)
@@ -172,14 +172,18 @@ def _one_family(name, sites, energy, error, others, forms, known):
     tried = [_try(form, sites, series["energy"], sigma) for form in forms if len(sites) > form.count]
     if not tried:
         return None
-    # never fewer than two: with one alone nothing would show that it is wrong
-    marks = [one.criterion for one in tried]
-    worst = max(min(marks) + HOPELESS, sorted(marks)[min(1, len(marks) - 1)])
-    tried = [one for one in tried if not np.isfinite(one.criterion) or one.criterion <= worst]
+    # forms with too few data for a criterion count fully; the others are measured from the second best, since with one
+    # form alone nothing would show that it is wrong
+    marks = np.array([one.criterion for one in tried])
+    known_marks = np.sort(marks[np.isfinite(marks)])
+    reference = known_marks[min(1, len(known_marks) - 1)] if len(known_marks) else 0.0
+    plausible = np.exp(
+        -((np.clip(np.where(np.isfinite(marks), marks, reference) - reference, 0, None) / PLAUSIBLE) ** 2)
+    )
     scale = CALIBRATION[known]
     tables = {key: _table(tried, values, sigma if key in ("energy", "gap") else 0.0) for key, values in series.items()}
     limit, own, noise = tables["energy"]
-    weights = np.maximum(np.hypot(own, noise), 1e-300) ** -SHARPNESS
+    weights = plausible * np.maximum(np.hypot(own, noise), 1e-300) ** -SHARPNESS
     weights /= weights.sum()
     values, spread = {}, {}
     for key, (limit, own, noise) in tables.items():

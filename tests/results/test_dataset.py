@@ -197,3 +197,17 @@ def test_many_points_are_quick(tmp_path):
     write_results(tmp_path / "results.nc", records, scaling=False)
     # 5,000 points: far below the budget of a resumed study, on a busy machine
     assert time.perf_counter() - start < 10
+
+
+def test_the_selected_minimum_may_depend_on_the_rule():
+    base = {"sites": 1, "spin": 0.5, "parameters": {}, "status": "converged", "quantum_energy": -1.0}
+    up, side = [[0.0, 0.0, 1.0]], [[1.0, 0.0, 0.0]]
+    records = [
+        base | {"rule": rule, "spin": spin, "selected_configuration": n, "classical_configuration": up}
+        for rule, n in (("wick", up), ("toeplitz", side))
+        for spin in (0.5, 1.0)
+    ]
+    group = records_to_tree(records)["configuration"]
+    assert group["classical_configuration"].dims == ("sites", "site", "component")
+    assert group["selected_configuration"].dims == ("sites", "rule", "site", "component")
+    assert group["selected_configuration"].sel(rule="toeplitz").values.ravel().tolist() == side[0]
