@@ -34,6 +34,14 @@ class Listener(Display):
         self.heard.append((key, info))
 
 
+class Interrupter(Display):
+    """Presses Ctrl-C once a part is some steps on."""
+
+    def report(self, key, info):
+        if info["step"] >= 2:
+            os.kill(os.getpid(), signal.SIGINT)
+
+
 def run(tasks, executor, folder=None, display=None, **options):
     with Journal(folder) as journal:
         counts = run_tasks(tasks, run_fake, journal, executor, display, **options)
@@ -119,14 +127,11 @@ def test_existing_cluster_survives_the_death_of_a_worker_and_states_travel(tmp_p
     assert results["quantum-59"]["value"] == 59 + 11
 
     # a long part, interrupted: its state comes back over the network and the next run goes on from it
-    long = [fake_task(1, "sweeps", steps=60, seconds=60.0)]
-    stop = threading.Timer(1.5, os.kill, (os.getpid(), signal.SIGINT))
-    stop.start()
+    long = [fake_task(1, "sweeps", steps=100, seconds=60.0)]
     with pytest.raises(Interrupted):
-        run(long, ExistingCluster(scheduler_file=file), out)
-    stop.join()
+        run(long, ExistingCluster(scheduler_file=file), out, Interrupter())
     _, results, _ = run(long, ExistingCluster(scheduler_file=file), out)
-    assert 2 <= results["sweeps-1"]["first"] < 60
+    assert 2 <= results["sweeps-1"]["first"] < 100
 
 
 def test_unreachable_schedulers_are_told(tmp_path, monkeypatch):
