@@ -227,7 +227,7 @@ def test_long_runs_write_what_they_have_now_and_then(monkeypatch, tmp_path):
             InProcess(1e9),
             meanwhile=lambda: seen.append((len(journal.entries()), journal.notes())),
         )
-    assert 2 <= len(seen) <= 5 and all(0 < count < 12 for count, _ in seen)
+    assert 0 < seen[0][0] < 12 and len(seen) <= 6
     assert '"quantum-' in seen[0][1]["running"]
 
 
