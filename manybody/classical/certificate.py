@@ -4,6 +4,7 @@ METHODS lists what a certificate can rest on. Every bound but the last kind is r
 included.
 """
 
+import functools
 import math
 from dataclasses import dataclass
 
@@ -12,7 +13,7 @@ import numpy as np
 from manybody.classical.clusters import cluster_sum
 from manybody.classical.distinct import coupled_sites
 from manybody.classical.minimize import MinimizeSettings, problem_of, rescaled
-from manybody.classical.multipliers import dual_bound, dual_form, multipliers_at
+from manybody.classical.multipliers import DualForm, dual_bound, dual_form, multipliers_at
 from manybody.classical.relaxation import relax, rounded
 from manybody.model.energy import EnergyFunction
 
@@ -84,10 +85,15 @@ class Prover:
             self.bound, self.method = self.scaled.mean, "constant"
         elif self.scaled.is_quadratic:
             problem = problem_of(self.scaled, MinimizeSettings())
-            self.form = dual_form(problem.form)
+            self.site_form = problem.form
             self.bound, self.method = problem.form.constant + problem.floor * (1 + 1e-14), "unfrustrated"
         else:
             self.bound, self.method = -math.inf, "clusters"
+
+    @functools.cached_property
+    def form(self) -> DualForm:
+        """Built when it is needed: unfrustrated functions of millions of sites never do."""
+        return dual_form(self.site_form)
 
     def __call__(self, configuration: np.ndarray) -> bool | np.ndarray:
         self.calls += 1
