@@ -30,7 +30,8 @@ def factor(root, normalization="energy"):
     import xarray as xr
 
     rules = root["rule"].values.tolist()
-    values = np.stack([factor_at(root, normalization, rule, root["spin"].values) for rule in rules], axis=-1)
+    columns = [factor_at(root, normalization, rule, root["spin"].values) for rule in rules]
+    values = np.stack(columns, axis=-1) if columns else np.ones((root.sizes["spin"], 0))
     return xr.DataArray(values, dims=("spin", "rule"), coords={"spin": root["spin"], "rule": root["rule"]})
 
 

@@ -160,7 +160,7 @@ def _trust(view):
         words = flag_words(part["trust_state"].transpose(*lead, "within"))
         values = {n: part[n].transpose(*lead, "within").values for n in names[:3]}
         for place in np.ndindex(*[part.sizes[d] for d in lead]):
-            row = {d: part[d].values[i].item() for d, i in zip(lead, place)}
+            row = {d: part[d].values.tolist()[i] for d, i in zip(lead, place)}
             if size:
                 row["sites"] = size
             if not np.isfinite(values["trust_spin"][place]).any() and size:
@@ -195,7 +195,7 @@ def _limits(view):
         one = data[[n for n in data.data_vars if data[n].dims == tuple(dims)]].isel(dict(zip(dims, place)))
         if not np.isfinite(one["limit_gap"]):
             continue
-        row = {d: data[d].values[i].item() for d, i in zip(dims, place)}
+        row = {d: data[d].values.tolist()[i] for d, i in zip(dims, place)}
         factor = float(view.factor.sel(spin=row["spin"], rule=row["rule"]))
         cells = [
             wording.measured(float(one[f"limit_{key}"]) * factor, float(one[f"limit_{key}_error"]) * factor)

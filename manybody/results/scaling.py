@@ -262,8 +262,10 @@ def rule_spread(tree):
     worth."""
     root = _root(tree)
     values = root["relative_gap"].where(_usable(root))
-    spread = values.max("rule") - values.min("rule")
-    spread = spread.where(values.notnull().sum("rule") > 1)
+    if root.sizes["rule"] < 2:
+        spread = values.sum("rule") * np.nan
+    else:
+        spread = (values.max("rule") - values.min("rule")).where(values.notnull().sum("rule") > 1)
     spread.attrs = {"long_name": "spread of the relative gap between quantization rules", "units": "1"}
     return spread.rename("rule_spread")
 

@@ -173,6 +173,40 @@ def test_answer_of_special_studies(records, first, second):
     assert first in one and second in two, (one, two)
 
 
+def unusual():
+    rings = ring_records((4, 6), (0.5, 1.0))
+    undefined = {"sites": 4, "spin": 0.5, "rule": "wick", "status": "undefined", "message": "rank 2 above 2S"}
+    energies = {(4, 0.5): -2.0, (4, 1.0): -6.0}
+    return {
+        "two lattices": [r | {"lattice": "short" if r["sites"] == 4 else "long"} for r in rings],
+        "classical only": [{"sites": 5, "parameters": {"d": 0.1}, "classical_energy": -1.0}],
+        "undefined": [undefined, *ring_records((4,), (1.0, 1.5), ("wick",))],
+        "many rows": [
+            r | {"parameters": {"p": float(p)}}
+            for p in range(40)
+            for r in ring_records((4,), (0.5, 1.0), energies=energies)
+        ],
+    }
+
+
+@pytest.mark.parametrize(
+    ("name", "words"),
+    [
+        ("two lattices", "over all lattices"),
+        ("classical only", "no point has a quantum energy yet"),
+        ("undefined", "rank 2 above 2S"),
+        ("many rows", "The first 100 of 160 rows"),
+    ],
+)
+def test_unusual_studies_in_memory(name, words):
+    from manybody.results.dataset import records_to_tree
+    from manybody.results.scaling import scaling_dataset
+
+    tree = records_to_tree(unusual()[name], ATTRS)
+    tree["scaling"] = type(tree)(scaling_dataset(tree))
+    assert words in " ".join(render(tree).split())
+
+
 def test_spin_normalization_and_its_refusal(folder):
     tree = open_results(folder)
     page = render(tree, normalization="spin")
