@@ -17,15 +17,17 @@ from manybody.classical.site_form import SiteForm, site_form
 from manybody.classical.sphere_product import normalized, random_points
 from manybody.model.energy import EnergyFunction
 
+LARGE = 300_000  # sites from which a frustrated function gets one start, from the lowest eigenvectors
+
 
 @dataclass(frozen=True)
 class MinimizeSettings:
     """starts: how many starting configurations; seed: of the random ones, equal seeds give equal results.
 
     tolerance: wanted largest tangential gradient at a site, relative to the strongest sum of couplings at a site.
-    max_site_starts: at most this many sites x starts are spent (but at least two starts): on 10^6 sites fewer starts
-    than asked for are made, and `starts_used` says how many. sweeps: alignment sweeps of a start (quasi-Newton steps:
-    five times as many), newton_steps: polishing steps, at most.
+    max_site_starts: at most this many sites x starts are spent (but at least two starts, one beyond LARGE): on 10^6
+    sites fewer starts than asked for are made, and `starts_used` says how many. sweeps: alignment sweeps of a start
+    (quasi-Newton steps: five times as many), newton_steps: polishing steps, at most.
     """
 
     starts: int = 64
@@ -153,6 +155,14 @@ class QuadraticProblem:
         bound = self.floor + self.form.constant
         return energy <= bound + 1e-13 * abs(self.floor)
 
+    def value(self, x: np.ndarray) -> float:
+        """The function at one configuration (N, 3)."""
+        from manybody.classical.vector_sweeps import gradient
+
+        form, slopes, multipliers = self.form, np.empty_like(x), np.empty(len(x))
+        arrays = (form.indptr, form.neighbours, form.weights, form.blocks, form.diagonal)
+        return form.constant + gradient(x, *arrays, self.field, slopes, multipliers)[0]
+
     def descend(self, configurations: np.ndarray) -> polish.Polished:
         from manybody.classical import vector_sweeps as compiled
 
@@ -160,7 +170,7 @@ class QuadraticProblem:
         x = np.array(configurations, dtype=float)
         energies, gradients = np.empty(len(x)), np.empty(len(x))
         inner = int(np.clip(4 * np.sqrt(form.sites), 500, 3000))
-        budget = max(2000, min(10 * inner, 3_000_000_000 // form.sites))
+        budget = max(2000, min(10 * inner, 1_500_000_000 // form.sites))
         arrays = (form.indptr, form.neighbours, form.weights, form.blocks)
         for k in range(len(x)):
             # plain alignment first: it leaves high random states and saddle points fastest; over-relaxation for the
@@ -203,6 +213,9 @@ class GeneralProblem:
     def is_lowest(self, energy: float) -> bool:
         return False
 
+    def value(self, x: np.ndarray) -> float:
+        return float(self.f.value(x))
+
     def descend(self, configurations: np.ndarray) -> polish.Polished:
         at_once = max(1, self.BATCH // self.f.sites)
         parts = [self._descend(configurations[k : k + at_once]) for k in range(0, len(configurations), at_once)]
@@ -230,8 +243,12 @@ def _rounds(problem, settings: MinimizeSettings, extra: np.ndarray | None) -> It
         if extra.ndim != 3 or extra.shape[1:] != (form.sites, 3):
             raise ValueError(f"extra_starts must have shape (r, {form.sites}, 3), got {extra.shape}")
         yield normalized(extra)
-    yield starts.placed_start(form, generator)[None]
-    left -= 1
+    placed = starts.placed_start(form, generator)
+    if form.sites <= LARGE or problem.is_lowest(problem.value(placed)):
+        yield placed[None]
+        left -= 1
+    else:
+        left = 1  # frustrated: the placed state only is a poor start, and one good start takes minutes
     # half eigenvector starts while they are few, then mostly random ones: these reach minima that the matrix alone does
     # not know
     size, of_modes = 6, 3

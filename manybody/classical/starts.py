@@ -66,7 +66,7 @@ class LowestModes:
         size = 3 * form.sites
         operator = LinearOperator((size, size), matvec=apply, dtype=float)
         first = np.random.default_rng(0).standard_normal(size)
-        degree = int(np.clip(2 * np.sqrt(form.sites), 100, 1500))
+        degree = int(np.clip(2 * np.sqrt(form.sites), 100, 1000))
         # everything within (6 / degree)^2 of the lowest eigenvalue, relative to the width, is amplified by up to
         # exp(12); the filter is only as sharp as the lowest eigenvalue is known
         sharpness = (6.0 / degree) ** 2
