@@ -128,7 +128,7 @@ def bank():
     for window in WINDOWS:
         for anisotropy, row in ((1.0, "B001"), (0.5, "B007"), (2.0, "B010")):
             yield window, [xxz_ring(n, anisotropy) for n in window], reference(row).value, "periodic"
-        for field in (0.3, 0.5, 0.8, 0.9, 0.95, 1.0, 1.05, 1.2, 1.5, 2.5):
+        for field in (0.3, 0.5, 0.8, 0.95, 1.0, 1.05, 1.5):
             yield window, [ising_ring(n, field) for n in window], ising_limit(field), "periodic"
             yield window, [ising_chain(n, field) for n in window], ising_limit(field), "open"
         yield window, [xx_chain(n) for n in window], reference("B006").value, "open"
@@ -145,7 +145,7 @@ def test_stated_errors_are_honest_and_useful(known):
         ratios.append(ratio)
         if len(window) > 3:
             padding.append(1 / max(ratio, 1e-6))
-    assert len(ratios) == 144
+    assert len(ratios) == 108
     assert np.mean(np.array(ratios) < 2) > 0.95
     assert np.median(padding) < (10 if known else 15)
 
