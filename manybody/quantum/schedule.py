@@ -12,7 +12,7 @@ from manybody.quantum.extrapolation import Stage, energy_error
 FIRST_ALLOWED = 1e-6
 LEAST_ALLOWED = 1e-15
 SWEEPS, MOST_SWEEPS = 8, 24
-CRAWL, MOST_VECTORS = 0.7, 40
+CRAWL, MOST_VECTORS = 0.8, 40
 FRACTION = 0.3
 GROWTH, FIRST_BOND = 2, 64
 
@@ -92,13 +92,15 @@ class Run:
         energies: list[float] = []
         gains = [np.inf]
         while len(energies) < MOST_SWEEPS:
+            before = self.chain.bond_dimension
             energy, discarded, bounded = self._half_sweep(FRACTION)
             energies.append(energy)
             self._tell(energy, discarded)
             if len(energies) == 1:
                 continue
             gains.append(energies[-2] - energies[-1])
-            crawls = gains[-1] > CRAWL * gains[-2]
+            grows = self.chain.bond_dimension > 1.05 * before
+            crawls = gains[-1] > CRAWL * gains[-2] and not grows
             if gains[-1] < max(0.1 * (energies[0] - energies[-1]), 0.05 * self.limits.goal):
                 break
             if crawls:

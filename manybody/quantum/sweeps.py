@@ -56,6 +56,22 @@ def matrix_product_ground_state(
     return solver.solve()
 
 
+def predict(op: SpinOperator, settings: QuantumSettings | None = None) -> memory.Estimate:
+    """Bytes at the peak of a solve and seconds of one half sweep at the bond dimension the limits allow (a solve takes some tens of half
+    sweeps, most of them at smaller bonds). An accuracy that is reached earlier costs less."""
+    settings = settings or QuantumSettings()
+    up = np.tile([0.0, 0.0, 1.0], (op.sites, 1))
+    problem = prepare(op, up)
+    vectors = products_per_step(problem)
+    bond = min(settings.max_bond, memory.largest_bond(problem, settings.memory, vectors))
+    return memory.estimate(problem, bond, vectors)
+
+
+def products_per_step(problem: Problem) -> int:
+    """Lanczos products of one step: the spread of energies over their spacing grows with the spin."""
+    return int(np.clip(3 + round(float(problem.spins.max())), 3, 12))
+
+
 class _Solver:
     def __init__(self, op, settings: QuantumSettings, start, scale: float, progress, checkpoint):
         self.op, self.settings, self.progress, self.checkpoint = op, settings, progress, checkpoint
@@ -63,7 +79,7 @@ class _Solver:
         self.start = classical_start(op, self.rng) if start is None else np.asarray(start, float)
         self.problem = prepare(op, self.start)
         self.isotropic = len(op.symmetry_axes()) == 3
-        self.vectors = int(np.clip(3 + round(float(self.problem.spins.max())), 3, 12))
+        self.vectors = products_per_step(self.problem)
         norm = self.problem.norm
         largest = memory.largest_bond(self.problem, settings.memory, self.vectors)
         pairs = int(self.problem.levels.max()) <= 3 and self.problem.width < WIDE
