@@ -10,7 +10,7 @@ from manybody.results.derived import energy_scale
 from manybody.results.scaling_sites import extrapolate
 from manybody.results.scaling_spin import PARITIES, POWERS, SHIFTS, evaluate, fit_spins
 from manybody.results.schema import units_text
-from manybody.results.trust import STATES, UNKNOWN, trust
+from manybody.results.trust import STATES, UNKNOWN, trust_all
 
 TOLERANCES = (0.1, 0.05, 0.02, 0.01)
 LIMITS = {
@@ -217,17 +217,19 @@ def trust_spin(tree, tolerance=0.05, fits=None):
     spins = root["spin"].values
     dims = _cluster_dims(root)
     verdicts = {}
+    # plain arrays: picking labelled ones apart at every parameter value would cost more than the judgement
+    coefficients = fits["spin_coefficient"].transpose(*dims, "rule", ...).values
+    covariance = fits["spin_covariance"].transpose(*dims, "rule", ...).values
+    shifts = fits["spin_shift"].values
     for place, series in _series(root, dims, ("gap", "quantum_energy_error")):
-        label = dict(zip([*dims, "rule"], place))
-        one = fits[["spin_coefficient", "spin_covariance", "spin_shift"]].isel(label)
         verdicts[place] = _judge(
             spins,
             series["gap"],
             series["quantum_energy_error"],
             series["scale"],
-            one["spin_coefficient"].values,
-            one["spin_covariance"].values,
-            float(one["spin_shift"]),
+            coefficients[place],
+            covariance[place],
+            float(shifts[place[-1]]),
             tolerance,
         )
     return _trust_dataset(root, [*dims, "rule"], verdicts, tolerance, "")
@@ -271,16 +273,14 @@ def rule_spread(tree):
 
 
 def _judge(spins, gap, error, scale, coefficients, covariance, shift, tolerance):
-    out = []
     usable = scale > 0 and np.isfinite(coefficients).any()
 
     def predict(at):
         value, deviation = evaluate(coefficients, covariance, at, shift)
         return value / scale, deviation / scale
 
-    for one in np.atleast_1d(tolerance):
-        out.append(trust(spins, gap / scale, error / scale, predict, one) if usable else UNKNOWN)
-    return out
+    tolerances = np.atleast_1d(tolerance)
+    return trust_all(spins, gap / scale, error / scale, predict, tolerances) if usable else [UNKNOWN] * len(tolerances)
 
 
 def _trust_dataset(root, lead, verdicts, tolerance, prefix):

@@ -58,15 +58,17 @@ def evaluate(coefficients, covariance, spins, shift=0.0):
     """Value and standard error of the fitted series at half-integer and integer spins; arrays as in SpinFit."""
     spins = np.atleast_1d(np.asarray(spins, float))
     odd = half_integer(spins)
-    even_part = evaluate_class(coefficients[0], covariance[0], spins, shift)
-    odd_part = evaluate_class(coefficients[1], covariance[1], spins, shift)
-    return tuple(np.where(odd, b, a) for a, b in zip(even_part, odd_part))
+    value, deviation = np.empty(len(spins)), np.empty(len(spins))
+    for parity, chosen in enumerate((~odd, odd)):
+        part = evaluate_class(coefficients[parity], covariance[parity], spins[chosen], shift)
+        value[chosen], deviation[chosen] = part
+    return value, deviation
 
 
 def evaluate_class(coefficients, covariance, spins, shift=0.0):
     """The same for one class of spin, coefficients (POWERS,), as a function of a continuous spin."""
-    powers = (np.asarray(spins, float)[:, None] + shift) ** -np.arange(1.0, POWERS + 1)
-    variance = np.einsum("sp,pq,sq->s", powers, covariance, powers)
+    powers = np.cumprod(np.repeat(1 / (np.asarray(spins, float)[:, None] + shift), POWERS, axis=1), axis=1)
+    variance = ((powers @ covariance) * powers).sum(axis=1)
     return powers @ coefficients, np.sqrt(np.maximum(variance, 0.0))
 
 
