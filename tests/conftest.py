@@ -1,4 +1,4 @@
-"""One linear-algebra thread, as the workers have: set before numpy is imported, so that tests neither wait nor wobble."""
+"""One linear-algebra thread, as workers have, set before numpy is imported: tests neither wait nor wobble."""
 
 import os
 

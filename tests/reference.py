@@ -34,7 +34,7 @@ class Reference:
         return float(Fraction(self.S))
 
     def digits(self, computed: float) -> float:
-        """Matched significant digits, -log10 of the relative deviation (absolute where the value is zero), at most 16."""
+        """Matched digits: -log10 of the relative deviation (absolute where the value is zero), at most 16."""
         deviation = abs(computed - self.value) / (abs(self.value) or 1.0)
         return 16.0 if deviation < 1e-16 else -math.log10(deviation)
 
