@@ -1,18 +1,21 @@
 """Charge blocks in flat buffers: where every block of a site tensor and of an environment lies.
 
-A bond is a pair of arrays (charges, dims): distinct integers (twice the S^z summed over the sites to its left) in any order, and how
-many states carry each. A site has one integer charge per local state. The block (i, s) of a site tensor joins left charge i and local
-state s to the right charge charges[i] + local[s]; a block whose right charge is not on the bond does not exist.
+A bond is a pair of arrays (charges, dims): distinct integers (the sum of S + m over the sites to its left) in any
+order, and how many states carry each. A site has one integer charge per local state. The block (i, s) of a site tensor
+joins left charge i and local state s to the right charge charges[i] + local[s]; a block whose right charge is not on
+the bond does not exist.
 
-Layout `by left` of a site tensor: for every left charge one row-major matrix, rows its states, columns (s, right states).
-Layout `by right`: for every right charge one matrix, rows (s, left states), columns its states.
+Layout `by left` of a site tensor: for every left charge one row-major matrix, rows its states, columns (s, right
+states). Layout `by right`: for every right charge one matrix, rows (s, left states), columns its states.
 
-An environment holds one matrix E[a][bra, ket] per operator channel a of charge delta[a], non-zero where bra = ket + delta[a].
-Layout `by bra`: for every bra charge one matrix, rows (a, ket states), columns bra states; `by ket`: rows (a, bra states), columns ket
-states. One channel, whose matrix is the identity by orthonormality, is skipped and never stored.
+An environment holds one matrix E[a][bra, ket] per operator channel a of charge delta[a], non-zero where bra = ket +
+delta[a]. Layout `by bra`: for every bra charge one matrix, rows (a, ket states), columns bra states; `by ket`: rows (a,
+bra states), columns ket states. One channel, whose matrix is the identity by orthonormality, is skipped and never
+stored.
 
-Looking from the other end of the chain (`mirror`) replaces every bond charge q by total - q, keeping the order of the arrays: the
-environments need no copy then, site tensors are transposed block by block. So sweeps are written for one direction only.
+Looking from the other end of the chain (`mirror`) replaces every bond charge q by total - q, keeping the order of the
+arrays: the environments need no copy then, site tensors are transposed block by block. So sweeps are written for one
+direction only.
 """
 
 import numpy as np
@@ -104,7 +107,7 @@ def by_ket(charges, dims, delta, skip):
 @compiled
 def to_ket(environment, charges, dims, delta, skip):
     """Copy of an environment stored by bra into the layout by ket."""
-    bra_partner, bra_row, _, bra_start, size = by_bra(charges, dims, delta, skip)
+    _, bra_row, _, bra_start, size = by_bra(charges, dims, delta, skip)
     ket_partner, ket_row, _, ket_start, _ = by_ket(charges, dims, delta, skip)
     result = np.empty(size, environment.dtype)
     for k in range(charges.size):
@@ -207,8 +210,9 @@ def reachable(left, right, first_local, second_local):
 
 @compiled
 def join_pair(grouped, middle, left, left_dims, right, right_dims, first_local, second_local):
-    """Matrices per middle charge, rows (s1, left states), columns (s2, right states) -> pair tensor by left with local states
-    s1 * d2 + s2 of charge first_local[s1] + second_local[s2]; blocks whose middle charge is not listed are zero."""
+    """Matrices per middle charge, rows (s1, left states), columns (s2, right states) -> pair tensor by left with local
+    states s1 * d2 + s2 of charge first_local[s1] + second_local[s2]; blocks whose middle charge is not listed are
+    zero."""
     return _regroup(grouped, middle, left, left_dims, right, right_dims, first_local, second_local, True)
 
 

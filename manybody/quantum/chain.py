@@ -1,7 +1,7 @@
 """The state of a sweep: site tensors, bonds and environments of a chain, seen from the end where the sweep started.
 
-Every sweep runs from site 0 to the right; `mirror` then turns the chain round. Left of the centre all tensors are orthonormal towards
-the right, right of it towards the left, and both environments of the centre are up to date.
+Every sweep runs from site 0 to the right; `mirror` then turns the chain round. Left of the centre all tensors are
+orthonormal towards the right, right of it towards the left, and both environments of the centre are up to date.
 """
 
 from dataclasses import dataclass, field
@@ -35,9 +35,9 @@ class Bond:
 class Chain:
     """Sites in the order of the present view.
 
-    local: charges of the local states; operators; bonds (length + 1); tensors, site tensors by left; turned: whether a tensor is
-    still stored as seen from the other end; left[l], right[l]: environments by bra of bond l; total: charge of the whole chain; reverse:
-    the view is from the far end.
+    local: charges of the local states; operators; bonds (length + 1); tensors, site tensors by left; turned: whether a
+    tensor is still stored as seen from the other end; left[l], right[l]: environments by bra of bond l; total: charge
+    of the whole chain; reverse: the view is from the far end.
     """
 
     local: list[np.ndarray]
@@ -127,10 +127,9 @@ class Chain:
     ):
         """contraction.plan for one site (or a pair) between two bonds."""
         weights = operator.weights.astype(self.dtype, copy=False)
-        return contraction.plan(
-            *left.pair, *right.pair, local, operator.delta_left, operator.delta_right, operator.start, end, skip, operator.entries,
-            weights, *(bra or right).pair,
-        )  # fmt: skip
+        channels = (operator.delta_left, operator.delta_right, operator.start, end, skip)
+        bra = bra or right
+        return contraction.plan(*left.pair, *right.pair, local, *channels, operator.entries, weights, *bra.pair)
 
     def advance(self, site: int) -> None:
         """Left environment of the next bond from the one of this bond and the (orthonormal) tensor of the site."""
@@ -161,8 +160,8 @@ class Chain:
         )
 
     def prune(self, bond: int, charges: np.ndarray) -> None:
-        """Drop the states of a bond, ahead of the centre, whose charge is not among `charges`: nothing on the left reaches them. The right
-        environment of the bond is void afterwards."""
+        """Drop the states of a bond, ahead of the centre, whose charge is not among `charges`: nothing on the left
+        reaches them. The right environment of the bond is void afterwards."""
         before, after = self.bonds[bond], self.bonds[bond + 1]
         stay = np.isin(before.charges, charges)
         widths = blocks.by_left(*before.pair, *after.pair, self.local[bond])[2]
@@ -179,7 +178,8 @@ class Chain:
         self.pass_on(site, isometry, carry, kept)
 
     def pass_on(self, site: int, isometry: np.ndarray, carry: np.ndarray, kept: np.ndarray) -> None:
-        """Put an isometry grouped by right charge in place of a site tensor and multiply the carry into the next one."""
+        """Put an isometry grouped by right charge in place of a site tensor and multiply the carry into the next
+        one."""
         left, right, after = self.bonds[site], self.bonds[site + 1], self.bonds[site + 2]
         tensor = self.tensor(site + 1)
         widths = blocks.by_left(*right.pair, *after.pair, self.local[site + 1])[2]

@@ -1,12 +1,14 @@
-"""Contraction of a site tensor with its environments: two rounds of matrix products around one round of scaled block copies.
+"""Contraction of a site tensor with its environments: two rounds of matrix products around one round of scaled block
+copies.
 
     T[a, i', s, j] = sum_i L[a][i', i] A[i, s, j]                     one product per left ket charge i
     U[b, i', s', j] = sum_(a, s) W[a, b, s', s] T[a, i', s, j]        block by block
     O[i', s', j'] = sum_(b, j) U[b, i', s', j] R[b][j', j]            one product per right bra charge j'
 
-L is stored by ket, R by bra (see blocks). The channel `start` of the left bond (nothing of an operator yet) and `end` of the right one
-(operator finished) have the identity as their environment: A takes the place of T and O that of U. A plan lists offsets, strides
-and shapes of every step; it depends only on charges, dimensions and W, and building it costs a few microseconds per block.
+L is stored by ket, R by bra (see blocks). The channel `start` of the left bond (nothing of an operator yet) and `end`
+of the right one (operator finished) have the identity as their environment: A takes the place of T and O that of U. A
+plan lists offsets, strides and shapes of every step; it depends only on charges, dimensions and W, and building it
+costs a few microseconds per block.
 """
 
 import numpy as np
@@ -36,13 +38,13 @@ def plan(
 ):
     """Everything `apply`, `half` and `close` need to know.
 
-    entries (n, 4): left channel, right channel, outgoing and incoming local state. The right channel `skip` is left out of U altogether
-    (-1: none), `end` goes to O. bra, bra_dims: right bond of the result, the ket bond itself except where new charges are probed (then O
-    is meaningless). Returns
-    first (n, 6): rows, inner, columns, offsets in L, A, T of every product of the first round; moves (n, 7): flags (sum of FROM_T, TO_O,
-    ASSIGN), source offset and stride, target offset and stride, rows, columns; factors (n,); second (n, 6): like first, with U, R, O;
-    back (n, 6): offset and stride in O, the same in the layout of A, rows, columns; groups (n, 4): rows, columns, offset in U and in O
-    per bra charge; sizes (4,): elements of A, T, U, O.
+    entries (n, 4): left channel, right channel, outgoing and incoming local state. The right channel `skip` is left out
+    of U altogether (-1: none), `end` goes to O. bra, bra_dims: right bond of the result, the ket bond itself except
+    where new charges are probed (then O is meaningless). Returns first (n, 6): rows, inner, columns, offsets in L, A, T
+    of every product of the first round; moves (n, 7): flags (sum of FROM_T, TO_O, ASSIGN), source offset and stride,
+    target offset and stride, rows, columns; factors (n,); second (n, 6): like first, with U, R, O; back (n, 6): offset
+    and stride in O, the same in the layout of A, rows, columns; groups (n, 4): rows, columns, offset in U and in O per
+    bra charge; sizes (4,): elements of A, T, U, O.
     """
     target, column, width, a_start, a_size = by_left(left, left_dims, right, right_dims, local)
     bra_of, l_row, l_height, l_start, _ = by_ket(left, left_dims, delta_left, start)
@@ -50,7 +52,6 @@ def plan(
     _, _, r_height, r_start, _ = by_bra(bra, bra_dims, delta_right, end)
     ket_table, ket_low = lookup(right)
     bra_table, bra_low = lookup(bra)
-    left_table, left_low = lookup(left)
 
     first = np.empty((left.size, 6), np.int64)
     t_start = np.zeros(left.size, np.int64)
@@ -199,7 +200,8 @@ def apply(tensor, result, left, right, steps, buffers):
 
 @compiled
 def half(tensor, left, steps):
-    """The tensor U: environment, tensor and operator of one site contracted, grouped by bra charge as in plan.groups."""
+    """The tensor U: environment, tensor and operator of one site contracted, grouped by bra charge as in
+    plan.groups."""
     first, moves, weights, _, _, _, sizes = steps
     middle = np.empty(sizes[1], tensor.dtype)
     stacked = np.zeros(sizes[2], tensor.dtype)

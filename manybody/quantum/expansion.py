@@ -1,8 +1,9 @@
 """Enlarging the bond ahead of a one-site step by the directions along which the energy falls.
 
-The two-site residual H psi on sites l, l + 1, projected outside the present right space, is sampled with random vectors over its left
-index: no object of the cost of a two-site step appears. Controlled bond expansion: Gleis, Li, von Delft 2023, Phys. Rev. Lett. 130,
-246402; random sampling in its place: McCulloch, Osborne 2024, arXiv:2403.00562. Both citations from memory.
+The two-site residual H psi on sites l, l + 1, projected outside the present right space, is sampled with random vectors
+over its left index: no object of the cost of a two-site step appears. Controlled bond expansion: Gleis, Li, von Delft
+2023, Phys. Rev. Lett. 130, 246402; random sampling in its place: McCulloch, Osborne 2024, arXiv:2403.00562. Both
+citations from memory.
 """
 
 import math
@@ -19,8 +20,8 @@ NEGLIGIBLE = 1e-14
 
 
 def expand(chain: Chain, site: int, fraction: float, limit: int, rng: np.random.Generator) -> None:
-    """Add about `fraction` of its dimension (at least 4 states) to the bond after the centre, at most up to `limit`. The state itself is
-    unchanged: the centre gets zeros."""
+    """Add about `fraction` of its dimension (at least 4 states) to the bond after the centre, at most up to `limit`.
+    The state itself is unchanged: the centre gets zeros."""
     wanted = min(max(4, math.ceil(fraction * chain.bonds[site + 1].dimension)), limit - chain.bonds[site + 1].dimension)
     if wanted <= 0:
         return
@@ -50,7 +51,8 @@ def expand(chain: Chain, site: int, fraction: float, limit: int, rng: np.random.
 
 @compiled
 def directions(near, far, own, groups, turned_groups, dims, probes, noise, wanted, negligible):
-    """Orthonormal new states per charge (rows x added, group after group), outside the columns of `own`; at most `wanted` in all."""
+    """Orthonormal new states per charge (rows x added, group after group), outside the columns of `own`; at most
+    `wanted` in all."""
     count = dims.size
     sample_size = 0
     for g in range(count):

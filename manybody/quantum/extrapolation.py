@@ -10,8 +10,8 @@ import numpy as np
 class Stage:
     """One stage of sweeps at a fixed truncation.
 
-    energy is that of the state kept, constant left out; variance and discarded (the summed relative weight cut in its last sweep)
-    belong to it; gain is what the last half sweep still won and ratio that gain over the one before.
+    energy is that of the state kept, constant left out; variance and discarded (the summed relative weight cut in its
+    last sweep) belong to it; gain is what the last half sweep still won and ratio that gain over the one before.
     """
 
     bond_dimension: int
@@ -28,9 +28,10 @@ SAFETY = 2.0
 def energy_error(stages: list[Stage], floor: float) -> float:
     """One-sided 95 % bound on energy - truth of the last stage.
 
-    Both the variance and the discarded weight vanish with the error, in proportion once small. The slope of the energy against each,
-    between the last stage and those before, extrapolates it to zero; the larger distance times SAFETY counts, and at least `floor`
-    (rounding), and so does the sum of the gains of further half sweeps as a geometric series.
+    Both the variance and the discarded weight vanish with the error, in proportion once small. The slope of the energy
+    against each, between the last stage and those before, extrapolates it to zero; the larger distance times SAFETY
+    counts, and at least `floor` (rounding), and so does the sum of the gains of further half sweeps as a geometric
+    series.
     """
     last = stages[-1]
     ratio = min(max(last.ratio, 0.5), 0.95)
@@ -42,7 +43,8 @@ def energy_error(stages: list[Stage], floor: float) -> float:
             fall = max(earlier.energy - last.energy, 0.0)
             distances.append(fall * x1 / (getattr(earlier, measure) - x1))
     if len(distances) == 1:
-        # No recent slope (a variance at rounding level, or one that did not fall): the steepest of all stages, else the standard
+        # No recent slope (a variance at rounding level, or one that did not fall): the steepest of all stages, else the
+        # standard
         # deviation, which bounds the distance to some eigenvalue.
         slopes = [
             max(a.energy - b.energy, 0.0) / (a.variance - b.variance)
@@ -52,4 +54,3 @@ def energy_error(stages: list[Stage], floor: float) -> float:
         deviation = float(np.sqrt(last.variance))
         distances.append(min(max(slopes) * last.variance, deviation) if slopes else deviation)
     return max(SAFETY * max(distances), floor)
-

@@ -10,8 +10,8 @@ from manybody.quantum.contraction import apply
 def lowest(tensor, left, right, steps, vectors, tolerance):
     """Lowest Ritz value, its normalized vector, estimated residual norm, products used.
 
-    tensor: start (any norm). At most `vectors` products with the operator; stops early once the residual is below `tolerance`. The
-    basis is reorthogonalized against all earlier vectors.
+    tensor: start (any norm). At most `vectors` products with the operator; stops early once the residual is below
+    `tolerance`. The basis is reorthogonalized against all earlier vectors.
     """
     sizes = steps[6]
     size = tensor.size

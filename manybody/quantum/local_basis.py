@@ -1,7 +1,8 @@
 """How many levels of a large spin are kept where no charge is conserved.
 
-In the local classical frame the lowest Holstein-Primakoff levels m = S, S - 1, ... carry nearly all weight. Keeping the first few is a
-projection, so the energy stays variational; levels are added until the last one kept is practically empty.
+In the local classical frame the lowest Holstein-Primakoff levels m = S, S - 1, ... carry nearly all weight. Keeping the
+first few is a projection, so the energy stays variational; levels are added until the last one kept is practically
+empty.
 """
 
 import numpy as np
@@ -30,7 +31,8 @@ def occupation(chain: Chain, site: int) -> np.ndarray:
 def wanted_levels(chain: Chain, problem: Problem, goal: float) -> np.ndarray | None:
     """Larger numbers of levels in sweep order, or None where the last level of every site is empty enough.
 
-    A level of weight p lowers the energy by about p times the local energy scale; it is empty when that is far below the goal.
+    A level of weight p lowers the energy by about p times the local energy scale; it is empty when that is far below
+    the goal.
     """
     if not problem.truncated:
         return None

@@ -1,4 +1,5 @@
-"""Moments, pair correlations, entanglement and coherent overlap of a matrix-product state; names as in GroundState.observables."""
+"""Moments, pair correlations, entanglement and coherent overlap of a matrix-product state; names as in
+GroundState.observables."""
 
 import math
 
@@ -20,8 +21,8 @@ def matrix_product_observables(
 ) -> dict[str, np.ndarray]:
     """Observables by the names of manybody.quantum.result, "moments" with moments_squared and coherent_overlap.
 
-    start (N, 3): classical unit vectors in the frame of the operator from which, beside random ones, the best coherent product state is
-    looked for. Cost: N^2 products of the size of one site for correlations, N otherwise.
+    start (N, 3): classical unit vectors in the frame of the operator from which, beside random ones, the best coherent
+    product state is looked for. Cost: N^2 products of the size of one site for correlations, N otherwise.
     """
     result: dict[str, np.ndarray] = {}
     if not set(names) & {"moments", "correlations", "entanglement"}:
@@ -51,7 +52,8 @@ def matrix_product_observables(
 class _walk:
     """Averages collected while the centre moves from one end to the other; sweep order, solved frame.
 
-    first (N, 3), second (N, 3, 3) one-site averages, entropy (N - 1,), pairs (N, N, 3, 3) with the one-site averages at i = j.
+    first (N, 3), second (N, 3, 3) one-site averages, entropy (N - 1,), pairs (N, N, 3, 3) with the one-site averages at
+    i = j.
     """
 
     def __init__(self, state: MatrixProductState, with_pairs: bool):
@@ -211,8 +213,9 @@ def _pair_values(tensor, environment, steps, left, left_dims, right, right_dims,
 def coherent_overlap(
     state: MatrixProductState, start: np.ndarray | None = None, seed: int = 1, random_starts: int = 3
 ) -> float:
-    """max |<n_1 ... n_N | psi>|^(2/N) over coherent product states, as found from `start` (N, 3), in sweep order and solved frame, and
-    from random directions. With W = <n| S_i |psi> / <n|psi> the gradient of log |<n|psi>|^2 along n_i is 2 n_i x Im W."""
+    """max |<n_1 ... n_N | psi>|^(2/N) over coherent product states, as found from `start` (N, 3), in sweep order and
+    solved frame, and from random directions. With W = <n| S_i |psi> / <n|psi> the gradient of log |<n|psi>|^2 along n_i
+    is 2 n_i x Im W."""
     length = state.sites
     random = np.random.default_rng(seed)
     starts = [random.standard_normal((length, 3)) for _ in range(random_starts)]

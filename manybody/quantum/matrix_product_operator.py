@@ -1,9 +1,10 @@
 """An operator sum as a compressed matrix-product operator, for pairs of any range and terms on any number of sites.
 
-At every cut the terms that cross it form a matrix: rows are operator strings on the left (a channel of the cut before times one
-site operator), columns the strings still to come. Each connected piece of that matrix needs as many channels as its rank. A minimal
-vertex cover of its bipartite graph (Koenig 1931; for operators Ren, Li, Jiang, Shuai 2020, J. Chem. Phys. 153, 084118) gives sparse
-channels and is kept unless a singular-value decomposition needs fewer. Two channels always exist: 0 "nothing yet", 1 "finished".
+At every cut the terms that cross it form a matrix: rows are operator strings on the left (a channel of the cut before
+times one site operator), columns the strings still to come. Each connected piece of that matrix needs as many channels
+as its rank. A minimal vertex cover of its bipartite graph (Koenig 1931; for operators Ren, Li, Jiang, Shuai 2020, J.
+Chem. Phys. 153, 084118) gives sparse channels and is kept unless a singular-value decomposition needs fewer. Two
+channels always exist: 0 "nothing yet", 1 "finished".
 """
 
 from collections.abc import Sequence
@@ -23,7 +24,8 @@ LARGEST_SVD = 1500
 
 @dataclass(frozen=True, eq=False)
 class Terms:
-    """sum over terms of coefficient * product of ladder operators; positions ascend inside a term. Every list entry is one term."""
+    """sum over terms of coefficient * product of ladder operators; positions ascend inside a term. Every list entry is
+    one term."""
 
     length: int
     positions: list[tuple[int, ...]]
@@ -35,8 +37,9 @@ class Terms:
 class OperatorSite:
     """One site of a matrix-product operator as a list of numbers.
 
-    entries (n, 4): left channel, right channel, outgoing and incoming local state; weights (n,). delta_left, delta_right: charge
-    that the operators of a channel have moved to the left of the cut. start, end: see contraction (exchanged in the mirror).
+    entries (n, 4): left channel, right channel, outgoing and incoming local state; weights (n,). delta_left,
+    delta_right: charge that the operators of a channel have moved to the left of the cut. start, end: see contraction
+    (exchanged in the mirror).
     """
 
     entries: np.ndarray
@@ -52,8 +55,8 @@ class OperatorSite:
 
 
 def build(terms: Terms, matrices: Sequence[dict[Letter, np.ndarray]], conserved: bool) -> list[OperatorSite]:
-    """One OperatorSite per position. matrices[p][letter] is the (d, d) matrix at position p. With `conserved` every term must have total
-    step zero and letters of step q raise the charge by q. Equal sites share one object."""
+    """One OperatorSite per position. matrices[p][letter] is the (d, d) matrix at position p. With `conserved` every
+    term must have total step zero and letters of step q raise the charge by q. Equal sites share one object."""
     letters = sorted({letter for word in terms.letters for letter in word})
     number = {letter: index + 1 for index, letter in enumerate(letters)}
     where, symbol, following, heads = _suffixes(terms, number)
@@ -93,7 +96,8 @@ def build(terms: Terms, matrices: Sequence[dict[Letter, np.ndarray]], conserved:
 
 
 def _suffixes(terms: Terms, number: dict[Letter, int]):
-    """Every word and every tail of one as a node (position, letter, next node or -1); the node where each term begins."""
+    """Every word and every tail of one as a node (position, letter, next node or -1); the node where each term
+    begins."""
     nodes: dict[tuple[int, int, int], int] = {}
     heads = np.empty(len(terms.positions), np.int64)
     for index, (places, word) in enumerate(zip(terms.positions, terms.letters, strict=True)):
@@ -108,8 +112,8 @@ def _suffixes(terms: Terms, number: dict[Letter, int]):
 def _cut(row, letter, rest, value, letters: int, largest: float):
     """Channels for the strings that cross a cut.
 
-    Returns the links (left channel, new channel, letter, weight), the entries (new channel, rest, value) and for every new channel
-    one (left channel, letter) that feeds it.
+    Returns the links (left channel, new channel, letter, weight), the entries (new channel, rest, value) and for every
+    new channel one (left channel, letter) that feeds it.
     """
     strings, r = np.unique(row * letters + letter, return_inverse=True)
     tails, c = np.unique(rest, return_inverse=True)

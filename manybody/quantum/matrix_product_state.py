@@ -18,9 +18,9 @@ FORMAT = 1
 class MatrixProductState:
     """A normalized state in sweep order: position p holds site order[p] of the operator.
 
-    spins (N,) and frames (N, 3, 3) in site numbering: the tensors live in local frames, a vector v of which is frames[i].T @ v in the
-    frame of the operator. local: charge of every local state kept (highest m of the local frame first). bonds, tensors: see blocks (layout
-    by left), centre at position 0. total: charge of the whole.
+    spins (N,) and frames (N, 3, 3) in site numbering: the tensors live in local frames, a vector v of which is
+    frames[i].T @ v in the frame of the operator. local: charge of every local state kept (highest m of the local frame
+    first). bonds, tensors: see blocks (layout by left), centre at position 0. total: charge of the whole.
     """
 
     order: np.ndarray
@@ -46,7 +46,9 @@ class MatrixProductState:
         rows, columns = blocks.offsets(left.dims), blocks.offsets(right.dims)
         result = np.zeros((left.dimension, right.dimension, local.size), self.tensors[position].dtype)
         for i in range(left.charges.size):
-            matrix = self.tensors[position][start[i] : start[i] + left.dims[i] * width[i]].reshape(left.dims[i], width[i])
+            matrix = self.tensors[position][start[i] : start[i] + left.dims[i] * width[i]].reshape(
+                left.dims[i], width[i]
+            )
             for s in range(local.size):
                 j = target[i, s]
                 if j >= 0:
@@ -71,8 +73,8 @@ class MatrixProductState:
     def to_quimb(self, site_order: bool = True):
         """quimb MatrixProductState in the frame of the operator, basis m = S ... -S at every site.
 
-        site_order: bring the sites into the numbering of the operator by exchanging neighbours (exact up to 1e-14 of the norm; bonds may
-        grow). Otherwise site p of the result is site order[p].
+        site_order: bring the sites into the numbering of the operator by exchanging neighbours (exact up to 1e-14 of
+        the norm; bonds may grow). Otherwise site p of the result is site order[p].
         """
         import quimb.tensor as qtn
 

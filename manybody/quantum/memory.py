@@ -9,7 +9,8 @@ from manybody.quantum.problem import Problem
 
 @dataclass(frozen=True)
 class Estimate:
-    """bytes at the peak of one solve, seconds of one half sweep at that bond dimension on one core, and the bond dimension."""
+    """bytes at the peak of one solve, seconds of one half sweep at that bond dimension on one core, and the bond
+    dimension."""
 
     bytes: float
     seconds: float
@@ -25,7 +26,8 @@ def estimate(problem: Problem, bond: int, vectors: int) -> Estimate:
     for count in problem.levels[::-1]:
         back.append(min(back[-1] * float(count), 1e18))
     bonds = np.minimum(np.minimum(dims, back[::-1]), bond)
-    # sum over charges of D_q^2 = D^2 / share; share = effective number of blocks, measured for S = 1/2 ... 5 at D = 100 ... 500.
+    # sum over charges of D_q^2 = D^2 / share; share = effective number of blocks, measured for S = 1/2 ... 5 at D = 100
+    # ... 500.
     share = 3.2 + 1.7 * float(problem.spins.max()) if problem.conserved else 1.0
     squares = np.maximum(bonds**2 / max(share, 1.0), bonds)
     number = 8 if problem.real else 16

@@ -1,4 +1,5 @@
-"""A spin operator made ready for sweeps: frames, conserved charge, real coefficients, site order, matrix-product operator."""
+"""A spin operator made ready for sweeps: frames, conserved charge, real coefficients, site order, matrix-product
+operator."""
 
 import itertools
 from dataclasses import dataclass, replace
@@ -18,10 +19,11 @@ FEW_LEVELS = 8
 class Problem:
     """Everything below is in sweep order except `frames`; position p holds site order[p].
 
-    operator: the SpinOperator given. frames (N, 3, 3) by site: the solved operator is operator.rotated(frames), so a vector v of the
-    solved frame is frames[i].T @ v in the given one. axis (3,): conserved axis in the given frame (NaN without). levels (N,): local
-    states kept, the highest m first. local: their charges (S + m, zeros without conservation). sites: matrix-product operator
-    without the constant. real: all numbers are real. norm: bound on the operator norm without constant.
+    operator: the SpinOperator given. frames (N, 3, 3) by site: the solved operator is operator.rotated(frames), so a
+    vector v of the solved frame is frames[i].T @ v in the given one. axis (3,): conserved axis in the given frame (NaN
+    without). levels (N,): local states kept, the highest m first. local: their charges (S + m, zeros without
+    conservation). sites: matrix-product operator without the constant. real: all numbers are real. norm: bound on the
+    operator norm without constant.
     """
 
     operator: SpinOperator
@@ -143,7 +145,8 @@ def _turn_to_z(axis: np.ndarray) -> np.ndarray:
 
 
 def local_frames(n: np.ndarray) -> np.ndarray:
-    """(N, 3, 3) proper rotations that turn every n_i to z and the normal of their common plane, if there is one, to y."""
+    """(N, 3, 3) proper rotations that turn every n_i to z and the normal of their common plane, if there is one, to
+    y."""
     _, values, axes = np.linalg.svd(n)
     normal = axes[2] if len(values) < 3 or values[2] < 1e-8 * values[0] else None
     frames = []
@@ -156,7 +159,8 @@ def local_frames(n: np.ndarray) -> np.ndarray:
 
 
 def _real_frames(operator: SpinOperator, frames: np.ndarray, conserved: bool):
-    """Frames, rotated operator and whether its ladder coefficients are real, after trying rotations about z site by site."""
+    """Frames, rotated operator and whether its ladder coefficients are real, after trying rotations about z site by
+    site."""
     solved = operator if np.allclose(frames, np.eye(3), atol=1e-14) else operator.rotated(frames)
     if _imaginary_part(solved, conserved) <= NOISE:
         return frames, solved, True

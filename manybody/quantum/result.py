@@ -1,4 +1,5 @@
-"""What is asked of a quantum ground state and what comes back, shared by exact diagonalization and matrix-product sweeps."""
+"""What is asked of a quantum ground state and what comes back, shared by exact diagonalization and matrix-product
+sweeps."""
 
 from dataclasses import dataclass, field
 from typing import Any

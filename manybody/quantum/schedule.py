@@ -1,4 +1,5 @@
-"""From a start state to a converged one: sweeps in stages of falling truncation, until the error is small enough or a limit is met."""
+"""From a start state to a converged one: sweeps in stages of falling truncation, until the error is small enough or a
+limit is met."""
 
 from collections.abc import Callable
 from dataclasses import dataclass, field
@@ -19,8 +20,9 @@ GROWTH, FIRST_BOND = 2, 64
 
 @dataclass(frozen=True)
 class Limits:
-    """goal: wanted error of the energy, absolute. bond: largest bond dimension; memory_bond: the one that memory allows. floor: rounding
-    error of an energy. vectors: Lanczos products per step. pairs: two-site steps instead of one-site steps with expansion."""
+    """goal: wanted error of the energy, absolute. bond: largest bond dimension; memory_bond: the one that memory
+    allows. floor: rounding error of an energy. vectors: Lanczos products per step. pairs: two-site steps instead of
+    one-site steps with expansion."""
 
     goal: float
     bond: int
@@ -37,8 +39,9 @@ class Limits:
 
 @dataclass(eq=False)
 class Run:
-    """A chain on its way. stages: what was reached, the start state first; allowed: relative weight a bond may lose in the present stage; bounded, narrow: the last
-    stage wanted more states than the limit, or than its own ceiling, which at most doubles (GROWTH) from stage to stage."""
+    """A chain on its way. stages: what was reached, the start state first; allowed: relative weight a bond may lose in
+    the present stage; bounded, narrow: the last stage wanted more states than the limit, or than its own ceiling, which
+    at most doubles (GROWTH) from stage to stage."""
 
     chain: Chain
     limits: Limits
@@ -141,7 +144,9 @@ class Run:
                     "sweep": self.sweeps,
                     "bond_dimension": self.chain.bond_dimension,
                     "energy": energy,
-                    "variance": spread if spread is not None else (self.stages[-1].variance if self.stages else float("nan")),
+                    "variance": spread
+                    if spread is not None
+                    else (self.stages[-1].variance if self.stages else float("nan")),
                     "discarded_weight": discarded,
                 }
             )

@@ -18,8 +18,9 @@ SMEAR = 0.97
 def start_chain(problem: Problem, directions: np.ndarray, total: int, sharp: bool = False) -> Chain:
     """Chain in a projected coherent product state of the given total charge, ready for sweeps.
 
-    directions (N, 3) in sweep order and solved frame; their z-components are shifted so that the mean charge is the wanted one. sharp: a
-    single state of the local basis instead, near the directions; cheaper for small spins, a dead end for large ones.
+    directions (N, 3) in sweep order and solved frame; their z-components are shifted so that the mean charge is the
+    wanted one. sharp: a single state of the local basis instead, near the directions; cheaper for small spins, a dead
+    end for large ones.
     """
     if problem.conserved and sharp:
         states = basis_state(directions, problem.spins, total)
@@ -68,8 +69,8 @@ def magnetized(directions: np.ndarray, spins: np.ndarray, wanted: float) -> np.n
 
 
 def isotropic_directions(start: np.ndarray, spins: np.ndarray, upright: bool = False) -> np.ndarray:
-    """For models that any common rotation leaves unchanged: turn a configuration so that its moment points along z or, without one, so
-    that its spins lie as far as possible in the xy-plane (upright: along z)."""
+    """For models that any common rotation leaves unchanged: turn a configuration so that its moment points along z or,
+    without one, so that its spins lie as far as possible in the xy-plane (upright: along z)."""
     moment = spins @ start
     _, _, axes = np.linalg.svd(start * spins[:, None], full_matrices=True)
     z = moment / np.linalg.norm(moment) if np.linalg.norm(moment) > 1e-6 * spins.sum() else axes[2]
@@ -86,9 +87,9 @@ def isotropic_directions(start: np.ndarray, spins: np.ndarray, upright: bool = F
 class SectorSearch:
     """Walks over total charges until the lowest energy is bracketed by its neighbours.
 
-    begin(total) makes a Run; every run visited is advanced by `stages` stages. `undecided` lists runs that a finer solution has to tell
-    apart. multiplets: the total spin is conserved, so that energies never fall with growing |S^z|, and equal ones belong to one multiplet;
-    the largest |S^z| of it is taken, since its state is the least entangled.
+    begin(total) makes a Run; every run visited is advanced by `stages` stages. `undecided` lists runs that a finer
+    solution has to tell apart. multiplets: the total spin is conserved, so that energies never fall with growing |S^z|,
+    and equal ones belong to one multiplet; the largest |S^z| of it is taken, since its state is the least entangled.
     """
 
     def __init__(
@@ -129,7 +130,8 @@ class SectorSearch:
         return rise <= noise if total > best else rise < -noise
 
     def undecided(self, best: int) -> list[int]:
-        """Other charges whose true energy may still be the lowest; with multiplets only the next smaller one can tell."""
+        """Other charges whose true energy may still be the lowest; with multiplets only the next smaller one can
+        tell."""
         floor = self.energy(best)
         rivals = [t for t, run in self.runs.items() if t != best and run.energy - run.error <= floor]
         return [t for t in rivals if t == best - 1] if self.multiplets else rivals

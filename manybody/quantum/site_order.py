@@ -8,11 +8,13 @@ from manybody.model.energy import EnergyFunction
 
 
 def site_order(energy: EnergyFunction) -> np.ndarray:
-    """order (N,): position p holds site order[p]; the cheapest of the given order, bandwidth reduction and the Fiedler vector.
+    """order (N,): position p holds site order[p]; the cheapest of the given order, bandwidth reduction and the Fiedler
+    vector.
 
-    Cost of an order: the sum over cuts of the squared number of sites on either side that take part in a term across the cut (the
-    smaller side counts), which stands for the width of the operator and the entanglement; plus the squared ranges of all terms over N,
-    since sweeps of few states do not find a bond between far ends (a ring is folded). The given order wins ties.
+    Cost of an order: the sum over cuts of the squared number of sites on either side that take part in a term across
+    the cut (the smaller side counts), which stands for the width of the operator and the entanglement; plus the squared
+    ranges of all terms over N, since sweeps of few states do not find a bond between far ends (a ring is folded). The
+    given order wins ties.
     """
     graph = interaction_graph(energy)
     n = energy.sites
@@ -21,9 +23,9 @@ def site_order(energy: EnergyFunction) -> np.ndarray:
     candidates = [np.arange(n)]
     candidates.append(csgraph.reverse_cuthill_mckee(graph, symmetric_mode=True).astype(np.int64))
     candidates.extend(_fiedler_orders(graph))
-    candidates = [_improved(order, graph) if n <= 300 else order for order in candidates]
-    costs = [cost(order, graph) for order in candidates]
-    return candidates[int(np.argmin(costs))]
+    edges = edge_list(graph)
+    best = min(candidates, key=lambda order: cost(order, edges))
+    return _improved(best, edges)
 
 
 def interaction_graph(energy: EnergyFunction) -> sparse.csr_matrix:
@@ -43,29 +45,29 @@ def interaction_graph(energy: EnergyFunction) -> sparse.csr_matrix:
     return graph
 
 
-def cost(order: np.ndarray, graph: sparse.csr_matrix) -> float:
+def edge_list(graph: sparse.csr_matrix) -> tuple[np.ndarray, np.ndarray]:
+    """Both ends of every pair of sites that share a term, each pair in both directions."""
+    coo = graph.tocoo()
+    return coo.row, coo.col
+
+
+def cost(order: np.ndarray, edges: tuple[np.ndarray, np.ndarray]) -> float:
     place = np.empty(order.size, np.int64)
     place[order] = np.arange(order.size)
-    coo = graph.tocoo()
-    ranges = (place[coo.row] - place[coo.col]).astype(float)
-    return float((_boundary(order, graph) ** 2).sum() + (ranges**2).sum() / (2 * order.size))
+    first, second = place[edges[0]], place[edges[1]]
+    ranges = (first - second).astype(float)
+    return float((_boundary(first, second, order.size) ** 2).sum() + (ranges @ ranges) / (2 * order.size))
 
 
-def _boundary(order: np.ndarray, graph: sparse.csr_matrix) -> np.ndarray:
+def _boundary(first: np.ndarray, second: np.ndarray, n: int) -> np.ndarray:
     """(N - 1,) for every cut the smaller of the numbers of left and right sites with a neighbour across it."""
-    n = order.size
-    place = np.empty(n, np.int64)
-    place[order] = np.arange(n)
-    coo = graph.tocoo()
-    last, first = place.copy(), place.copy()
-    np.maximum.at(last, coo.row, place[coo.col])
-    np.minimum.at(first, coo.row, place[coo.col])
-    # A site at place p with its farthest right neighbour at `last` is an open left site of the cuts p ... last - 1.
-    left, right = np.zeros(n + 1), np.zeros(n + 1)
-    np.add.at(left, place, 1)
-    np.add.at(left, last, -1)
-    np.add.at(right, first, 1)
-    np.add.at(right, place, -1)
+    places = np.arange(n)
+    farthest, nearest = places.copy(), places.copy()
+    np.maximum.at(farthest, first, second)
+    np.minimum.at(nearest, first, second)
+    # A site at place p with its farthest right neighbour at q is an open left site of the cuts p ... q - 1.
+    left = 1 - np.bincount(farthest, minlength=n)
+    right = np.bincount(nearest, minlength=n) - 1
     return np.minimum(np.cumsum(left), np.cumsum(right))[: n - 1]
 
 
@@ -74,19 +76,20 @@ def _fiedler_orders(graph: sparse.csr_matrix) -> list[np.ndarray]:
         return []
     laplacian = csgraph.laplacian(graph).toarray()
     _, vectors = np.linalg.eigh(laplacian)
-    # Where the second eigenvalue is degenerate (a square), a mixture with the third orders one direction before the other.
+    # Where the second eigenvalue is degenerate (a square), a mixture with the third orders one direction before the
+    # other.
     mixtures = [vectors[:, 1]]
     if graph.shape[0] > 3:
         mixtures += [vectors[:, 1] + t * vectors[:, 2] for t in (0.05, -0.05, 1.0, -1.0)]
     return [np.argsort(np.round(vector, 10), kind="stable") for vector in mixtures]
 
 
-def _improved(order: np.ndarray, graph: sparse.csr_matrix) -> np.ndarray:
-    """Moves single sites to better places while that lowers the cost (at most two rounds over small graphs)."""
+def _improved(order: np.ndarray, edges: tuple[np.ndarray, np.ndarray]) -> np.ndarray:
+    """Moves single sites to better places while that lowers the cost (at most two rounds, small graphs only)."""
     n = order.size
-    if n > 40:
-        return order
-    best, value = order.copy(), cost(order, graph)
+    best, value = order.copy(), cost(order, edges)
+    if n > 40 or value <= 2 * n:  # a plain chain cannot be bettered
+        return best
     for _ in range(2):
         before = value
         for site in range(n):
@@ -94,7 +97,7 @@ def _improved(order: np.ndarray, graph: sparse.csr_matrix) -> np.ndarray:
             rest = np.delete(best, here)
             for there in range(max(0, here - 6), min(n, here + 7)):
                 trial = np.insert(rest, there, site)
-                trial_value = cost(trial, graph)
+                trial_value = cost(trial, edges)
                 if trial_value < value - 1e-9:
                     best, value = trial, trial_value
         if value == before:

@@ -1,8 +1,8 @@
 """Parity under turning all spins over, used to tell nearly degenerate states of S^z = 0 apart.
 
-The two nearly free end spins of an open S = 1 chain make a singlet and a triplet whose energies differ by less than sweeps can see; a state
-converged to a mixture of both looks like the ground state and lies too high. Turned about x by pi, one of them changes sign: psi + F psi
-and psi - F psi hold one each.
+The two nearly free end spins of an open S = 1 chain make a singlet and a triplet whose energies differ by less than
+sweeps can see; a state converged to a mixture of both looks like the ground state and lies too high. Turned about x by
+pi, one of them changes sign: psi + F psi and psi - F psi hold one each.
 """
 
 import numpy as np

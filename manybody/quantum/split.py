@@ -1,4 +1,5 @@
-"""Splitting a tensor across a bond: density matrix per charge, one cut by weight over all charges, orthonormal left part."""
+"""Splitting a tensor across a bond: density matrix per charge, one cut by weight over all charges, orthonormal left
+part."""
 
 import numpy as np
 
@@ -9,8 +10,8 @@ from manybody.quantum.compiled import compiled
 def spectra(matrices, shapes):
     """Squared singular values, ascending per group and one group after the other, and the eigenvectors behind them.
 
-    matrices: row-major matrices one after the other, shapes (n, 2). The Gram matrix of the smaller side is diagonalized: weights
-    below about 1e-16 of the largest are rounding.
+    matrices: row-major matrices one after the other, shapes (n, 2). The Gram matrix of the smaller side is
+    diagonalized: weights below about 1e-16 of the largest are rounding.
     """
     total = 0
     room = 0
@@ -43,8 +44,9 @@ def spectra(matrices, shapes):
 
 @compiled
 def choose(weights, shapes, limit, allowed):
-    """How many states to keep per group, and the relative weight discarded: the smallest go first while at most `limit` states stay
-    or the discarded share stays below `allowed`. At least one stays; weights at rounding level never stay."""
+    """How many states to keep per group, and the relative weight discarded: the smallest go first while at most `limit`
+    states stay or the discarded share stays below `allowed`. At least one stays; weights at rounding level never
+    stay."""
     order = np.argsort(weights)
     total = weights.sum()
     least = 1e-16 * total
@@ -69,7 +71,8 @@ def choose(weights, shapes, limit, allowed):
 
 @compiled
 def parts(matrices, shapes, vectors, kept):
-    """Orthonormal parts Q (rows x kept) and carries C (kept x columns), group after group, matrix = Q C up to what was cut."""
+    """Orthonormal parts Q (rows x kept) and carries C (kept x columns), group after group, matrix = Q C up to what was
+    cut."""
     q_size = 0
     c_size = 0
     for g in range(shapes.shape[0]):
@@ -137,7 +140,8 @@ def orthonormal(matrices, shapes):
 
 @compiled
 def carry_over(carry, kept, dims, tensor, widths):
-    """carry (kept x dims per charge) times the next tensor by left (dims x width): the new tensor by left, groups with kept = 0 left out."""
+    """carry (kept x dims per charge) times the next tensor by left (dims x width): the new tensor by left, groups with
+    kept = 0 left out."""
     size = 0
     for g in range(kept.size):
         size += kept[g] * widths[g]

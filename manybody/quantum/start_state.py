@@ -1,7 +1,8 @@
 """Product states as matrix-product states: projected on a sector of total charge, one state per charge and bond.
 
-A coherent product state turned into the plane perpendicular to the conserved axis and projected on the wanted sector knows the
-classical order and mixes all charges: sweeps started from it do not crawl as they do from a basis state of large spins.
+A coherent product state turned into the plane perpendicular to the conserved axis and projected on the wanted sector
+knows the classical order and mixes all charges: sweeps started from it do not crawl as they do from a basis state of
+large spins.
 """
 
 from collections.abc import Sequence
@@ -16,11 +17,14 @@ WINDOW = 1e-10
 """Charges of smaller probability in the projected product state are left out of a bond."""
 
 
-def projected_product(amplitudes: Sequence[np.ndarray], local: Sequence[np.ndarray], total: int, real: bool) -> tuple[list[Bond], list[np.ndarray]]:
+def projected_product(
+    amplitudes: Sequence[np.ndarray], local: Sequence[np.ndarray], total: int, real: bool
+) -> tuple[list[Bond], list[np.ndarray]]:
     """Bonds and site tensors (by left, not normalized) of the projection of a product state on a total charge.
 
-    amplitudes: one vector per site; local: charges of its entries. With `real`, complex amplitudes give the real part of the projected
-    state at two states per charge. Raises ValueError where the product state has no weight in the sector.
+    amplitudes: one vector per site; local: charges of its entries. With `real`, complex amplitudes give the real part
+    of the projected state at two states per charge. Raises ValueError where the product state has no weight in the
+    sector.
     """
     length = len(local)
     turned = real and any(np.abs(vector.imag).max() > 1e-12 for vector in amplitudes)
@@ -44,7 +48,9 @@ def projected_product(amplitudes: Sequence[np.ndarray], local: Sequence[np.ndarr
         for q in bonds[k].charges.tolist():
             row = [s for s, c in enumerate(local[k].tolist()) if q + c in present]
             if turned:
-                matrices = [np.array([[vector[s].real, -vector[s].imag], [vector[s].imag, vector[s].real]]) for s in row]
+                matrices = [
+                    np.array([[vector[s].real, -vector[s].imag], [vector[s].imag, vector[s].real]]) for s in row
+                ]
                 # The first vector is (1, 0), and the real part is read off by (1, 0) at the far end.
                 matrices = [m[:1] if k == 0 else m for m in matrices]
                 matrices = [m[:, :1] if k == length - 1 else m for m in matrices]

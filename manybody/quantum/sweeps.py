@@ -23,7 +23,10 @@ from manybody.quantum.start_state import classical_start
 SAVE_EVERY = 120.0
 """Seconds between two savings of a long run."""
 MIXED = 1e-3
-"""A state of S^z = 0 whose overlap with its turned-over self misses 1 by more than this is a mixture of both parities."""
+"""A state of S^z = 0 whose overlap with its turned-over self misses 1 by more than this is a mixture of both
+parities."""
+NOTABLE = 0.05
+"""A mixture is undone if that lowers the energy by this share of its error."""
 WIDE = 12
 """From this many operator channels on one-site steps are cheaper than pairs."""
 
@@ -46,10 +49,10 @@ def matrix_product_ground_state(
 ) -> GroundState:
     """Lowest energy found by sweeps, its error and what stopped them.
 
-    start (N, 3): classical unit vectors, found here by a short descent if None. scale: |f_min - f_mean|, to which settings.accuracy is
-    relative; 0 takes a bound on the norm of the operator. progress: called with a dict (sweep, bond_dimension, energy, variance,
-    discarded_weight, sector) after every half sweep. checkpoint: an object with load() and save(bytes), or a path; written at most every
-    two minutes, read at the start.
+    start (N, 3): classical unit vectors, found here by a short descent if None. scale: |f_min - f_mean|, to which
+    settings.accuracy is relative; 0 takes a bound on the norm of the operator. progress: called with a dict (sweep,
+    bond_dimension, energy, variance, discarded_weight, sector) after every half sweep. checkpoint: an object with
+    load() and save(bytes), or a path; written at most every two minutes, read at the start.
     """
     settings = settings or QuantumSettings()
     solver = _Solver(op, settings, start, scale, progress, _as_checkpoint(checkpoint))
@@ -57,8 +60,8 @@ def matrix_product_ground_state(
 
 
 def predict(op: SpinOperator, settings: QuantumSettings | None = None) -> memory.Estimate:
-    """Bytes at the peak of a solve and seconds of one half sweep at the bond dimension the limits allow (a solve takes some tens of half
-    sweeps, most of them at smaller bonds). An accuracy that is reached earlier costs less."""
+    """Bytes at the peak of a solve and seconds of one half sweep at the bond dimension the limits allow (a solve takes
+    some tens of half sweeps, most of them at smaller bonds). An accuracy that is reached earlier costs less."""
     settings = settings or QuantumSettings()
     up = np.tile([0.0, 0.0, 1.0], (op.sites, 1))
     problem = prepare(op, up)
@@ -171,11 +174,14 @@ class _Solver:
         return turned.rotated(flip).allclose(turned, 1e-12, 1e-13 * self.problem.norm)
 
     def _finish(self, run: Run) -> None:
+        unmixings = 0
         while True:
             while not run.finished:
                 run.advance()
                 self._save(run)
-            if self._unmixed(run):
+            # Few states cannot hold one parity alone and mix again: hence the limit.
+            if unmixings < 2 and self._unmixed(run):
+                unmixings += 1
                 continue
             levels = wanted_levels(run.chain, self.problem, run.limits.goal)
             if levels is None:
@@ -186,7 +192,8 @@ class _Solver:
             run.allowed *= 10
 
     def _unmixed(self, run: Run) -> bool:
-        """Replace a mixture of states of both spin-flip parities by the lower part and sweep once more; whether that was needed."""
+        """Replace a mixture of states of both spin-flip parities by the lower part and sweep once more; whether that
+        was needed."""
         chain = run.chain
         if not self.problem.conserved or 2 * chain.total != round(2 * self.problem.spins.sum()) or not self.flips:
             return False
@@ -194,7 +201,7 @@ class _Solver:
             return False
         parts = [spin_flip.parity_part(chain, sign) for sign in (1.0, -1.0)]
         energies = [variance.at_centre(part)[0] for part in parts]
-        if min(energies) > run.energy - self.limits.floor:
+        if min(energies) > run.energy - max(self.limits.floor, NOTABLE * run.error):
             return False
         run.chain = parts[int(np.argmin(energies))]
         run.repeat()

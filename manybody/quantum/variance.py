@@ -1,8 +1,8 @@
 """Energy and energy variance of a matrix-product state without squaring the operator.
 
-|| (H - E) psi ||^2 is summed over bonds as the squared norm of the part of H psi that leaves the right space of a bond while staying in
-the left space times one free site (Hubig, Haegeman, Schollwoeck 2018, Phys. Rev. B 97, 045125): exact for terms of neighbouring sites, a
-lower estimate for terms of longer range.
+|| (H - E) psi ||^2 is summed over bonds as the squared norm of the part of H psi that leaves the right space of a bond
+while staying in the left space times one free site (Hubig, Haegeman, Schollwoeck 2018, Phys. Rev. B 97, 045125): exact
+for terms of neighbouring sites, a lower estimate for terms of longer range.
 """
 
 import numpy as np
@@ -13,7 +13,8 @@ from manybody.quantum.compiled import compiled
 
 
 def measure(chain: Chain) -> tuple[float, float]:
-    """(energy, variance), constant left out. Moves the centre to the far end and mirrors the chain; the state does not change."""
+    """(energy, variance), constant left out. Moves the centre to the far end and mirrors the chain; the state does not
+    change."""
     energy, variance = at_centre(chain)
     for site in range(chain.length - 1):
         variance += leaving(chain, site)
@@ -50,8 +51,9 @@ def leaving(chain: Chain, site: int) -> float:
 
 
 def residual_halves(chain: Chain, site: int):
-    """The two-site residual on (site, site + 1) in two halves, near and far, to be multiplied per middle charge; the right space `own` by
-    right as seen from the far end; (rows, columns, offset) of both; dims of the bond over all charges the two sites reach; these."""
+    """The two-site residual on (site, site + 1) in two halves, near and far, to be multiplied per middle charge; the
+    right space `own` by right as seen from the far end; (rows, columns, offset) of both; dims of the bond over all
+    charges the two sites reach; these."""
     left, bond, after = chain.bonds[site : site + 3]
     local = chain.local[site : site + 2]
     reach = blocks.reachable(left.charges, after.charges, *local)
@@ -65,7 +67,8 @@ def residual_halves(chain: Chain, site: int):
     here, there = chain.operators[site], chain.other_operators[chain.length - 2 - site]
     steps = chain.plan(here, left, bond, local[0], -1, here.end, bra)
     turned_steps = chain.plan(there, turned_after, turned_bond, local[1], -1, there.start, turned_bra)
-    # An operator finished on the left leaves the right space alone; the channel of those not yet begun completes the residual.
+    # An operator finished on the left leaves the right space alone; the channel of those not yet begun completes the
+    # residual.
     tensor = chain.turned_tensor(site + 1)
     near = contraction.half(chain.tensor(site), chain.left_by_ket(site), steps)
     by_ket = blocks.to_ket(chain.right[site + 2], *turned_after.pair, there.delta_left, there.start)

@@ -1,7 +1,8 @@
 """How often the stated error of a matrix-product energy holds, and how much it exaggerates.
 
-Runs are stopped early on purpose: small bond dimensions, loose accuracies. Truths come from exact diagonalization of random clusters, rings,
-ladders and trees with S = 1/2 ... 5/2, and from Bethe-ansatz chains of up to 256 sites (data/reference_values.csv).
+Runs are stopped early on purpose: small bond dimensions, loose accuracies. Truths come from exact diagonalization of
+random clusters, rings, ladders and trees with S = 1/2 ... 5/2, and from Bethe-ansatz chains of up to 256 sites
+(data/reference_values.csv).
 
     python tests/benchmarks/calibration.py [--cases 240] [--seed 7] [--list]
 """
@@ -69,7 +70,9 @@ def random_case(rng: np.random.Generator) -> tuple[str, SpinOperator]:
     if kind == "ladder":
         n -= n % 2
     pairs = graph(kind, n, rng)
-    flavour = str(rng.choice(["uniform", "random", "xxz", "field", "antisymmetric", "canted", "anisotropic", "biquadratic"]))
+    flavour = str(
+        rng.choice(["uniform", "random", "xxz", "field", "antisymmetric", "canted", "anisotropic", "biquadratic"])
+    )
     f = exchange(n, pairs, 1.0)
     if flavour == "random":
         f = exchange(n, pairs, rng.normal(size=(len(pairs), 1, 1)))

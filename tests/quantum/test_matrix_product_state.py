@@ -53,7 +53,8 @@ def test_quimb_state_has_the_energy_and_norm_and_observables_are_exact(name):
     exact = exact_ground_state(op, QuantumSettings(observables=EVERYTHING))
     assert abs(ours.energy - exact.energy) < 1e-10
     for quantity in ("moments", "moments_squared", "correlations", "coherent_overlap"):
-        # A ground state of S^z and its mirror image differ in the sign of moments only; none is degenerate here but by that.
+        # A ground state of S^z and its mirror image differ in the sign of moments only; none is degenerate here but by
+        # that.
         found, wanted = ours.observables[quantity], exact.observables[quantity]
         np.testing.assert_allclose(found, wanted, atol=2e-6, err_msg=quantity)
     if np.array_equal(ours.observables["entanglement_order"], exact.observables["entanglement_order"]):

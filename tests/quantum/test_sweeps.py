@@ -110,8 +110,6 @@ def test_all_pairs_of_40_sites():
     assert np.isfinite(found.energy) and found.hit_bond_limit
 
 
-
-
 @pytest.mark.parametrize("spin", [0.5, 1.0, 2.5])
 def test_one_site(spin):
     op = quantize(couplings.field(1, [0], [0.3, 0.0, 0.4]) + couplings.anisotropy(1, [0], [1, 0, 0], -0.2), spin)
@@ -138,9 +136,10 @@ def test_sectors_of_ferromagnets_fields_and_ferrimagnets():
     found = solve(heisenberg(n, chain(n), 1.0, -1.0), n - 1.0)
     assert found.sector == n and abs(found.energy + n - 1) < 1e-11 and found.bond_dimension == 1
     assert found.error < 1e-10
-    # Ferrimagnet: by Lieb and Mattis (1962, J. Math. Phys. 3, 749) the ground state has the moment of the sublattices' difference.
+    # Ferrimagnet: by Lieb and Mattis (1962, J. Math. Phys. 3, 749) the ground state has the moment of the sublattices'
+    # difference.
     spins = np.tile([0.5, 1.0], 4)
-    op = quantize(couplings.exchange(n, chain(n), np.array([s * t for s, t in zip(spins, spins[1:])])[:, None, None]), spins)
+    op = heisenberg(n, chain(n), spins)
     found = solve(op, accuracy=1e-9)
     exact = exact_ground_state(op)
     assert abs(found.energy - exact.energy) < 1e-7 and found.sector == 2
@@ -152,7 +151,8 @@ def test_sectors_of_ferromagnets_fields_and_ferrimagnets():
 
 
 def test_free_end_spins_of_a_spin_one_chain_do_not_pass_for_the_ground_state():
-    # The lowest state of S^z = 1 is the triplet; from 24 to 36 sites its distance falls exponentially (Kennedy 1990, from memory:
+    # The lowest state of S^z = 1 is the triplet; from 24 to 36 sites its distance falls exponentially (Kennedy 1990,
+    # from memory:
     # J. Phys. Condens. Matter 2, 5737, correlation length about 6), while a mixture of both lies half way.
     n = 36
     op = heisenberg(n, chain(n), 1.0)
@@ -198,7 +198,9 @@ def test_progress_and_resuming_in_the_middle(monkeypatch, tmp_path):
     assert again[0]["energy"] < first.energy + 1e-3 and len(again) < len(seen) + 8
     assert second.energy <= first.energy and second.error < first.error
     # A state of another model is not taken up.
-    other = matrix_product_ground_state(heisenberg(16, chain(16), 1.0), QuantumSettings(accuracy=1e-4), None, 16.0, None, path)
+    other = matrix_product_ground_state(
+        heisenberg(16, chain(16), 1.0), QuantumSettings(accuracy=1e-4), None, 16.0, None, path
+    )
     assert other.energy > second.energy + 0.5
 
 
