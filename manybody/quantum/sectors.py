@@ -14,6 +14,9 @@ from manybody.quantum.start_state import projected_product
 SMEAR = 0.97
 """A start along the conserved axis is opened by arccos(SMEAR), so that all charges near the wanted one take part."""
 
+FEW = 8
+"""Up to this many steps between the extreme charges, all are tried."""
+
 
 def start_chain(problem: Problem, directions: np.ndarray, total: int, sharp: bool = False) -> Chain:
     """Chain in a projected coherent product state of the given total charge, ready for sweeps.
@@ -111,9 +114,26 @@ class SectorSearch:
     def energy(self, total: int) -> float:
         return self.run(total).energy
 
-    def search(self, first: int, reach: int = 2) -> int:
-        """The total charge of lowest energy, found downhill from `first`, looking `reach` steps to either side."""
-        best = int(np.clip(first, self.lowest, self.highest))
+    def search(self, first: int) -> int:
+        """The total charge of lowest energy: downhill from `first`, then from any probe that lies lower.
+
+        Probes are all charges where they are few, else the ends and the charges half way to them, since energies need
+        not be convex in the charge.
+        """
+        best = self._downhill(int(np.clip(first, self.lowest, self.highest)))
+        if self.multiplets:
+            probes = [self.lowest]
+        elif self.highest - self.lowest <= FEW:
+            probes = list(range(self.lowest, self.highest + 1))
+        else:
+            probes = [self.lowest, self.highest, (self.lowest + best) // 2, (best + self.highest) // 2]
+        for total in probes:
+            if total != best and self._better(total, best):
+                best = self._downhill(total)
+        return best
+
+    def _downhill(self, best: int, reach: int = 2) -> int:
+        """Looks `reach` steps to either side."""
         while True:
             steps = (1, -1) if self.multiplets else (1, -1, *(s * k for k in range(2, reach + 1) for s in (1, -1)))
             around = [best + step for step in steps if self.lowest <= best + step <= self.highest]
