@@ -22,7 +22,7 @@ class Stage:
     ratio: float
 
 
-SAFETY = 2.0
+SAFETY = 3.0
 
 
 def energy_error(stages: list[Stage], floor: float) -> float:

@@ -37,13 +37,13 @@ def test_error_of_exactly_linear_stages_is_a_small_multiple_of_the_distance():
     stages = [stage(8, -7.0, 10.0, 0.0)]
     stages += [stage(16 * 2**k, truth + slope * v, v, v / 50) for k, v in enumerate((1e-2, 1e-3, 1e-4))]
     error = energy_error(stages, 1e-14)
-    assert slope * 1e-4 <= error <= 4 * slope * 1e-4
+    assert slope * 1e-4 <= error <= 5 * slope * 1e-4
 
 
 def test_error_never_falls_below_rounding_and_grows_with_slow_sweeps():
     exact = [stage(4, -3.0, 1.0, 0.0), stage(16, -4.0, 1e-28, 0.0), stage(16, -4.0, 1e-28, 0.0)]
     assert energy_error(exact, 1e-13) == 1e-13
     crawling = [*exact[:2], stage(16, -4.0, 1e-28, 0.0, 1e-5, 0.9)]
-    assert np.isclose(energy_error(crawling, 1e-13), 2 * 1e-5 * 9)
+    assert np.isclose(energy_error(crawling, 1e-13), 3 * 1e-5 * 9)
     lonely = [stage(4, -3.0, 0.25, 0.0)]
     assert energy_error(lonely, 1e-13) >= 0.5
