@@ -20,20 +20,24 @@ def lowest(tensor, left, right, steps, vectors, tolerance):
     product = np.empty(size, tensor.dtype)
     buffers = (np.empty(sizes[1], tensor.dtype), np.zeros(sizes[2], tensor.dtype), np.empty(sizes[3], tensor.dtype))
     projected = np.zeros((vectors, vectors))
-    basis[0] = tensor / np.sqrt(np.sum((tensor * np.conj(tensor)).real))
+    basis[0] = tensor / np.sqrt(np.vdot(tensor, tensor).real)
     used = 0
     value = 0.0
     residual = 0.0
     weights = np.ones(1)
     for k in range(vectors):
         apply(basis[k], product, left, right, steps, buffers)
-        projected[k, k] = np.sum((np.conj(basis[k]) * product).real)
+        projected[k, k] = np.vdot(basis[k], product).real
         used = k + 1
-        known = basis[:used]
+        norm = np.sqrt(np.vdot(product, product).real)
+        # A second round only where the first one cancelled most digits.
         for _ in range(2):
-            overlap = np.dot(np.conj(known), product)
-            product -= np.dot(overlap, known)
-        norm = np.sqrt(np.sum((product * np.conj(product)).real))
+            before = norm
+            for j in range(used):
+                subtract(product, np.vdot(basis[j], product), basis[j])
+            norm = np.sqrt(np.vdot(product, product).real)
+            if norm > 0.05 * before:
+                break
         if used == 1:
             value, weights = projected[0, 0], np.ones(1)
         else:
@@ -47,6 +51,13 @@ def lowest(tensor, left, right, steps, vectors, tolerance):
         basis[k + 1] = product / norm
     result = np.zeros(size, tensor.dtype)
     for k in range(used):
-        result += weights[k] * basis[k]
-    result /= np.sqrt(np.sum((result * np.conj(result)).real))
+        subtract(result, -weights[k], basis[k])
+    result /= np.sqrt(np.vdot(result, result).real)
     return value, result, residual, used
+
+
+@compiled
+def subtract(target, factor, vector):
+    """target -= factor * vector in place."""
+    for x in range(target.size):
+        target[x] -= factor * vector[x]

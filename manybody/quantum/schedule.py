@@ -96,7 +96,7 @@ class Run:
         gains = [np.inf]
         while len(energies) < MOST_SWEEPS:
             before = self.chain.bond_dimension
-            energy, discarded, bounded = self._half_sweep(FRACTION)
+            energy, discarded, bounded = self._half_sweep()
             energies.append(energy)
             self._tell(energy, discarded)
             if len(energies) == 1:
@@ -117,7 +117,7 @@ class Run:
         self.stages.append(Stage(self.chain.bond_dimension, energy, spread, discarded, gains[-1], ratio))
         self._tell(energy, discarded, spread)
 
-    def _half_sweep(self, fraction: float) -> tuple[float, float, bool]:
+    def _half_sweep(self) -> tuple[float, float, bool]:
         """Energy at the end, summed discarded weight, whether the bond limit cut more than the allowed weight."""
         chain, limits = self.chain, self.limits
         energy, total, bounded = 0.0, 0.0, False
@@ -126,9 +126,8 @@ class Run:
             if limits.pairs:
                 energy, lost = two_site.step(chain, site, self.ceiling, self.allowed, self.vectors, tolerance)
             else:
-                if fraction:
-                    ceiling = self.ceiling + max(4, int(fraction * self.ceiling))
-                    expansion.expand(chain, site, fraction, ceiling, self.rng)
+                ceiling = self.ceiling + max(4, int(FRACTION * self.ceiling))
+                expansion.expand(chain, site, FRACTION, ceiling, self.rng)
                 energy = one_site.solve(chain, site, self.vectors, tolerance)
                 lost = one_site.move(chain, site, self.ceiling, self.allowed)
             total += lost
