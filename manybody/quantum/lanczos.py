@@ -30,13 +30,13 @@ def lowest(tensor, left, right, steps, vectors, tolerance):
         projected[k, k] = np.vdot(basis[k], product).real
         used = k + 1
         norm = np.sqrt(np.vdot(product, product).real)
-        # A second round only where the first one cancelled most digits.
+        # One round leaves errors that the next products multiply by |energy| / norm; two are enough.
         for _ in range(2):
             before = norm
             for j in range(used):
                 subtract(product, np.vdot(basis[j], product), basis[j])
             norm = np.sqrt(np.vdot(product, product).real)
-            if norm > 0.05 * before:
+            if norm > 0.7 * before:
                 break
         if used == 1:
             value, weights = projected[0, 0], np.ones(1)

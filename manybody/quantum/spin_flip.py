@@ -93,9 +93,33 @@ def parity_part(chain: Chain, sign: float) -> Chain:
                     b = second[q, s] * (sign if site == 0 else 1.0)
                     block[block.shape[0] - b.shape[0] :, block.shape[1] - b.shape[1] :] += b
         new.append(result)
-    joined = Chain(list(chain.local), list(chain.operators), summed, new, chain.total)
+    joined = Chain(
+        list(chain.local), list(chain.operators), summed, new, chain.total,
+        reverse=chain.reverse, other_operators=list(chain.other_operators),
+    )  # fmt: skip
     joined.prepare()
     return joined
+
+
+def other_parity(chain: Chain) -> Chain | None:
+    """S^z psi, S^z of the first site in view, normalized, ready for sweeps; None where it vanishes."""
+    left, right, local = chain.bonds[0], chain.bonds[1], chain.local[0]
+    target, column, width, start, _ = blocks.by_left(*left.pair, *right.pair, local)
+    tensor = chain.tensor(0).copy()
+    for i in range(left.charges.size):
+        matrix = tensor[start[i] : start[i] + left.dims[i] * width[i]].reshape(left.dims[i], width[i])
+        for s, c in enumerate(local.tolist()):
+            if target[i, s] >= 0:
+                matrix[:, column[i, s] : column[i, s] + right.dims[target[i, s]]] *= c - local.max() / 2
+    if np.linalg.norm(tensor) < 1e-6:
+        return None
+    tensors = [tensor, *(chain.tensor(site).copy() for site in range(1, chain.length))]
+    new = Chain(
+        list(chain.local), list(chain.operators), list(chain.bonds), tensors, chain.total,
+        reverse=chain.reverse, other_operators=list(chain.other_operators),
+    )  # fmt: skip
+    new.prepare()
+    return new
 
 
 def _union(first: Bond, second: Bond) -> Bond:

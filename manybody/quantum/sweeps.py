@@ -103,6 +103,7 @@ class _Solver:
             return self._single()
         run = self._restored() or self._chosen()
         self._finish(run)
+        run = self._lower_parity(run)
         other = self._guard(run)
         if other.energy < run.energy - max(run.error, self.limits.floor):
             self._finish(other)
@@ -191,11 +192,34 @@ class _Solver:
             run.stages.clear()
             run.allowed *= 10
 
+    def _has_parity(self, chain: Chain) -> bool:
+        central = 2 * chain.total == round(2 * self.problem.spins.sum())
+        return self.problem.conserved and central and self.flips
+
+    def _lower_parity(self, run: Run) -> Run:
+        """The run, or one of the other spin-flip parity if that ends lower.
+
+        S^z of the first site changes the parity and hardly anything else where nearly free spins sit at the ends. Its
+        run is refined until its error puts it above the first one.
+        """
+        if not self._has_parity(run.chain):
+            return run
+        chain = spin_flip.other_parity(run.chain)
+        if chain is None:
+            return run
+        other = Run(chain, self.limits, self.rng, None)
+        other.advance()
+        while not other.finished and other.energy - other.error <= run.energy:
+            other.advance()
+        if other.energy < run.energy:
+            self._finish(other)
+        return other if other.energy < run.energy else run
+
     def _unmixed(self, run: Run) -> bool:
         """Replace a mixture of states of both spin-flip parities by the lower part and sweep once more; whether that
         was needed."""
         chain = run.chain
-        if not self.problem.conserved or 2 * chain.total != round(2 * self.problem.spins.sum()) or not self.flips:
+        if not self._has_parity(chain):
             return False
         if abs(spin_flip.overlap(chain)) > 1 - MIXED:
             return False

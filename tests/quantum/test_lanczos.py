@@ -1,0 +1,38 @@
+"""Lanczos on the effective operator of a pair: the vector returned has the energy returned, however many products."""
+
+import numpy as np
+import pytest
+from spin_models import chain, heisenberg
+
+from manybody.quantum import blocks, lanczos, two_site, variance
+from manybody.quantum.problem import prepare
+from manybody.quantum.sectors import start_chain
+
+
+@pytest.mark.parametrize("vectors", [1, 2, 5, 16, 40])
+def test_energy_belongs_to_the_vector_and_falls_with_products(vectors):
+    # A constant far from zero, 30 sites, makes lost orthogonality visible at once.
+    op = heisenberg(30, chain(30), 1.0)
+    up = np.eye(3)[np.full(30, 2)] * ((-1.0) ** np.arange(30))[:, None]
+    problem = prepare(op, up)
+    state = start_chain(problem, up, 30, sharp=True)
+    for _ in range(4):
+        for site in range(29):
+            two_site.step(state, site, 40, 1e-10, 3, 0.0)
+        state.mirror()
+    for site in range(14):
+        state.shift(site)
+        state.advance(site)
+    left, right, local = state.bonds[14], state.bonds[16], state.local[14:16]
+    pair = two_site.join(state, 14)
+    operator = state.pair_operator(14)
+    steps = state.plan(operator, left, right, blocks.pair_charges(*local), operator.end, -1)
+    environments = state.left_by_ket(14), state.right[16]
+    first = np.vdot(pair, variance.image(pair, *environments, steps)) / np.vdot(pair, pair)
+    energy, vector, residual, used = lanczos.lowest(pair, *environments, steps, vectors, 0.0)
+    image = variance.image(vector, *environments, steps)
+    assert used == min(vectors, pair.size)
+    assert abs(np.linalg.norm(vector) - 1) < 1e-13
+    np.testing.assert_allclose(np.vdot(vector, image), energy, rtol=1e-13)
+    np.testing.assert_allclose(np.linalg.norm(image - energy * vector), residual, rtol=1e-3, atol=1e-11)
+    assert energy <= first + 1e-12
