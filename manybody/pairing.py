@@ -150,16 +150,29 @@ def bounds_part(f: EnergyFunction, spin: float, rule: str, settings, classical: 
     op = quantize(f, spin, rule)
     starts = np.concatenate([harmonic["selected"][None], classical["minima"]])
     part, messages = {}, []
+    lower, upper = op.lower_symbol(), op.upper_symbol()
     # Both symbols are close to f, whose minima are among the starts: a few random ones suffice beside them.
-    coherent = find_ground_state(op.lower_symbol(), starts=8, extra_starts=starts, prove=False).result
-    part["coherent_energy"] = coherent.energy
-    proof = find_ground_state(op.upper_symbol(), starts=8, extra_starts=starts).certificate
-    if proof.rigorous:
-        part["upper_symbol_energy"] = proof.bound
-        part["upper_symbol_certified"] = proof.certified
+    if _multiple(f, lower) is not None:
+        coherent = classical["configuration"]
+        part["coherent_energy"] = float(lower.value(coherent))
     else:
+        found = find_ground_state(lower, starts=8, extra_starts=starts, prove=False).result
+        coherent = found.configuration
+        part["coherent_energy"] = found.energy
+    rigorous = classical["classical_bound_method"] != "clusters_searched"
+    if rigorous and (multiple := _multiple(f, upper)) is not None:
+        factor, shift, slack = multiple
+        part["upper_symbol_energy"] = factor * classical["classical_energy_bound"] + shift - slack
+        part["upper_symbol_certified"] = classical["classical_certified"]
+    elif rigorous:
+        proof = find_ground_state(upper, starts=8, extra_starts=starts).certificate
+        if proof.rigorous:
+            part["upper_symbol_energy"] = proof.bound
+            part["upper_symbol_certified"] = proof.certified
+    # Where the bound of f itself rests on searched clusters, that of a symbol with the same terms would, too.
+    if "upper_symbol_energy" not in part:
         messages.append("no rigorous bound of the upper symbol is known")
-    product = product_energy(op, np.concatenate([coherent.configuration[None], starts]))
+    product = product_energy(op, np.concatenate([coherent[None], starts]))
     part["product_energy"] = product.energy
     if not product.converged:
         messages.append("the product state did not converge")
@@ -187,6 +200,27 @@ def assemble(spin: float, classical: dict, harmonic: dict, quantum: dict, bounds
         part.get(f"{name}_seconds", 0.0) for name, part in zip(PARTS[1:], (harmonic, quantum, bounds))
     )
     return record
+
+
+def _multiple(f: EnergyFunction, g: EnergyFunction) -> tuple[float, float, float] | None:
+    """(factor, shift, slack) with |g - (factor f + shift)| <= slack everywhere, slack being rounding; None if not so.
+
+    Symbols of pair exchange are multiples of f, and the upper symbol under toeplitz is f: its minima need no search.
+    """
+    terms, others = ([group for group in h.groups if any(group.ranks)] for h in (f, g))
+    if [t.key for t in terms] != [t.key for t in others]:
+        return None
+    if any(not np.array_equal(t.sites, o.sites) for t, o in zip(terms, others, strict=True)):
+        return None
+    largest = [max((float(np.abs(t.coefficients).max()) for t in some), default=1.0) for some in (others, terms)]
+    factor = largest[0] / largest[1]
+    difference = sum(float(np.abs(o.coefficients - factor * t.coefficients).sum()) for t, o in zip(terms, others))
+    size = sum(float(np.abs(o.coefficients).sum()) for o in others)
+    if not difference <= 1e-13 * size:
+        return None
+    # |C_kq| <= 1, so the sum over coefficients bounds the difference of the functions.
+    shift = g.mean - factor * f.mean
+    return factor, shift, difference + 4 * np.finfo(float).eps * (size + abs(g.mean) + abs(factor * f.mean))
 
 
 def _stop(state) -> str:

@@ -2,7 +2,7 @@
 
 import numpy as np
 import pytest
-from dense import dense_operator, ground_energy, random_polynomial, seeds, spins
+from dense import dense_operator, ground_energy, random_polynomial, seeds, spins, unit_vectors
 from hypothesis import assume, given, settings
 from hypothesis import strategies as st
 from reference import reference
@@ -85,6 +85,21 @@ def test_symbols_of_a_dimer():
     assert record["upper_symbol_energy"] == pytest.approx(-((2.5 / 1.5) ** 2), rel=1e-9)
     assert record["upper_symbol_certified"]
     assert record["cluster_bound"] == pytest.approx(record["quantum_energy"], rel=1e-10)
+
+
+@pytest.mark.parametrize("rule", RULES)
+def test_symbols_that_are_multiples_need_no_search_and_give_the_same(rule):
+    f = exchange(3, [(0, 1), (1, 2), (2, 0)], [1.0, 0.7, 1.2]) + 0.4
+    op = quantize(f, 1.5, rule)
+    for symbol in (op.lower_symbol(), op.upper_symbol()):
+        factor, shift, slack = pairing._multiple(f, symbol)
+        n = unit_vectors(3, 50, 3)
+        np.testing.assert_allclose(factor * f.value(n) + shift, symbol.value(n), rtol=0, atol=slack)
+        assert slack < 1e-13
+    # a field scales differently from exchange, except where the symbol is f itself
+    both = f + field(3, [0], [0.1, 0.2, 0.3])
+    same = pairing._multiple(both, quantize(both, 1.5, rule).upper_symbol()) is not None
+    assert same == (rule == "toeplitz")
 
 
 def test_product_state_that_is_not_coherent():
