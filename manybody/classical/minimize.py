@@ -1,8 +1,8 @@
 """Minima of an energy function on the product of spheres: many starts, descent, polishing, distinct minima.
 
-Quadratic functions run through compiled alignment sweeps and Newton steps, one start after the other; functions of
-higher degree through batched quasi-Newton and Newton steps. Starts come in rounds, so that a proof of global minimality
-can end the search.
+Quadratic functions run through compiled alignment sweeps and Newton steps, one start after the other, with more than
+LONG_WAVES sites preconditioned (patches.py); functions of higher degree through batched quasi-Newton and Newton steps.
+Starts come in rounds, so that a proof of global minimality can end the search.
 """
 
 import math
@@ -18,6 +18,8 @@ from manybody.classical.sphere_product import normalized, random_points
 from manybody.model.energy import EnergyFunction
 
 LARGE = 300_000  # sites from which a frustrated function gets one start, from the lowest eigenvectors
+LONG_WAVES = 100_000  # sites from which Newton steps are preconditioned by rotations of patches
+PATCH_PRODUCTS = 2_000_000_000  # sites x Hessian products that such a descent may spend
 
 
 @dataclass(frozen=True)
@@ -177,10 +179,18 @@ class QuadraticProblem:
             # long waves
             compiled.descend(x[k], *arrays, self.shifted, self.field, 1.0, min(10, settings.sweeps), 1e-2 * strength)
             compiled.descend(x[k], *arrays, self.shifted, self.field, 1.7, settings.sweeps, 5e-3 * strength)
-            energy, gradients[k], _ = compiled.newton(
-                x[k], *arrays, form.diagonal, self.field,
-                settings.tolerance * strength, strength, settings.newton_steps, inner, budget,
-            )  # fmt: skip
+            goal = settings.tolerance * strength
+            if form.sites > LONG_WAVES:
+                from manybody.classical import patches
+
+                energy, gradients[k], _ = patches.newton(
+                    x[k], (*arrays, form.diagonal), self.field, goal, strength, settings.newton_steps,
+                    PATCH_PRODUCTS // form.sites,
+                )  # fmt: skip
+            else:
+                energy, gradients[k], _ = compiled.newton(
+                    x[k], *arrays, form.diagonal, self.field, goal, strength, settings.newton_steps, inner, budget
+                )
             energies[k] = energy + form.constant
         return polish.Polished(x, energies, gradients)
 

@@ -6,6 +6,7 @@ import functools
 
 import numpy as np
 import scipy.sparse as sp
+from scipy.linalg import eigvalsh_tridiagonal
 from scipy.sparse.csgraph import breadth_first_order, connected_components, minimum_spanning_tree
 from scipy.sparse.linalg import LinearOperator, eigsh
 
@@ -13,6 +14,7 @@ from manybody.classical.site_form import SiteForm
 from manybody.classical.sphere_product import normalized
 
 FILTER_ROUNDS = 8
+MANY = 100_000  # sites beyond which the filter is set up by plain Lanczos steps, and half the rounds must do
 DENSE_EIGENVECTORS = 800  # matrix dimension up to which the lowest eigenspace is computed in full
 
 
@@ -70,6 +72,10 @@ class LowestModes:
         # everything within (6 / degree)^2 of the lowest eigenvalue, relative to the width, is amplified by up to
         # exp(12); the filter is only as sharp as the lowest eigenvalue is known
         sharpness = (6.0 / degree) ** 2
+        if form.sites > MANY:
+            low, high = _spectrum_ends(form.matrix().dot if form.isotropic else apply, first, form, degree)
+            width = max(high - low, 1e-300)
+            return degree, low + width * sharpness, high + 0.02 * width
         low, high = (
             float(eigsh(operator, k=1, which=end, tol=tol, v0=first, ncv=40, return_eigenvectors=False)[0])
             for end, tol in {"SA": 0.2 * sharpness, "LA": 1e-2}.items()
@@ -86,7 +92,7 @@ class LowestModes:
         out, multipliers, none = np.empty((form.sites, 3)), np.empty(form.sites), np.zeros((form.sites, 3))
         x = generator.standard_normal((form.sites, 3))
         energy = np.inf
-        for _ in range(2 if wide else FILTER_ROUNDS):
+        for _ in range(2 if wide else FILTER_ROUNDS if form.sites <= MANY else FILTER_ROUNDS // 2):
             before = x.copy()
             product(before, *arrays, out)
             now = (out - centre * before) / half
@@ -102,6 +108,25 @@ class LowestModes:
             if energy > last - 1e-4 * abs(energy):
                 break
         return x
+
+
+def _spectrum_ends(apply, first: np.ndarray, form: SiteForm, steps: int) -> tuple[float, float]:
+    """Lowest and highest eigenvalue by Lanczos steps that keep three vectors only: copies of converged values appear,
+    but the ends stay right.
+    """
+    now = first[: form.sites] if form.isotropic else first
+    now, before = now / np.linalg.norm(now), np.zeros_like(now)
+    diagonal, beside = [], [0.0]
+    for _ in range(steps):
+        image = apply(now) - beside[-1] * before
+        diagonal.append(float(image @ now))
+        image -= diagonal[-1] * now
+        beside.append(float(np.linalg.norm(image)))
+        if beside[-1] <= 1e-12 * max(abs(diagonal[0]), *beside, 1e-300):
+            break
+        before, now = now, image / beside[-1]
+    ends = eigvalsh_tridiagonal(np.array(diagonal), np.array(beside[1:-1]))
+    return float(ends[0]), float(ends[-1])
 
 
 def placed_start(form: SiteForm, generator: np.random.Generator) -> np.ndarray:
