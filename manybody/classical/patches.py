@@ -1,10 +1,10 @@
 """Long waves of large systems: patches of sites that turn as a whole.
 
 A Newton step on 10^6 sites takes conjugate gradients thousands of products, since slow twists of the configuration are
-soft. Common rotations of patches of some ten sites span these twists. The Hessian restricted to them is small enough to
-be factorized; its inverse plus a multiple of the identity on the single sites is the preconditioner, with which the
-number of products no longer grows with the system (two-level additive preconditioner by aggregation: Nicolaides 1987,
-SIAM J. Numer. Anal. 24, 355, from memory).
+soft. Common rotations of patches of about a hundred sites span these twists. The Hessian restricted to them is small
+enough to be factorized; its inverse plus a multiple of the identity on the single sites is the preconditioner, with
+which the number of products no longer grows with the system (two-level additive preconditioner by aggregation:
+Nicolaides 1987, SIAM J. Numer. Anal. 24, 355, from memory).
 """
 
 import numpy as np
@@ -14,21 +14,22 @@ from scipy.sparse.linalg import splu
 
 from manybody.classical.vector_sweeps import gradient, hessian_product, retract
 
+BALL = 160  # sites around the centre of a patch that are no centres themselves
 MOST_PRODUCTS = 400  # of one Newton step
 REFRESH = 20  # Hessian products that take as long as a new preconditioner
 
 
 @njit(cache=True)
-def patches(indptr, neighbours, radius_sites):
-    """Patch number of every site (N,), and their count: centres no closer than the first `radius_sites` sites met by a
-    breadth-first walk, every site to the centre nearest along the bonds.
+def patches(indptr, neighbours, ball_sites):
+    """Patch number of every site (N,), and their count: no centre is among the first `ball_sites` sites that a
+    breadth-first walk from an earlier one meets, and every site goes to the centre nearest along the bonds.
     """
     n = len(indptr) - 1
     covered = np.zeros(n, dtype=np.bool_)
     mark = np.full(n, -1, dtype=np.int64)
     label = np.full(n, -1, dtype=np.int64)
     queue = np.empty(n, dtype=np.int64)
-    ball = np.empty(radius_sites, dtype=np.int64)
+    ball = np.empty(ball_sites, dtype=np.int64)
     count = 0
     for i in range(n):
         if covered[i]:
@@ -43,7 +44,7 @@ def patches(indptr, neighbours, radius_sites):
         while head < tail:
             for k in range(indptr[ball[head]], indptr[ball[head] + 1]):
                 j = np.int64(neighbours[k])
-                if mark[j] != i and tail < radius_sites:
+                if mark[j] != i and tail < ball_sites:
                     mark[j] = i
                     covered[j] = True
                     ball[tail] = j
@@ -117,12 +118,11 @@ def _turned(x, label, turns, v, single, out):
 class Patches:
     """The patches of one coupling graph (arrays as in vector_sweeps.py); `preconditioner` suits one configuration."""
 
-    SITES = 40
-
-    def __init__(self, indptr, neighbours, weights, blocks, diagonal):
+    def __init__(self, indptr, neighbours, weights, blocks, diagonal, ball=BALL):
         self.arrays = (indptr, neighbours, weights, blocks, diagonal)
-        self.label, self.count = patches(indptr, neighbours, self.SITES)
+        self.label, self.count = patches(indptr, neighbours, ball)
         sites = len(indptr) - 1
+        self.size = sites / self.count
         member = sp.csr_array((np.ones(sites, dtype=np.int32), self.label, np.arange(sites + 1)))
         graph = sp.csr_array((np.ones(len(neighbours), dtype=np.int32), neighbours, indptr), shape=(sites, sites))
         pattern = sp.csr_array(member.T @ (graph @ member) + sp.eye_array(self.count, dtype=np.int32))
@@ -138,7 +138,7 @@ class Patches:
         while True:
             # common rotations, and those about the axis of a collinear patch, cost nothing; away from a minimum soft
             # twists may even have negative stiffness: some is added until all are stable
-            shifted = sp.csc_array(coarse + stiffness * scale * self.SITES * sp.eye_array(size))
+            shifted = sp.csc_array(coarse + stiffness * scale * self.size * sp.eye_array(size))
             factors = splu(shifted, permc_spec="MMD_AT_PLUS_A", diag_pivot_thresh=0.0, options={"SymmetricMode": True})
             if (factors.U.diagonal() > 0).all():
                 break

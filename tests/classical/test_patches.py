@@ -37,8 +37,8 @@ def test_restricted_hessian_is_the_dense_projection(kind):
     f = model(kind)
     _, arrays, field = parts(f)
     x = random_points(np.random.default_rng(3), f.sites)
-    patch = patches.Patches(*arrays)
-    assert set(patch.label) == set(range(patch.count)) and 2 <= patch.count < f.sites / 4
+    patch = patches.Patches(*arrays, ball=20)
+    assert set(patch.label) == set(range(patch.count)) and 2 <= patch.count < f.sites / 5
     data = np.zeros((len(patch.columns), 3, 3))
     multipliers = multipliers_of(x, arrays, field)
     patches._restricted(x, patch.label, *arrays, multipliers, patch.rows, patch.columns, data)
@@ -60,7 +60,7 @@ def test_preconditioner_is_symmetric_and_positive(kind):
     _, arrays, field = parts(f)
     generator = np.random.default_rng(4)
     for x in (minimize(f, MinimizeSettings(starts=2)).configuration, random_points(generator, f.sites)):
-        apply = patches.Patches(*arrays).preconditioner(x, multipliers_of(x, arrays, field), 6.0, 1e-4)
+        apply = patches.Patches(*arrays, ball=20).preconditioner(x, multipliers_of(x, arrays, field), 6.0, 1e-4)
         u, v = generator.standard_normal((2, f.sites, 3))
         u, v = (w - np.sum(w * x, axis=1, keepdims=True) * x for w in (u, v))
         pu, pv = np.empty_like(u), np.empty_like(v)
