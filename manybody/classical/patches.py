@@ -115,6 +115,15 @@ def _turned(x, label, turns, v, single, out):
         out[i, 2] = single[i] * v[i, 2] + turns[a, 0] * x[i, 1] - turns[a, 1] * x[i, 0]
 
 
+def _positive_factors(matrix: sp.csc_array):
+    """Factorization of a symmetric matrix; None where pivots are not positive."""
+    try:
+        factors = splu(matrix, permc_spec="MMD_AT_PLUS_A", diag_pivot_thresh=0.0, options={"SymmetricMode": True})
+    except RuntimeError:  # exactly singular
+        return None
+    return factors if (factors.U.diagonal() > 0).all() else None
+
+
 class Patches:
     """The patches of one coupling graph (arrays as in vector_sweeps.py); `preconditioner` suits one configuration."""
 
@@ -135,12 +144,12 @@ class Patches:
         _restricted(x, self.label, *self.arrays, multipliers, self.rows, self.columns, data)
         size = 3 * self.count
         coarse = sp.bsr_array((data, self.columns, self.rows), shape=(size, size)).tocsc()
-        while True:
+        while True:  # ends at the latest where the stiffness exceeds the norm
             # common rotations, and those about the axis of a collinear patch, cost nothing; away from a minimum soft
             # twists may even have negative stiffness: some is added until all are stable
             shifted = sp.csc_array(coarse + stiffness * scale * self.size * sp.eye_array(size))
-            factors = splu(shifted, permc_spec="MMD_AT_PLUS_A", diag_pivot_thresh=0.0, options={"SymmetricMode": True})
-            if (factors.U.diagonal() > 0).all():
+            factors = _positive_factors(shifted)
+            if factors is not None:
                 break
             stiffness *= 10.0
         torques = np.empty((self.count, 3))
