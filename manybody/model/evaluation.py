@@ -43,12 +43,18 @@ class Evaluation:
                     numbers = numbers[:, [0, 0]]
                 else:
                     blocks = coefficients[:, CARTESIAN.argsort()[:, None], CARTESIAN.argsort()]
-                    rows.append(_block_index(numbers[:, 1], 0))
-                    columns.append(_block_index(numbers[:, 0], 1))
-                    values.append(blocks.transpose(0, 2, 1).ravel())
-                rows.append(_block_index(numbers[:, 0], 0))
-                columns.append(_block_index(numbers[:, 1], 1))
-                values.append(blocks.ravel())
+                # Zeros, most of an isotropic block, are dropped before they cost memory three times over.
+                place = np.flatnonzero(blocks)
+                row = _index_type(3 * numbers[place // 9, 0] + place % 9 // 3, sites)
+                column = _index_type(3 * numbers[place // 9, 1] + place % 3, sites)
+                value = blocks.ravel()[place]
+                rows.append(row)
+                columns.append(column)
+                values.append(value)
+                if ranks == (1, 1):
+                    rows.append(column)
+                    columns.append(row)
+                    values.append(value)
             elif len(ranks) <= 2:
                 few.append((ranks, numbers, coefficients))
             else:
@@ -350,7 +356,13 @@ def _assemble(size: int, rows: list, columns: list, values: list) -> sparse.csr_
     if not rows:
         return sparse.csr_array((size, size))
     values, rows, columns = np.concatenate(values), np.concatenate(rows), np.concatenate(columns)
-    nonzero = np.flatnonzero(values)
-    index = np.int32 if size < 2**31 else np.int64
-    parts = (values[nonzero], (rows[nonzero].astype(index), columns[nonzero].astype(index)))
-    return sparse.csr_array(sparse.coo_array(parts, shape=(size, size)))
+    if not values.all():
+        nonzero = np.flatnonzero(values)
+        values, rows, columns = values[nonzero], rows[nonzero], columns[nonzero]
+    indices = _index_type(rows, size), _index_type(columns, size)
+    return sparse.csr_array(sparse.coo_array((values, indices), shape=(size, size)))
+
+
+def _index_type(numbers: np.ndarray, size: int) -> np.ndarray:
+    """Indices in the narrowest type that holds the number of components of `size` sites."""
+    return numbers.astype(np.int32 if 3 * size < 2**31 else np.int64, copy=False)
