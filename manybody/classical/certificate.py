@@ -12,7 +12,7 @@ import numpy as np
 
 from manybody.classical.clusters import cluster_sum
 from manybody.classical.distinct import coupled_sites
-from manybody.classical.minimize import MinimizeSettings, problem_of, rescaled
+from manybody.classical.minimize import MinimizeSettings, problem_of
 from manybody.classical.multipliers import DualForm, dual_bound, dual_form, multipliers_at
 from manybody.classical.relaxation import relax, rounded
 from manybody.model.energy import EnergyFunction
@@ -80,7 +80,7 @@ class Prover:
         self.none = np.zeros((0, f.sites, 3))
         self.starts, self.rank, self.rigorous, self.calls = self.none, 0, True, 0
         self.relaxed = self.clustered = False
-        self.scaled, self.exponent = rescaled(f)
+        self.scaled, self.exponent = f.rescaled()
         if not coupled_sites(f).any():
             self.bound, self.method = self.scaled.mean, "constant"
         elif self.scaled.is_quadratic:

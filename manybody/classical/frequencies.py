@@ -18,7 +18,6 @@ import scipy.sparse as sp
 from scipy.linalg import svdvals
 
 from manybody.classical.distinct import coupled_sites
-from manybody.classical.minimize import rescaled
 from manybody.classical.sphere_product import tangent_frames
 from manybody.model.energy import EnergyFunction
 from manybody.model.quantization import RULES, lower_symbol_correction
@@ -78,7 +77,7 @@ def fluctuations(f: EnergyFunction, n: np.ndarray) -> Fluctuations:
         raise ValueError(f"the configuration must have shape ({f.sites}, 3), got {n.shape}")
     if not coupled_sites(f).any():
         return Fluctuations(np.zeros(f.sites), f.sites, 0.0, np.zeros((0, f.sites, 3)))
-    scaled, exponent = rescaled(f)
+    scaled, exponent = f.rescaled()
     gradient = np.linalg.norm(scaled.gradient(n), axis=1).max()
     hessian = scaled.hessian_sparse(n)
     size = max(float(abs(hessian).sum(axis=1).max()), gradient, 1e-300)

@@ -18,7 +18,6 @@ from manybody.classical.minimize import (
     MinimizeSettings,
     minimize,
     problem_of,
-    rescaled,
 )
 from manybody.classical.sphere_product import normalized, project, retract
 from manybody.model.couplings import biquadratic
@@ -120,7 +119,7 @@ class _Search:
         self.allowed = int(np.clip(settings.work / largest**3, 1, settings.evaluations))
         self.spent, self.exhausted = 0, True
         self.axes = f.symmetry_axes()
-        scaled, _ = rescaled(f)
+        scaled, _ = f.rescaled()
         newton = MinimizeSettings(starts=1, sweeps=0)
         self.problem = problem_of(scaled, newton)
         self.comparison = Comparison(f)
@@ -196,7 +195,7 @@ class _Search:
         pairs = {tuple(sites) for g in self.f.groups for sites in g.sites.tolist() if len(sites) == 2}
         if not pairs or self.f.sites > 400:
             return []
-        scaled, _ = rescaled(self.f)
+        scaled, _ = self.f.rescaled()
         extra = biquadratic(self.f.sites, np.array(sorted(pairs)), 1.0)
         found = []
         for sign in (-1.0, 1.0):

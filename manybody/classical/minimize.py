@@ -93,7 +93,7 @@ def minimize(
         up = np.tile([0.0, 0.0, 1.0], (f.sites, 1))
         energy = float(f.value(up))
         return ClassicalResult(energy, up, (Minimum(energy, up, 1),), 0.0, True, 0, True)
-    scaled, exponent = rescaled(f)
+    scaled, exponent = f.rescaled()
     problem = problem_of(scaled, settings)
     pool = _Pool(scaled, problem.strength)
     used, proven = 0, False
@@ -125,17 +125,6 @@ def minimize(
         starts_used=used,
         proven=proven,
     )
-
-
-def rescaled(f: EnergyFunction) -> tuple[EnergyFunction, int]:
-    """(g, exponent) with f = f.constant + 2^exponent g and the largest coefficient of g between 2^-9 and 2^8."""
-    exponent = math.frexp(f.largest_coefficient)[1]
-    g = f if f.constant == 0.0 else f - f.constant
-    if abs(exponent) <= 8:  # near enough; arithmetic on millions of terms takes its time
-        return g, 0
-    # in two steps where 2^-exponent itself may overflow
-    half = -exponent // 2 if abs(exponent) > 1000 else 0
-    return (g * math.ldexp(1.0, half) if half else g) * math.ldexp(1.0, -exponent - half), exponent
 
 
 class QuadraticProblem:

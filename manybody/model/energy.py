@@ -115,11 +115,14 @@ class EnergyFunction:
         return max((float(np.abs(g.coefficients).max()) for g in self.groups), default=0.0)
 
     def rescaled(self) -> tuple["EnergyFunction", int]:
-        """(g, exponent): f = constant + 2^exponent g exactly, the largest coefficient of g in [1/2, 1)."""
+        """(g, exponent): f = constant + 2^exponent g exactly, the largest coefficient of g between 2^-9 and 2^8."""
         exponent = math.frexp(self.largest_coefficient)[1]
-        # In two steps, since 2^-exponent itself may overflow.
-        half = -exponent // 2
-        return (self - self.constant) * math.ldexp(1.0, half) * math.ldexp(1.0, -exponent - half), exponent
+        g = self if self.constant == 0.0 else self - self.constant
+        if abs(exponent) <= 8:  # near enough; arithmetic on millions of terms takes its time
+            return g, 0
+        # In two steps where 2^-exponent itself may overflow.
+        half = -exponent // 2 if abs(exponent) > 1000 else 0
+        return (g * math.ldexp(1.0, half) if half else g) * math.ldexp(1.0, -exponent - half), exponent
 
     def fingerprint(self) -> str:
         """A hexadecimal digest of the content, equal in every process for equal functions."""
