@@ -19,7 +19,7 @@ from manybody.model.energy import EnergyFunction
 
 LARGE = 300_000  # sites from which a frustrated function gets one start, from the lowest eigenvectors
 LONG_WAVES = 100_000  # sites from which Newton steps are preconditioned by rotations of patches
-PATCH_PRODUCTS = 800_000_000  # sites x Hessian products that such a descent may spend
+PATCH_PRODUCTS = 2_500_000_000  # sites x Hessian products that such a descent may spend
 
 
 @dataclass(frozen=True)

@@ -267,15 +267,16 @@ class EnergyFunction:
         # Couplings of 1e-300 and 1e300 must survive being squared in norms.
         unit = self.largest_coefficient or 1.0
         for group in self.groups:
-            coefficients = group.coefficients / unit
-            change = np.zeros((3, *coefficients.shape))
-            for slot, rank in enumerate(group.ranks):
-                moved = np.moveaxis(coefficients, slot + 1, -1)
-                turned = np.einsum("t...q,aqp->at...p", moved, harmonics.generators(rank))
-                change += np.moveaxis(turned, -1, slot + 2)
-            stacked = np.concatenate([triangle, change.reshape(3, -1).T])
-            triangle = np.linalg.qr(stacked, mode="r") if len(stacked) > 3 else stacked
-            norm = np.hypot(norm, np.linalg.norm(coefficients))
+            for coefficients in _slices(group.coefficients):
+                coefficients = coefficients / unit
+                change = np.zeros((3, *coefficients.shape))
+                for slot, rank in enumerate(group.ranks):
+                    moved = np.moveaxis(coefficients, slot + 1, -1)
+                    turned = np.einsum("t...q,aqp->at...p", moved, harmonics.generators(rank))
+                    change += np.moveaxis(turned, -1, slot + 2)
+                stacked = np.concatenate([triangle, change.reshape(3, -1).T])
+                triangle = np.linalg.qr(stacked, mode="r") if len(stacked) > 3 else stacked
+                norm = np.hypot(norm, np.linalg.norm(coefficients))
         if norm == 0.0:
             return np.eye(3)
         _, strength, axes = np.linalg.svd(np.concatenate([triangle, np.zeros((3, 3))]) / norm)
@@ -317,6 +318,16 @@ class EnergyFunction:
             factors = factors.reshape(-1, *[1] * (group.coefficients.ndim - 1))
             groups.append(Group(group.key, group.sites, factors * group.coefficients))
         return EnergyFunction(self.sites, self.constant, groups)
+
+
+def _slices(coefficients: np.ndarray, length: int = 65536):
+    """The terms in slices, for scratch arrays that stay small; equal terms, as on a uniform lattice, stand in one."""
+    terms = len(coefficients)
+    if terms > length and (coefficients == coefficients[0]).all():
+        yield coefficients[:1] * math.sqrt(terms)
+        return
+    for start in range(0, terms, length):
+        yield coefficients[start : start + length]
 
 
 def _canonical(sites: int, groups: Iterable[Group]) -> tuple[Group, ...]:

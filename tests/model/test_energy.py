@@ -147,6 +147,17 @@ def test_symmetry_axes():
     np.testing.assert_array_equal(both.symmetry_axes(), [[0, 0, 1]])
 
 
+@pytest.mark.parametrize("uniform", [True, False])
+def test_symmetry_axes_of_many_terms(uniform):
+    # enough pairs to be read in slices, all of them conserving z; then one more that does not
+    sites = 70_001
+    pairs = np.stack([np.arange(sites - 1), np.arange(1, sites)], axis=1)
+    strength = np.ones(sites - 1) if uniform else np.linspace(1, 2, sites - 1)
+    f = exchange(sites, pairs, strength[:, None, None] * np.diag([1.0, 1.0, 0.5]))
+    np.testing.assert_array_equal(f.symmetry_axes(), [[0, 0, 1]])
+    assert len((f + field(sites, [sites - 1], [0.1, 0, 0])).symmetry_axes()) == 0
+
+
 def test_components_and_restriction():
     f = exchange(6, [[0, 3], [3, 5], [1, 2]], 1.0) + field(6, [0, 4], [0, 0, 1])
     assert [part.tolist() for part in f.components()] == [[0, 3, 5], [1, 2], [4]]
