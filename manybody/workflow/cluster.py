@@ -7,6 +7,7 @@ own configuration says.
 
 from __future__ import annotations
 
+import abc
 import asyncio
 import contextlib
 import logging
@@ -63,7 +64,7 @@ def _restore_environment(earlier: dict[str, str | None]) -> None:
             os.environ[name] = value
 
 
-class DaskExecutor:
+class DaskExecutor(abc.ABC):
     """Executor on a dask cluster that `connect` opens; see LocalProcesses, ExistingCluster and BatchJobs.
 
     Raises EngineError where the cluster cannot be had.
@@ -81,9 +82,9 @@ class DaskExecutor:
         self._client = None
         self._stack = contextlib.ExitStack()
 
+    @abc.abstractmethod
     def connect(self, parts: int):
         """The client of the cluster to use, for a run of `parts` parts."""
-        raise NotImplementedError
 
     # what the engine calls
 

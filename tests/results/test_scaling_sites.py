@@ -116,7 +116,11 @@ def test_spin_one_chain_from_large_open_chains():
 
 @pytest.mark.slow
 def test_spin_three_halves_chain_from_large_open_chains():
-    """-2.82833(1) (Hallberg, Wang, Horsch, Moreo 1996, from memory) to 1e-4: a critical chain with end spins."""
+    """-2.82833(1) (Hallberg, Wang, Horsch, Moreo 1996, from memory) to 1e-4: a critical chain with end spins.
+
+    Known weakness, measured: the crossover is slow, and other windows understate their error. Sizes 6 to 24 miss by
+    1.2e-4 at a stated 2.4e-5, sizes 6 to 40 by 8.4e-5 at 3.0e-5. This window passes at two standard errors, not at one.
+    """
     sizes = (12, 16, 20, 24, 32, 40)
     energies, errors = open_chain_energies(1.5, sizes, 1e-8)
     found = extrapolate(np.array(sizes, float), energies, errors, boundary="open", dimension=1)
