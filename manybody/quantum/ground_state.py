@@ -2,7 +2,6 @@
 
 from collections.abc import Callable
 from dataclasses import dataclass, replace
-from pathlib import Path
 
 import numpy as np
 
@@ -11,6 +10,7 @@ from manybody.model.quantization import SpinOperator
 from manybody.quantum.basis import TooLarge
 from manybody.quantum.exact import LARGEST_DIMENSION, Estimate, estimate_exact, exact_ground_state
 from manybody.quantum.result import GroundState, QuantumSettings
+from manybody.quantum.saved_states import SavedStates, open_states, owner
 
 _SMALL = 14
 """Spaces below 2 to this power need no estimate."""
@@ -28,10 +28,11 @@ def ground_state(
 
     start (N, 3): classical unit vectors. scale: |f_min - f_mean|, to which settings.accuracy is relative; 0 takes a
     norm bound of the operator. progress(dict) is called now and then. checkpoint: where the state of a long run is
-    kept, a path or an object with load() and save(bytes); the latter serves connected operators only.
+    kept and taken up again, a path or an object as saved_states.Checkpoint says.
 
     Clusters without coupling between them are solved apart, equal ones once; energies, errors and sectors add. The
-    sector is then that of one state in a possibly degenerate ground space. Raises ValueError for a start of the wrong
+    sector is then that of one state in a possibly degenerate ground space. Clusters found done in a checkpoint come
+    without their states (None in ClusterStates). Raises ValueError for a start of the wrong
     shape or couplings that overflow.
     """
     settings = settings or QuantumSettings()
@@ -40,9 +41,18 @@ def ground_state(
         if start.shape != (op.sites, 3):
             raise ValueError(f"start must be unit vectors of shape ({op.sites}, 3), got {start.shape}")
     op = without_scalars(op)
+    saved = open_states(checkpoint)
+    saved.claim(owner(op, settings, scale))
     parts = op.symbol.components()
     if len(parts) == 1:
-        return _connected(op, settings, start, scale, progress, checkpoint)
+        result = _connected(op, settings, start, scale, progress, saved)
+    else:
+        result = _separate(op, parts, settings, start, scale, progress, saved)
+    saved.finish()
+    return result
+
+
+def _separate(op, parts, settings, start, scale, progress, saved: SavedStates) -> GroundState:
     known: dict[tuple, GroundState] = {}
     results = []
     # Correlations between clusters are products of moments.
@@ -52,14 +62,8 @@ def ground_state(
         piece = op.restricted(sites)
         key = (piece.spins.tobytes(), piece.symbol.fingerprint())
         if key not in known:
-            known[key] = _connected(
-                piece,
-                inner,
-                None if start is None else start[sites],
-                scale,
-                progress,
-                Path(f"{checkpoint}.{number}") if isinstance(checkpoint, str | Path) else None,
-            )
+            direction = None if start is None else start[sites]
+            known[key] = _cluster(piece, inner, direction, scale, progress, saved.within(f"cluster{number}"))
         results.append(known[key])
     return _together(op, parts, results)
 
@@ -99,7 +103,18 @@ def _affordable(cost: Estimate, settings: QuantumSettings) -> bool:
     return cost.dimension <= LARGEST_DIMENSION and cost.bytes <= settings.memory
 
 
-def _connected(op, settings, start, scale, progress, checkpoint) -> GroundState:
+def _cluster(op, settings, start, scale, progress, saved: SavedStates) -> GroundState:
+    """Ground state of one cluster among several, or what an earlier run found for it."""
+    if done := saved.get("result"):
+        return GroundState.from_arrays(done)
+    result = _connected(op, settings, start, scale, progress, saved.within("solve"))
+    saved.drop("solve")
+    saved.put("result", result.to_arrays)
+    saved.pause()
+    return result
+
+
+def _connected(op, settings, start, scale, progress, saved: SavedStates) -> GroundState:
     small = np.sum(np.log2(2 * op.spins + 1)) < _SMALL
     if small or _affordable(estimate_exact(op, memory=settings.memory), settings):
         try:
@@ -108,7 +123,7 @@ def _connected(op, settings, start, scale, progress, checkpoint) -> GroundState:
             pass  # very unequal spins: the tables of a half do not fit although the sector does
     from manybody.quantum.sweeps import matrix_product_ground_state
 
-    return matrix_product_ground_state(op, settings, start, scale, progress, checkpoint)
+    return matrix_product_ground_state(op, settings, start, scale, progress, saved)
 
 
 @dataclass(frozen=True)

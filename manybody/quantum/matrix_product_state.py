@@ -1,6 +1,5 @@
 """A finished matrix-product state: kept, saved, restored, handed to a general tensor-network library."""
 
-import io
 from dataclasses import dataclass
 
 import numpy as np
@@ -10,6 +9,7 @@ from scipy.spatial.transform import Rotation
 from manybody.model.spin_matrices import spin_matrices
 from manybody.quantum import blocks
 from manybody.quantum.chain import Bond, Chain
+from manybody.quantum.saved_states import pack, unpack
 
 FORMAT = 1
 
@@ -146,14 +146,3 @@ def state_of(arrays: dict[str, np.ndarray]) -> MatrixProductState:
         arrays["order"], arrays["spins"], arrays["frames"], cut("local", "levels"), bonds, cut("tensors", "lengths"),
         int(arrays["total"][0]),
     )  # fmt: skip
-
-
-def pack(arrays: dict[str, np.ndarray]) -> bytes:
-    buffer = io.BytesIO()
-    np.savez(buffer, **arrays)
-    return buffer.getvalue()
-
-
-def unpack(data: bytes) -> dict[str, np.ndarray]:
-    with np.load(io.BytesIO(data), allow_pickle=False) as archive:
-        return {name: archive[name] for name in archive.files}

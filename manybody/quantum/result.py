@@ -1,7 +1,8 @@
 """What is asked of a quantum ground state and what comes back, shared by exact diagonalization and matrix-product
 sweeps."""
 
-from dataclasses import dataclass, field
+import json
+from dataclasses import dataclass, field, fields
 from typing import Any
 
 import numpy as np
@@ -86,3 +87,20 @@ class GroundState:
     @property
     def converged(self) -> bool:
         return self.status == "converged"
+
+    def to_arrays(self) -> dict[str, np.ndarray]:
+        """All but the state as plain arrays."""
+        values = {entry.name: getattr(self, entry.name) for entry in fields(self) if entry.name != "state"}
+        observables = values.pop("observables")
+        arrays = {name: value for name, value in values.items() if isinstance(value, np.ndarray)}
+        numbers = json.dumps({name: value for name, value in values.items() if name not in arrays})
+        arrays["numbers"] = np.frombuffer(numbers.encode(), np.uint8)
+        return arrays | {f"observable {name}": value for name, value in observables.items()}
+
+    @classmethod
+    def from_arrays(cls, arrays: dict[str, np.ndarray]) -> "GroundState":
+        """The inverse of to_arrays, without a state."""
+        observables = {name[11:]: array for name, array in arrays.items() if name.startswith("observable ")}
+        plain = {name: array for name, array in arrays.items() if not name.startswith("observable ")}
+        numbers = json.loads(plain.pop("numbers").tobytes())
+        return cls(**numbers, **plain, observables=observables)

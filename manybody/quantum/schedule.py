@@ -1,6 +1,7 @@
 """From a start state to a converged one: sweeps in stages of falling truncation, until the error is small enough or a
 limit is met."""
 
+import itertools
 from collections.abc import Callable
 from dataclasses import dataclass, field
 
@@ -41,7 +42,13 @@ class Limits:
 class Run:
     """A chain on its way. stages: what was reached, the start state first; allowed: relative weight a bond may lose in
     the present stage; bounded, narrow: the last stage wanted more states than the limit, or than its own ceiling, which
-    at most doubles (GROWTH) from stage to stage."""
+    at most doubles (GROWTH) from stage to stage.
+
+    under_way: a stage is begun but not done; energies: what its half sweeps gave so far; site, lost, cut, before: how
+    far the present half sweep is, the weight it discarded, whether the ceiling was the cause, and the bond dimension it
+    began with. With them a run can be broken off and taken up at any call of `pause`, made before every step and after
+    every stage. unmixings: see sweeps.
+    """
 
     chain: Chain
     limits: Limits
@@ -52,11 +59,19 @@ class Run:
     sweeps: int = 0
     bounded: bool = False
     narrow: bool = False
-    ceiling: int = FIRST_BOND
+    ceiling: int = 0
     vectors: int = 0
+    under_way: bool = False
+    energies: list[float] = field(default_factory=list)
+    site: int = 0
+    lost: float = 0.0
+    cut: bool = False
+    before: int = 0
+    unmixings: int = 0
+    pause: Callable[[], None] = lambda: None
 
     def __post_init__(self) -> None:
-        self.ceiling = min(max(FIRST_BOND, self.chain.bond_dimension), self.limits.largest)
+        self.ceiling = self.ceiling or min(max(FIRST_BOND, self.chain.bond_dimension), self.limits.largest)
         self.vectors = self.vectors or self.limits.vectors
 
     @property
@@ -70,7 +85,7 @@ class Run:
     @property
     def finished(self) -> bool:
         """Good enough, or nothing left to try."""
-        if not self.stages:
+        if not self.stages or self.under_way:
             return False
         done = len(self.stages) > 2 and self.error <= max(self.limits.goal, 2 * self.limits.floor)
         return done or self.bounded or self.allowed <= LEAST_ALLOWED or self.stages[-1].variance <= self.limits.floor**2
@@ -80,8 +95,10 @@ class Run:
         self._stage()
 
     def advance(self) -> None:
-        """One more stage."""
-        if not self.stages:
+        """One more stage, or the rest of the one under way."""
+        if self.under_way:
+            pass
+        elif not self.stages:
             energy, spread = variance.measure(self.chain)
             self.stages.append(Stage(self.chain.bond_dimension, energy, spread, 0.0, np.inf, 1.0))
         else:
@@ -91,18 +108,25 @@ class Run:
             self.ceiling = min(max(GROWTH * self.stages[-1].bond_dimension, FIRST_BOND), self.limits.largest)
         self._stage()
 
+    def pursue(self, wanted: Callable[[], bool]) -> None:
+        """Stages until finished, or no longer wanted, which is asked after every one of them."""
+        while not self.finished and (self.under_way or len(self.stages) < 2 or wanted()):
+            self.advance()
+
     def _stage(self) -> None:
-        energies: list[float] = []
-        gains = [np.inf]
+        self.under_way = True
+        energies = self.energies
+        gains = [np.inf, *(before - after for before, after in itertools.pairwise(energies))]
         while len(energies) < MOST_SWEEPS:
-            before = self.chain.bond_dimension
+            if self.site == 0:
+                self.before = self.chain.bond_dimension
             energy, discarded, bounded = self._half_sweep()
             energies.append(energy)
             self._tell(energy, discarded)
             if len(energies) == 1:
                 continue
             gains.append(energies[-2] - energies[-1])
-            grows = self.chain.bond_dimension > 1.05 * before
+            grows = self.chain.bond_dimension > 1.05 * self.before
             crawls = gains[-1] > CRAWL * gains[-2] and not grows
             if gains[-1] < max(0.1 * (energies[0] - energies[-1]), 0.05 * self.limits.goal):
                 break
@@ -115,14 +139,18 @@ class Run:
         self.bounded = bounded and not self.narrow
         ratio = gains[-1] / gains[-2] if gains[-2] > 0 else 1.0
         self.stages.append(Stage(self.chain.bond_dimension, energy, spread, discarded, gains[-1], ratio))
+        self.under_way, self.energies = False, []
         self._tell(energy, discarded, spread)
+        self.pause()
 
     def _half_sweep(self) -> tuple[float, float, bool]:
         """Energy at the end, summed discarded weight, whether the bond limit cut more than the allowed weight."""
         chain, limits = self.chain, self.limits
-        energy, total, bounded = 0.0, 0.0, False
+        energy = 0.0
         tolerance = 1e-3 * np.sqrt(limits.goal * limits.norm / chain.length)
-        for site in range(chain.length - 1):
+        while self.site < chain.length - 1:
+            self.pause()
+            site = self.site
             if limits.pairs:
                 energy, lost = two_site.step(chain, site, self.ceiling, self.allowed, self.vectors, tolerance)
             else:
@@ -130,11 +158,14 @@ class Run:
                 expansion.expand(chain, site, FRACTION, ceiling, self.rng)
                 energy = one_site.solve(chain, site, self.vectors, tolerance)
                 lost = one_site.move(chain, site, self.ceiling, self.allowed)
-            total += lost
-            bounded |= lost > 1.001 * self.allowed
+            self.lost += lost
+            self.cut |= bool(lost > 1.001 * self.allowed)
+            self.site += 1
         chain.mirror()
         self.sweeps += 1
-        return energy, total, bounded
+        lost, cut = self.lost, self.cut
+        self.site, self.lost, self.cut = 0, 0.0, False
+        return energy, lost, cut
 
     def _tell(self, energy: float, discarded: float, spread: float | None = None) -> None:
         if self.report:

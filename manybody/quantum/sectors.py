@@ -7,6 +7,7 @@ from scipy.optimize import brentq
 
 from manybody.model.spin_matrices import coherent_states
 from manybody.quantum.chain import Chain
+from manybody.quantum.extrapolation import energy_error
 from manybody.quantum.problem import Problem
 from manybody.quantum.schedule import Run
 from manybody.quantum.start_state import projected_product
@@ -90,9 +91,10 @@ def isotropic_directions(start: np.ndarray, spins: np.ndarray, upright: bool = F
 class SectorSearch:
     """Walks over total charges until the lowest energy is bracketed by its neighbours.
 
-    begin(total) makes a Run; every run visited is advanced by `stages` stages. `undecided` lists runs that a finer
-    solution has to tell apart. multiplets: the total spin is conserved, so that energies never fall with growing |S^z|,
-    and equal ones belong to one multiplet; the largest |S^z| of it is taken, since its state is the least entangled.
+    begin(total) makes a Run; every run visited is brought to `stages` stages, and what it had then is compared.
+    `undecided` lists runs that a finer solution has to tell apart. multiplets: the total spin is conserved, so that
+    energies never fall with growing |S^z|, and equal ones belong to one multiplet; the largest |S^z| of it is taken,
+    since its state is the least entangled.
     """
 
     def __init__(
@@ -105,14 +107,16 @@ class SectorSearch:
     def run(self, total: int) -> Run:
         if total not in self.runs:
             run = self.begin(total)
-            for _ in range(self.stages):
-                if not run.finished:
-                    run.advance()
+            while not run.finished and len(run.stages) <= self.stages:
+                run.advance()
             self.runs[total] = run
         return self.runs[total]
 
-    def energy(self, total: int) -> float:
-        return self.run(total).energy
+    def look(self, total: int) -> tuple[float, float]:
+        """Energy and error after the first stages, whatever the run has reached since."""
+        run = self.run(total)
+        stages = run.stages[: self.stages + 1]
+        return stages[-1].energy, energy_error(stages, run.limits.floor)
 
     def search(self, first: int) -> int:
         """The total charge of lowest energy: downhill from `first`, then from any probe that lies lower.
@@ -143,15 +147,17 @@ class SectorSearch:
             best = better
 
     def _better(self, total: int, best: int) -> bool:
-        rise = self.energy(total) - self.energy(best)
+        energy, error = self.look(total)
+        least, least_error = self.look(best)
+        rise = energy - least
         if not self.multiplets:
             return rise < -self.run(best).limits.floor
-        noise = max(self.run(total).error, self.run(best).error)
+        noise = max(error, least_error)
         return rise <= noise if total > best else rise < -noise
 
     def undecided(self, best: int) -> list[int]:
         """Other charges whose true energy may still be the lowest; with multiplets only the next smaller one can
         tell."""
-        floor = self.energy(best)
-        rivals = [t for t, run in self.runs.items() if t != best and run.energy - run.error <= floor]
+        looks = {total: self.look(total) for total in self.runs}
+        rivals = [t for t, (energy, error) in looks.items() if t != best and energy - error <= looks[best][0]]
         return [t for t in rivals if t == best - 1] if self.multiplets else rivals

@@ -1,27 +1,23 @@
 """The ground state of any quantized operator as a matrix-product state."""
 
 import functools
-import time
 from collections.abc import Callable
-from dataclasses import astuple
 from pathlib import Path
-from typing import Protocol
 
 import numpy as np
 
 from manybody.model.quantization import SpinOperator
 from manybody.quantum import matrix_product_state, memory, spin_flip, variance
 from manybody.quantum.chain import Chain
-from manybody.quantum.extrapolation import Stage
 from manybody.quantum.local_basis import enlarge, wanted_levels
 from manybody.quantum.problem import Problem, prepare
 from manybody.quantum.result import GroundState, QuantumSettings
+from manybody.quantum.saved_run import restored_run, run_arrays
+from manybody.quantum.saved_states import Checkpoint, SavedStates, open_states, owner
 from manybody.quantum.schedule import Limits, Run
 from manybody.quantum.sectors import SectorSearch, isotropic_directions, start_chain
 from manybody.quantum.start_state import classical_start
 
-SAVE_EVERY = 120.0
-"""Seconds between two savings of a long run."""
 MIXED = 1e-3
 """A state of S^z = 0 whose overlap with its turned-over self misses 1 by more than this is a mixture of both
 parities."""
@@ -31,32 +27,29 @@ WIDE = 12
 """From this many operator channels on one-site steps are cheaper than pairs."""
 
 
-class Checkpoint(Protocol):
-    """Where the state of a long run is kept. One that also has due() -> bool says itself when to save."""
-
-    def load(self) -> bytes | None: ...
-
-    def save(self, data: bytes) -> None: ...
-
-
 def matrix_product_ground_state(
     op: SpinOperator,
     settings: QuantumSettings | None = None,
     start: np.ndarray | None = None,
     scale: float = 0.0,
     progress: Callable[[dict], None] | None = None,
-    checkpoint: Checkpoint | str | Path | None = None,
+    checkpoint: Checkpoint | SavedStates | str | Path | None = None,
 ) -> GroundState:
     """Lowest energy found by sweeps, its error and what stopped them.
 
     start (N, 3): classical unit vectors, found here by a short descent if None. scale: |f_min - f_mean|, to which
     settings.accuracy is relative; 0 takes a bound on the norm of the operator. progress: called with a dict (sweep,
-    bond_dimension, energy, variance, discarded_weight, sector) after every half sweep. checkpoint: an object with
-    load() and save(bytes), or a path; written at most every two minutes, read at the start.
+    bond_dimension, energy, variance, discarded_weight, sector) after every half sweep. checkpoint: where the
+    solve keeps how far it is and takes it up again, whatever it was at: see saved_states (a path is written every two
+    minutes and removed in the end).
     """
     settings = settings or QuantumSettings()
-    solver = _Solver(op, settings, start, scale, progress, _as_checkpoint(checkpoint))
-    return solver.solve()
+    saved = checkpoint if isinstance(checkpoint, SavedStates) else open_states(checkpoint)
+    saved.claim(owner(op, settings, scale))
+    result = _Solver(op, settings, start, scale, progress, saved).solve()
+    if saved is not checkpoint:
+        saved.finish()
+    return result
 
 
 def predict(op: SpinOperator, settings: QuantumSettings | None = None) -> memory.Estimate:
@@ -76,8 +69,8 @@ def products_per_step(problem: Problem) -> int:
 
 
 class _Solver:
-    def __init__(self, op, settings: QuantumSettings, start, scale: float, progress, checkpoint):
-        self.op, self.settings, self.progress, self.checkpoint = op, settings, progress, checkpoint
+    def __init__(self, op, settings: QuantumSettings, start, scale: float, progress, saved: SavedStates):
+        self.op, self.settings, self.progress, self.saved = op, settings, progress, saved
         self.rng = np.random.default_rng(settings.seed)
         self.start = classical_start(op, self.rng) if start is None else np.asarray(start, float)
         self.problem = prepare(op, self.start)
@@ -96,15 +89,18 @@ class _Solver:
             vectors=self.vectors,
             pairs=pairs,
         )
-        self.saved = time.monotonic()
 
     def solve(self) -> GroundState:
         if self.op.sites == 1:
             return self._single()
-        run = self._restored() or self._chosen()
-        self._finish(run)
-        run = self._lower_parity(run)
-        other = self._guard(run)
+        # What is found of a later stage tells that the earlier ones are done.
+        run = self._taken_up("run") or self._kept("run", self._chosen())
+        self.saved.drop("sector")
+        guard = self._taken_up("guard", quiet=True)
+        if guard is None:
+            run = self._kept("run", self._lower_parity(run))
+            self.saved.drop("parity")
+        other = self._guard(run, guard)
         if other.energy < run.energy - max(run.error, self.limits.floor):
             self._finish(other)
             if other.energy < run.energy:
@@ -124,8 +120,29 @@ class _Solver:
         return self.limits.pairs and bool(self.problem.spins.max() <= 1) and collinear and along
 
     def _begin(self, total: int) -> Run:
-        chain = start_chain(self.problem, self._directions(self.start), total, self._sharp)
-        return Run(chain, self.limits, self.rng, self._reporter(total))
+        """The run of a sector, as it was left or from its start state."""
+        name = f"sector/{total}"
+        return self._taken_up(name) or self._kept(
+            name, self._run(start_chain(self.problem, self._directions(self.start), total, self._sharp))
+        )
+
+    def _run(self, chain: Chain, quiet: bool = False) -> Run:
+        report = None if quiet else self._reporter(chain.total)
+        return Run(chain, self.limits, self.rng, report, pause=self.saved.pause)
+
+    def _kept(self, name: str, run: Run) -> Run:
+        """The run, which from now on is saved under a name."""
+        self.saved.put(name, lambda: run_arrays(run, self.problem))
+        return run
+
+    def _taken_up(self, name: str, quiet: bool = False) -> Run | None:
+        """A saved run; None where there is none or it belongs to other frames."""
+        arrays = self.saved.get(name)
+        found = arrays and restored_run(arrays, self.problem, lambda chain: self._run(chain, quiet))
+        if not found:
+            return None
+        run, self.problem = found
+        return self._kept(name, run)
 
     def _reporter(self, total: int):
         if self.progress is None:
@@ -152,13 +169,17 @@ class _Solver:
         search = SectorSearch(self._begin, int(np.ceil(half)) if self.flips else 0, whole, self.isotropic)
         best = search.search(first)
         rivals = search.undecided(best)
+        depth = 1 + search.stages
         while rivals:
             contenders = {total: search.runs[total] for total in (best, *rivals)}
             open_runs = [run for run in contenders.values() if not run.finished and run.error > self.limits.goal]
             if not open_runs:
                 break
+            depth += 1
             for run in open_runs:
-                run.advance()
+                # One that was taken up may be ahead already.
+                if len(run.stages) < depth:
+                    run.advance()
             lowest = min(run.energy for run in contenders.values())
             rivals = [t for t, run in contenders.items() if run.energy - run.error <= lowest]
             equal = [t for t in rivals if contenders[t].energy <= lowest + self.limits.goal]
@@ -175,14 +196,11 @@ class _Solver:
         return turned.rotated(flip).allclose(turned, 1e-12, 1e-13 * self.problem.norm)
 
     def _finish(self, run: Run) -> None:
-        unmixings = 0
         while True:
             while not run.finished:
                 run.advance()
-                self._save(run)
             # Few states cannot hold one parity alone and mix again: hence the limit.
-            if unmixings < 2 and self._unmixed(run):
-                unmixings += 1
+            if run.unmixings < 2 and self._unmixed(run):
                 continue
             levels = wanted_levels(run.chain, self.problem, run.limits.goal)
             if levels is None:
@@ -197,20 +215,19 @@ class _Solver:
         return self.problem.conserved and central and self.flips
 
     def _lower_parity(self, run: Run) -> Run:
-        """The run, or one of the other spin-flip parity if that ends lower.
+        """The run, finished, or one of the other spin-flip parity if that ends lower.
 
         S^z of the first site changes the parity and hardly anything else where nearly free spins sit at the ends. Its
         run is refined until its error puts it above the first one.
         """
-        if not self._has_parity(run.chain):
-            return run
-        chain = spin_flip.other_parity(run.chain)
-        if chain is None:
-            return run
-        other = Run(chain, self.limits, self.rng, None)
-        other.advance()
-        while not other.finished and other.energy - other.error <= run.energy:
-            other.advance()
+        other = self._taken_up("parity", quiet=True)
+        if other is None:
+            self._finish(run)
+            chain = spin_flip.other_parity(run.chain) if self._has_parity(run.chain) else None
+            if chain is None:
+                return run
+            other = self._kept("parity", self._run(chain, quiet=True))
+        other.pursue(lambda: other.energy - other.error <= run.energy)
         if other.energy < run.energy:
             self._finish(other)
         return other if other.energy < run.energy else run
@@ -228,18 +245,19 @@ class _Solver:
         if min(energies) > run.energy - max(self.limits.floor, NOTABLE * run.error):
             return False
         run.chain = parts[int(np.argmin(energies))]
+        run.unmixings += 1
         run.repeat()
         return True
 
-    def _guard(self, run: Run) -> Run:
-        """A cheap second run from random directions in the same sector, coarser than the first."""
-        random = self.rng.standard_normal((self.op.sites, 3))
-        random /= np.linalg.norm(random, axis=1, keepdims=True)
-        chain = start_chain(self.problem, self.problem.directions(random), run.chain.total)
-        other = Run(chain, self.limits, self.rng, None)
-        other.advance()
-        while not other.finished and 2 * other.chain.bond_dimension <= run.chain.bond_dimension:
-            other.advance()
+    def _guard(self, run: Run, other: Run | None) -> Run:
+        """A cheap second run from random directions in the same sector, coarser than the first; `other`, if it is begun
+        already."""
+        if other is None:
+            random = self.rng.standard_normal((self.op.sites, 3))
+            random /= np.linalg.norm(random, axis=1, keepdims=True)
+            chain = start_chain(self.problem, self.problem.directions(random), run.chain.total)
+            other = self._kept("guard", self._run(chain, quiet=True))
+        other.pursue(lambda: 2 * other.chain.bond_dimension <= run.chain.bond_dimension)
         return other
 
     def _result(self, run: Run, other: Run) -> GroundState:
@@ -289,63 +307,3 @@ class _Solver:
 
         values = np.linalg.eigvalsh(sparse_operator(self.op).toarray())
         return GroundState(float(values[0]), self.limits.floor, "converged", "", "exact", bond_dimension=1)
-
-    def _save(self, run: Run) -> None:
-        if self.checkpoint is None:
-            return
-        due = getattr(self.checkpoint, "due", None)
-        if not (due() if due is not None else time.monotonic() - self.saved >= SAVE_EVERY):
-            return
-        self.checkpoint.save(save_run(run, self.problem, self.op))
-        self.saved = time.monotonic()
-
-    def _restored(self) -> Run | None:
-        """The run of a checkpoint; None where there is none or it belongs to another operator."""
-        data = self.checkpoint.load() if self.checkpoint is not None else None
-        if not data:
-            return None
-        arrays = matrix_product_state.unpack(data)
-        if arrays["problem"].tobytes().decode() != _identity(self.op):
-            return None
-        state = matrix_product_state.state_of(arrays)
-        if not (np.array_equal(state.order, self.problem.order) and np.allclose(state.frames, self.problem.frames)):
-            return None
-        levels = np.array([local.size for local in state.local])
-        if not np.array_equal(levels, self.problem.levels):
-            self.problem = self.problem.with_levels(levels)
-        chain = Chain(list(self.problem.local), list(self.problem.sites), state.bonds, state.tensors, state.total)
-        chain.prepare()
-        stages = [Stage(int(row[0]), *row[1:].tolist()) for row in arrays["stages"]]
-        allowed = float(arrays["allowed"][0])
-        return Run(chain, self.limits, self.rng, self._reporter(state.total), stages, allowed)
-
-
-def save_run(run: Run, problem: Problem, op: SpinOperator) -> bytes:
-    """State, stages and truncation of a run in the middle."""
-    state = matrix_product_state.of_chain(run.chain, problem.order, op.spins, problem.frames)
-    arrays = matrix_product_state.arrays_of(state)
-    arrays["stages"] = np.array([astuple(stage) for stage in run.stages])
-    arrays["allowed"] = np.array([run.allowed])
-    arrays["problem"] = np.frombuffer(_identity(op).encode(), np.uint8)
-    return matrix_product_state.pack(arrays)
-
-
-def _identity(op: SpinOperator) -> str:
-    return op.symbol.fingerprint() + op.spins.tobytes().hex()
-
-
-class _FileCheckpoint:
-    def __init__(self, path: Path):
-        self.path = path
-
-    def load(self) -> bytes | None:
-        return self.path.read_bytes() if self.path.exists() else None
-
-    def save(self, data: bytes) -> None:
-        partial = self.path.with_name(self.path.name + ".partial")
-        partial.write_bytes(data)
-        partial.replace(self.path)
-
-
-def _as_checkpoint(checkpoint):
-    return _FileCheckpoint(Path(checkpoint)) if isinstance(checkpoint, str | Path) else checkpoint
