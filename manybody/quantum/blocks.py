@@ -105,11 +105,10 @@ def by_ket(charges, dims, delta, skip):
 
 
 @compiled
-def to_ket(environment, charges, dims, delta, skip):
-    """Copy of an environment stored by bra into the layout by ket."""
-    _, bra_row, _, bra_start, size = by_bra(charges, dims, delta, skip)
+def to_ket(environment, charges, dims, delta, skip, result):
+    """Copy an environment stored by bra into `result`, of the same size, in the layout by ket."""
+    _, bra_row, _, bra_start, _ = by_bra(charges, dims, delta, skip)
     ket_partner, ket_row, _, ket_start, _ = by_ket(charges, dims, delta, skip)
-    result = np.empty(size, environment.dtype)
     for k in range(charges.size):
         for a in range(delta.size):
             j = ket_partner[a, k]
@@ -119,7 +118,6 @@ def to_ket(environment, charges, dims, delta, skip):
                 for x in range(dims[j]):
                     for y in range(dims[k]):
                         result[target + x * dims[k] + y] = environment[source + y * dims[j] + x]
-    return result
 
 
 @compiled
@@ -143,10 +141,16 @@ def mirror_tensor(tensor, left, left_dims, right, right_dims, local, total):
 @compiled
 def gather_right(tensor, left, left_dims, right, right_dims, local):
     """Site tensor by left -> by right; groups follow each other in the order of the right charges."""
-    target, column, width, start, size = by_left(left, left_dims, right, right_dims, local)
+    result = np.empty_like(tensor)
+    gather_into(result, tensor, left, left_dims, right, right_dims, local)
+    return result
+
+
+@compiled
+def gather_into(result, tensor, left, left_dims, right, right_dims, local):
+    target, column, width, start, _ = by_left(left, left_dims, right, right_dims, local)
     row, height = by_right(left, left_dims, right, local)
     first = offsets(height * right_dims)
-    result = np.empty(size, tensor.dtype)
     for i in range(left.size):
         for s in range(local.size):
             j = target[i, s]
@@ -156,7 +160,6 @@ def gather_right(tensor, left, left_dims, right, right_dims, local):
                 for x in range(left_dims[i]):
                     for y in range(right_dims[j]):
                         result[goal + x * right_dims[j] + y] = tensor[source + x * width[i] + y]
-    return result
 
 
 @compiled
@@ -206,6 +209,22 @@ def reachable(left, right, first_local, second_local):
                 offered[count] = charge
                 count += 1
     return np.unique(offered[:count])
+
+
+@compiled
+def reach(left, left_dims, bond, bond_dims, right, right_dims, first_local, second_local):
+    """Charges `reachable` on the middle bond, states of each on the present bond, whether it has no others."""
+    charges = reachable(left, right, first_local, second_local)
+    table, low = lookup(charges)
+    dims = np.zeros(charges.size, np.int64)
+    complete = True
+    for index in range(bond.size):
+        place = find(table, low, bond[index])
+        if place >= 0:
+            dims[place] = bond_dims[index]
+        else:
+            complete = False
+    return charges, dims, complete
 
 
 @compiled

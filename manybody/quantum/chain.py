@@ -8,7 +8,8 @@ from dataclasses import dataclass, field
 
 import numpy as np
 
-from manybody.quantum import blocks, contraction, split
+from manybody.quantum import blocks, contraction, lanczos, split
+from manybody.quantum.compiled import Scratch, shared_scratch
 from manybody.quantum.matrix_product_operator import OperatorSite, composite
 
 
@@ -51,10 +52,12 @@ class Chain:
     reverse: bool = False
     other_operators: list[OperatorSite] = field(default_factory=list)
     composites: dict[tuple[int, int], OperatorSite] = field(default_factory=dict)
+    scratch: Scratch | None = None
 
     def __post_init__(self) -> None:
         length = len(self.local)
         self.turned = self.turned or [False] * length
+        self.scratch = self.scratch or shared_scratch(self.dtype)
         if not self.other_operators:
             known = {id(site): site.mirrored() for site in self.operators}
             self.other_operators = [known[id(site)] for site in reversed(self.operators)]
@@ -103,11 +106,6 @@ class Chain:
         self.tensors[site] = tensor
         self.turned[site] = False
 
-    def left_by_ket(self, site: int) -> np.ndarray:
-        """Environment left of a site in the layout the products need."""
-        operator = self.operators[site]
-        return blocks.to_ket(self.left[site], *self.bonds[site].pair, operator.delta_left, operator.start)
-
     def pair_operator(self, site: int) -> OperatorSite:
         first, second = self.operators[site], self.operators[site + 1]
         key = (id(first), id(second))
@@ -115,21 +113,19 @@ class Chain:
             self.composites[key] = composite(first, second, (self.local[site].size, self.local[site + 1].size))
         return self.composites[key]
 
-    def plan(
-        self,
-        operator: OperatorSite,
-        left: Bond,
-        right: Bond,
-        local: np.ndarray,
-        end: int,
-        skip: int,
-        bra: Bond | None = None,
-    ):
-        """contraction.plan for one site (or a pair) between two bonds."""
-        weights = operator.weights.astype(self.dtype, copy=False)
-        channels = (operator.delta_left, operator.delta_right, operator.start, end, skip)
-        bra = bra or right
-        return contraction.plan(*left.pair, *right.pair, local, *channels, operator.entries, weights, *bra.pair)
+    def weights(self, operator: OperatorSite) -> np.ndarray:
+        """Weights of an operator in the number type of the tensors."""
+        return operator.weights.astype(self.dtype, copy=False)
+
+    def lowest(self, tensor, operator: OperatorSite, left: int, right: int, local, vectors: int, tolerance: float):
+        """(energy, tensor) of the lowest state of everything between two bonds; see lanczos.lowest."""
+        energy, tensor, _, _, needed = lanczos.lowest(
+            tensor, self.left[left], self.right[right], *self.bonds[left].pair, *self.bonds[right].pair, local,
+            operator.delta_left, operator.delta_right, operator.start, operator.end, operator.entries,
+            self.weights(operator), vectors, tolerance, self.scratch.array,
+        )  # fmt: skip
+        self.scratch.enlarge(needed)
+        return energy, tensor
 
     def advance(self, site: int) -> None:
         """Left environment of the next bond from the one of this bond and the (orthonormal) tensor of the site."""
@@ -149,15 +145,13 @@ class Chain:
         tensor = self.turned_tensor(site)
         self.right[site] = self._environment(operator, self.right[site + 1], left, right, self.local[site], tensor)
 
-    def _environment(
-        self, operator: OperatorSite, before: np.ndarray, left: Bond, right: Bond, local, tensor
-    ) -> np.ndarray:
-        steps = self.plan(operator, left, right, local, -1, operator.start)
-        by_ket = blocks.to_ket(before, *left.pair, operator.delta_left, operator.start)
-        stacked = contraction.half(tensor, by_ket, steps)
-        return contraction.close(
-            stacked, blocks.gather_right(tensor, *left.pair, *right.pair, local), steps, right.dims
-        )
+    def _environment(self, operator: OperatorSite, before: np.ndarray, left: Bond, right: Bond, local, tensor):
+        environment, needed = contraction.environment(
+            tensor, before, *left.pair, *right.pair, local, operator.delta_left, operator.delta_right, operator.start,
+            operator.entries, self.weights(operator), self.scratch.array,
+        )  # fmt: skip
+        self.scratch.enlarge(needed)
+        return environment
 
     def prune(self, bond: int, charges: np.ndarray) -> None:
         """Drop the states of a bond, ahead of the centre, whose charge is not among `charges`: nothing on the left
@@ -180,14 +174,14 @@ class Chain:
     def pass_on(self, site: int, isometry: np.ndarray, carry: np.ndarray, kept: np.ndarray) -> None:
         """Put an isometry grouped by right charge in place of a site tensor and multiply the carry into the next
         one."""
-        left, right, after = self.bonds[site], self.bonds[site + 1], self.bonds[site + 2]
-        tensor = self.tensor(site + 1)
-        widths = blocks.by_left(*right.pair, *after.pair, self.local[site + 1])[2]
-        tensor = split.carry_over(carry, kept, right.dims, tensor, widths)
-        stay = kept > 0
-        self.bonds[site + 1] = Bond(right.charges[stay], kept[stay])
-        self.put(site, blocks.scatter_left(isometry, *left.pair, *self.bonds[site + 1].pair, self.local[site]))
-        self.put(site + 1, tensor)
+        left, right, after = self.bonds[site : site + 3]
+        tensor, following, charges, dims = split.pass_on(
+            isometry, carry, kept, self.tensor(site + 1), *left.pair, *right.pair, *after.pair,
+            *self.local[site : site + 2],
+        )  # fmt: skip
+        self.bonds[site + 1] = Bond(charges, dims)
+        self.put(site, tensor)
+        self.put(site + 1, following)
 
     def prepare(self) -> None:
         """Normalize, centre at site 0, all right environments: from any tensors in the present view."""

@@ -6,15 +6,16 @@ copies.
     O[i', s', j'] = sum_(b, j) U[b, i', s', j] R[b][j', j]            one product per right bra charge j'
 
 L is stored by ket, R by bra (see blocks). The channel `start` of the left bond (nothing of an operator yet) and `end`
-of the right one (operator finished) have the identity as their environment: A takes the place of T and O that of U. A
-plan lists offsets, strides and shapes of every step; it depends only on charges, dimensions and W, and building it
-costs a few microseconds per block.
+of the right one (operator finished) have the identity as their environment: A takes the place of T and O that of U. The
+first two rounds go through the left charges together, so that the part of T between them stays in the cache. A plan
+lists offsets, strides and shapes of every step; it depends only on charges, dimensions and W, and building it costs a
+few microseconds per block.
 """
 
 import numpy as np
 
-from manybody.quantum.blocks import by_bra, by_ket, by_left, by_right, find, lookup
-from manybody.quantum.compiled import compiled
+from manybody.quantum.blocks import by_bra, by_ket, by_left, by_right, find, gather_into, lookup, to_ket
+from manybody.quantum.compiled import compiled, conjugate, room
 
 FROM_T, TO_O, ASSIGN = 1, 2, 4
 
@@ -39,12 +40,14 @@ def plan(
     """Everything `apply`, `half` and `close` need to know.
 
     entries (n, 4): left channel, right channel, outgoing and incoming local state. The right channel `skip` is left out
-    of U altogether (-1: none), `end` goes to O. bra, bra_dims: right bond of the result, the ket bond itself except
-    where new charges are probed (then O is meaningless). Returns first (n, 6): rows, inner, columns, offsets in L, A, T
-    of every product of the first round; moves (n, 7): flags (sum of FROM_T, TO_O, ASSIGN), source offset and stride,
-    target offset and stride, rows, columns; factors (n,); second (n, 6): like first, with U, R, O; back (n, 6): offset
-    and stride in O, the same in the layout of A, rows, columns; groups (n, 4): rows, columns, offset in U and in O per
-    bra charge; sizes (4,): elements of A, T, U, O.
+    of U altogether (-1: none), `end` goes to the result. bra, bra_dims: right bond of the result, the ket bond itself
+    except where new charges are probed (then `end` must be -1). Returns first (n, 8): rows, inner, columns, offsets in
+    L, A, T of the product of every left charge and its first and last move; moves (n, 7): flags (sum of FROM_T, TO_O,
+    ASSIGN), offset and stride of the source, in A or in the T of this charge, and of the target, in U or in the result
+    by left, rows, columns; factors (n,); second (n, 6): rows, inner, columns, offsets in U, R, O; back (n, 6): offset
+    and stride in O, the same in the result, rows, columns; groups (n, 4): rows, columns, offset in U and in O per bra
+    charge; holes (n, 4): offset, stride, rows, columns of the blocks of U that no move reaches; sizes (5,): elements of
+    A, T, U, O and of the largest T of one charge.
     """
     target, column, width, a_start, a_size = by_left(left, left_dims, right, right_dims, local)
     bra_of, l_row, l_height, l_start, _ = by_ket(left, left_dims, delta_left, start)
@@ -52,18 +55,6 @@ def plan(
     _, _, r_height, r_start, _ = by_bra(bra, bra_dims, delta_right, end)
     ket_table, ket_low = lookup(right)
     bra_table, bra_low = lookup(bra)
-
-    first = np.empty((left.size, 6), np.int64)
-    t_start = np.zeros(left.size, np.int64)
-    t_size = 0
-    used = 0
-    for i in range(left.size):
-        t_start[i] = t_size
-        t_size += l_height[i] * width[i]
-        if l_height[i] > 0 and width[i] > 0:
-            first[used] = (l_height[i], left_dims[i], width[i], l_start[i], a_start[i], t_start[i])
-            used += 1
-    first = first[:used]
 
     u_column = np.full((delta_right.size, bra.size), -1, np.int64)
     groups = np.zeros((bra.size, 4), np.int64)
@@ -83,8 +74,12 @@ def plan(
     moves = np.empty((weights.size * left.size, 7), np.int64)
     factors = np.empty(weights.size * left.size, weights.dtype)
     written = np.zeros((delta_right.size, left.size, local.size), np.bool_)
+    first = np.empty((left.size, 8), np.int64)
+    t_size = 0
+    t_largest = 0
     count = 0
     for i in range(left.size):
+        begun = count
         for entry in range(weights.size):
             a, b, out, into = entries[entry]
             j = target[i, into]
@@ -101,11 +96,11 @@ def plan(
                 source = a_start[i] + column[i, into]
             else:
                 flags += FROM_T
-                source = t_start[i] + l_row[a, i] * width[i] + column[i, into]
+                source = l_row[a, i] * width[i] + column[i, into]
             if b == end:
                 flags += TO_O
-                goal = groups[jb, 3] + u_row[k, out] * bra_dims[jb]
-                goal_stride = bra_dims[jb]
+                goal = a_start[k] + column[k, out]
+                goal_stride = width[k]
             else:
                 goal = groups[jb, 2] + u_row[k, out] * groups[jb, 1] + u_column[b, jb]
                 goal_stride = groups[jb, 1]
@@ -115,14 +110,27 @@ def plan(
             moves[count] = (flags, source, width[i], goal, goal_stride, left_dims[k], right_dims[j])
             factors[count] = weights[entry]
             count += 1
+        first[i] = (l_height[i], left_dims[i], width[i], l_start[i], a_start[i], t_size, begun, count)
+        t_size += l_height[i] * width[i]
+        t_largest = max(t_largest, l_height[i] * width[i])
+
+    holes = np.empty((written.size, 4), np.int64)
+    used = 0
+    for k in range(left.size):
+        for s in range(local.size):
+            j = find(bra_table, bra_low, left[k] + local[s])
+            for b in range(delta_right.size):
+                if j >= 0 and u_column[b, j] >= 0 and not written[b, k, s]:
+                    columns = right_dims[find(ket_table, ket_low, bra[j] - delta_right[b])]
+                    goal = groups[j, 2] + u_row[k, s] * groups[j, 1] + u_column[b, j]
+                    holes[used] = (goal, groups[j, 1], left_dims[k], columns)
+                    used += 1
+    holes = holes[:used]
 
     second = np.empty((bra.size, 6), np.int64)
-    used = 0
     for j in range(bra.size):
-        if groups[j, 0] > 0 and r_height[j] > 0:
-            second[used] = (groups[j, 0], groups[j, 1], bra_dims[j], groups[j, 2], r_start[j], groups[j, 3])
-            used += 1
-    second = second[:used]
+        inner = groups[j, 1] if r_height[j] > 0 else 0
+        second[j] = (groups[j, 0], inner, bra_dims[j], groups[j, 2], r_start[j], groups[j, 3])
 
     back = np.empty((left.size * local.size, 6), np.int64)
     used = 0
@@ -133,81 +141,83 @@ def plan(
                 source = groups[j, 3] + u_row[i, s] * bra_dims[j]
                 back[used] = (source, bra_dims[j], a_start[i] + column[i, s], width[i], left_dims[i], bra_dims[j])
                 used += 1
-    sizes = np.array([a_size, t_size, u_size, o_size])
-    return first, moves[:count], factors[:count], second, back[:used], groups, sizes
+    sizes = np.array([a_size, t_size, u_size, o_size, t_largest])
+    return first, moves[:count], factors[:count], second, back[:used], groups, sizes, holes
 
 
 @compiled
 def multiply(tensor, environment, buffer, first):
+    """The whole of T."""
     for g in range(first.shape[0]):
-        m, k, n, e, t, o = first[g]
-        np.dot(
-            environment[e : e + m * k].reshape(m, k),
-            tensor[t : t + k * n].reshape(k, n),
-            buffer[o : o + m * n].reshape(m, n),
-        )
+        _product(tensor, environment, buffer, first[g], first[g, 5])
 
 
 @compiled
-def move(tensor, buffer, stacked, result, moves, weights, wanted):
-    """The block copies that end in U (wanted = 0) or O (wanted = TO_O)."""
-    for index in range(moves.shape[0]):
-        flags, source, source_stride, goal, goal_stride, rows, columns = moves[index]
-        if (flags & TO_O) != wanted:
-            continue
-        origin = buffer if flags & FROM_T else tensor
-        target = result if wanted != 0 else stacked
-        weight = weights[index]
-        if flags & ASSIGN:
-            for x in range(rows):
-                u = origin[source + x * source_stride : source + x * source_stride + columns]
-                v = target[goal + x * goal_stride : goal + x * goal_stride + columns]
-                for y in range(columns):
-                    v[y] = weight * u[y]
-        else:
-            for x in range(rows):
-                u = origin[source + x * source_stride : source + x * source_stride + columns]
-                v = target[goal + x * goal_stride : goal + x * goal_stride + columns]
-                for y in range(columns):
-                    v[y] += weight * u[y]
+def _product(tensor, environment, buffer, step, start):
+    m, k, n, e, t = step[0], step[1], step[2], step[3], step[4]
+    if m > 0 and n > 0:
+        np.dot(
+            environment[e : e + m * k].reshape(m, k),
+            tensor[t : t + k * n].reshape(k, n),
+            buffer[start : start + m * n].reshape(m, n),
+        )
 
 
 @compiled
 def apply(tensor, result, left, right, steps, buffers):
-    """result = H_eff tensor, both by left. buffers = (T, U, O); blocks of U that no move reaches must be zero."""
-    first, moves, weights, second, back, _, _ = steps
-    middle, stacked, grouped = buffers
-    multiply(tensor, left, middle, first)
-    move(tensor, middle, stacked, grouped, moves, weights, 0)
-    if second.shape[0] < back.shape[0]:
-        grouped[:] = 0
+    """result = H_eff tensor, both by left. buffers = (T of one charge, U, O), contents of no matter."""
+    _, moves, factors, second, back, _, _, _ = steps
+    _, stacked, grouped = buffers
+    result[:] = 0
+    half(tensor, result, left, steps, buffers)
     for g in range(second.shape[0]):
         m, k, n, u, r, o = second[g]
-        np.dot(
-            stacked[u : u + m * k].reshape(m, k),
-            right[r : r + k * n].reshape(k, n),
-            grouped[o : o + m * n].reshape(m, n),
-        )
-    move(tensor, middle, stacked, grouped, moves, weights, TO_O)
+        if k > 0:
+            np.dot(
+                stacked[u : u + m * k].reshape(m, k),
+                right[r : r + k * n].reshape(k, n),
+                grouped[o : o + m * n].reshape(m, n),
+            )
+        else:
+            grouped[o : o + m * n] = 0
     for index in range(back.shape[0]):
         source, source_stride, goal, goal_stride, rows, columns = back[index]
         for x in range(rows):
             u = grouped[source + x * source_stride : source + x * source_stride + columns]
             v = result[goal + x * goal_stride : goal + x * goal_stride + columns]
             for y in range(columns):
-                v[y] = u[y]
+                v[y] += u[y]
 
 
 @compiled
-def half(tensor, left, steps):
-    """The tensor U: environment, tensor and operator of one site contracted, grouped by bra charge as in
-    plan.groups."""
-    first, moves, weights, _, _, _, sizes = steps
-    middle = np.empty(sizes[1], tensor.dtype)
-    stacked = np.zeros(sizes[2], tensor.dtype)
-    multiply(tensor, left, middle, first)
-    move(tensor, middle, stacked, stacked, moves, weights, 0)
-    return stacked
+def half(tensor, result, left, steps, buffers):
+    """U in buffers[1], grouped by bra charge as in plan.groups; what goes past the right environment is added to
+    `result`, which may be any array where nothing does."""
+    first, moves, factors, _, _, _, _, holes = steps
+    part, stacked = buffers[0], buffers[1]
+    for index in range(holes.shape[0]):
+        goal, stride, rows, columns = holes[index]
+        for x in range(rows):
+            stacked[goal + x * stride : goal + x * stride + columns] = 0
+    for i in range(first.shape[0]):
+        _product(tensor, left, part, first[i], 0)
+        for index in range(first[i, 6], first[i, 7]):
+            flags, source, source_stride, goal, goal_stride, rows, columns = moves[index]
+            origin = part if flags & FROM_T else tensor
+            target = result if flags & TO_O else stacked
+            factor = factors[index]
+            if flags & ASSIGN:
+                for x in range(rows):
+                    u = origin[source + x * source_stride : source + x * source_stride + columns]
+                    v = target[goal + x * goal_stride : goal + x * goal_stride + columns]
+                    for y in range(columns):
+                        v[y] = factor * u[y]
+            else:
+                for x in range(rows):
+                    u = origin[source + x * source_stride : source + x * source_stride + columns]
+                    v = target[goal + x * goal_stride : goal + x * goal_stride + columns]
+                    for y in range(columns):
+                        v[y] += factor * u[y]
 
 
 @compiled
@@ -219,7 +229,7 @@ def close(stacked, grouped, steps, dims):
         size += groups[j, 1] * dims[j]
     environment = np.empty(size, stacked.dtype)
     goal = 0
-    bra = np.conj(grouped)
+    bra = conjugate(grouped)
     for j in range(dims.size):
         m, n, u, o = groups[j]
         k = dims[j]
@@ -230,3 +240,23 @@ def close(stacked, grouped, steps, dims):
         )
         goal += n * k
     return environment
+
+
+@compiled
+def environment(
+    tensor, before, left, left_dims, right, right_dims, local, delta_left, delta_right, start, entries, weights, scratch
+):
+    """Environment by bra on the right bond from the one on the left, also by bra, and a site orthonormal towards the
+    right; elements of scratch memory needed."""
+    steps = plan(
+        left, left_dims, right, right_dims, local, delta_left, delta_right, start, -1, start, entries, weights, right,
+        right_dims,
+    )  # fmt: skip
+    sizes = steps[6]
+    a, b, c = before.size, before.size + sizes[4], before.size + sizes[4] + sizes[2]
+    needed = c + tensor.size
+    work = room(scratch, needed)
+    to_ket(before, left, left_dims, delta_left, start, work[:a])
+    half(tensor, tensor, work[:a], steps, (work[a:b], work[b:c]))
+    gather_into(work[c:needed], tensor, left, left_dims, right, right_dims, local)
+    return close(work[b:c], work[c:needed], steps, right_dims), needed

@@ -12,7 +12,7 @@ import numpy as np
 
 from manybody.quantum import blocks
 from manybody.quantum.chain import Bond, Chain
-from manybody.quantum.compiled import compiled
+from manybody.quantum.compiled import compiled, conjugate
 from manybody.quantum.variance import residual_halves
 
 NEGLIGIBLE = 1e-14
@@ -75,8 +75,8 @@ def directions(near, far, own, groups, turned_groups, dims, probes, noise, wante
             if d > 0:
                 b = own[o_place : o_place + r * d].reshape(r, d)
                 for _ in range(2):
-                    z -= np.dot(b, np.dot(np.conj(b).T, z))
-            gram = np.dot(np.conj(z).T, z)
+                    z -= np.dot(b, np.dot(conjugate(b).T, z))
+            gram = np.dot(conjugate(z).T, z)
             values, states = np.linalg.eigh(gram)
             z[:] = np.dot(z, np.ascontiguousarray(states))
             weights[w_place : w_place + k] = values / k
@@ -108,7 +108,7 @@ def directions(near, far, own, groups, turned_groups, dims, probes, noise, wante
             if d > 0:
                 b = own[o_place : o_place + r * d].reshape(r, d)
                 q = np.ascontiguousarray(q)
-                q -= np.dot(b, np.dot(np.conj(b).T, q))
+                q -= np.dot(b, np.dot(conjugate(b).T, q))
                 q, _ = np.linalg.qr(q)
             found[goal : goal + r * a] = np.ascontiguousarray(q).reshape(r * a)
         o_place += r * d

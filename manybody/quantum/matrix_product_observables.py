@@ -154,7 +154,8 @@ class _Channels:
         arguments = (*left.pair, *right.pair, local, self.delta, self.delta, 0, -1, 0)
         none = (np.zeros((0, 4), np.int64), np.zeros(0, self.dtype))
         steps = contraction.plan(*arguments, *none, *right.pair)
-        by_ket = blocks.to_ket(self.environment, *left.pair, self.delta, 0)
+        by_ket = np.empty_like(self.environment)
+        blocks.to_ket(self.environment, *left.pair, self.delta, 0, by_ket)
         return _pair_values(centre, by_ket, steps, *left.pair, *right.pair, local, self.delta, ladder)
 
     def extend(self, tensor, left: Bond, right: Bond, local, ladder) -> None:
@@ -168,14 +169,10 @@ class _Channels:
             rows, columns = np.nonzero(ladder[a])
             entries.extend((0, old + a, s, t) for s, t in zip(rows.tolist(), columns.tolist(), strict=True))
             weights.extend(ladder[a][rows, columns].tolist())
-        steps = contraction.plan(
-            *left.pair, *right.pair, local, self.delta, delta, 0, -1, 0, np.array(entries, np.int64),
-            np.array(weights, self.dtype), *right.pair,
+        self.environment, _ = contraction.environment(
+            tensor, self.environment, *left.pair, *right.pair, local, self.delta, delta, 0,
+            np.array(entries, np.int64), np.array(weights, self.dtype), np.empty(0, self.dtype),
         )  # fmt: skip
-        by_ket = blocks.to_ket(self.environment, *left.pair, self.delta, 0)
-        stacked = contraction.half(tensor, by_ket, steps)
-        grouped = blocks.gather_right(tensor, *left.pair, *right.pair, local)
-        self.environment = contraction.close(stacked, grouped, steps, right.dims)
         self.delta = delta
 
 

@@ -2,7 +2,7 @@
 
 import numpy as np
 
-from manybody.quantum import blocks, lanczos, split
+from manybody.quantum import blocks, split
 from manybody.quantum.chain import Bond, Chain
 
 
@@ -11,24 +11,16 @@ def step(chain: Chain, site: int, limit: int, allowed: float, vectors: int, tole
 
     limit, allowed: see split.choose. vectors, tolerance: see lanczos.lowest.
     """
-    left, right = chain.bonds[site], chain.bonds[site + 2]
     local = chain.local[site : site + 2]
-    outer = (*left.pair, *right.pair, *local)
-    pair = join(chain, site)
     operator = chain.pair_operator(site)
-    charges = blocks.pair_charges(*local)
-    steps = chain.plan(operator, left, right, charges, operator.end, -1)
-    energy, pair, _, _ = lanczos.lowest(pair, chain.left_by_ket(site), chain.right[site + 2], steps, vectors, tolerance)
-    middle = blocks.reachable(left.charges, right.charges, *local)
-    matrices = blocks.cut_pair(pair, middle, *outer)
-    shapes = blocks.pair_shapes(middle, *outer)
-    weights, states = split.spectra(matrices, shapes)
-    kept, discarded = split.choose(weights, shapes, limit, allowed)
-    isometry, carry = split.parts(matrices, shapes, states, kept)
-    stay = kept > 0
-    chain.bonds[site + 1] = Bond(middle[stay], kept[stay])
-    chain.put(site, blocks.scatter_left(isometry, *left.pair, *chain.bonds[site + 1].pair, local[0]))
-    chain.put(site + 1, carry / np.linalg.norm(carry))
+    energy, pair = chain.lowest(
+        join(chain, site), operator, site, site + 2, blocks.pair_charges(*local), vectors, tolerance
+    )
+    left, right = chain.bonds[site], chain.bonds[site + 2]
+    first, second, charges, dims, discarded = split.cut_pair(pair, *left.pair, *right.pair, *local, limit, allowed)
+    chain.bonds[site + 1] = Bond(charges, dims)
+    chain.put(site, first)
+    chain.put(site + 1, second)
     chain.advance(site)
     return energy, discarded
 
@@ -37,8 +29,4 @@ def join(chain: Chain, site: int) -> np.ndarray:
     """The tensors of two neighbours (centre first) as one pair tensor by left."""
     left, middle, right = chain.bonds[site : site + 3]
     local = chain.local[site : site + 2]
-    grouped = blocks.gather_right(chain.tensor(site), *left.pair, *middle.pair, local[0])
-    _, height = blocks.by_right(*left.pair, middle.charges, local[0])
-    widths = blocks.by_left(*middle.pair, *right.pair, local[1])[2]
-    matrices = split.carry_over(grouped, height, middle.dims, chain.tensor(site + 1), widths)
-    return blocks.join_pair(matrices, middle.charges, *left.pair, *right.pair, *local)
+    return split.join_pair(chain.tensor(site), chain.tensor(site + 1), *left.pair, *middle.pair, *right.pair, *local)

@@ -8,8 +8,9 @@ for terms of neighbouring sites, a lower estimate for terms of longer range.
 import numpy as np
 
 from manybody.quantum import blocks, contraction
-from manybody.quantum.chain import Bond, Chain
-from manybody.quantum.compiled import compiled
+from manybody.quantum.chain import Chain
+from manybody.quantum.compiled import compiled, conjugate, room
+from manybody.quantum.matrix_product_operator import OperatorSite
 
 
 def measure(chain: Chain) -> tuple[float, float]:
@@ -26,21 +27,38 @@ def measure(chain: Chain) -> tuple[float, float]:
 
 def at_centre(chain: Chain) -> tuple[float, float]:
     """Energy and squared residual of site 0, where the centre is."""
-    operator, left, right = chain.operators[0], chain.bonds[0], chain.bonds[1]
-    steps = chain.plan(operator, left, right, chain.local[0], operator.end, -1)
     tensor = chain.tensor(0)
-    product = image(tensor, chain.left_by_ket(0), chain.right[1], steps)
+    product = image(chain, tensor, chain.operators[0], 0, 1, chain.local[0])
     energy = float(np.vdot(tensor, product).real)
     return energy, float(np.linalg.norm(product - energy * tensor) ** 2)
 
 
+def image(chain: Chain, tensor, operator: OperatorSite, left: int, right: int, local) -> np.ndarray:
+    """H_eff tensor, everything between two bonds."""
+    return _image(
+        tensor, chain.left[left], chain.right[right], *chain.bonds[left].pair, *chain.bonds[right].pair, local,
+        operator.delta_left, operator.delta_right, operator.start, operator.end, operator.entries,
+        chain.weights(operator),
+    )  # fmt: skip
+
+
 @compiled
-def image(tensor, left, right, steps):
-    """H_eff tensor."""
+def _image(
+    tensor, before, after, left, left_dims, right, right_dims, local, delta_left, delta_right, start, end, entries,
+    weights,
+):  # fmt: skip
+    steps = contraction.plan(
+        left, left_dims, right, right_dims, local, delta_left, delta_right, start, end, -1, entries, weights, right,
+        right_dims,
+    )  # fmt: skip
     sizes = steps[6]
+    by_ket = np.empty_like(before)
+    blocks.to_ket(before, left, left_dims, delta_left, start, by_ket)
+    buffers = (
+        np.empty(sizes[4], tensor.dtype), np.empty(sizes[2], tensor.dtype), np.empty(sizes[3], tensor.dtype)
+    )  # fmt: skip
     result = np.empty_like(tensor)
-    buffers = (np.empty(sizes[1], tensor.dtype), np.zeros(sizes[2], tensor.dtype), np.empty(sizes[3], tensor.dtype))
-    contraction.apply(tensor, result, left, right, steps, buffers)
+    contraction.apply(tensor, result, by_ket, after, steps, buffers)
     return result
 
 
@@ -56,25 +74,54 @@ def residual_halves(chain: Chain, site: int):
     charges the two sites reach; these."""
     left, bond, after = chain.bonds[site : site + 3]
     local = chain.local[site : site + 2]
-    reach = blocks.reachable(left.charges, after.charges, *local)
-    if not np.isin(bond.charges, reach).all():
+    reach, dims, complete = blocks.reach(*left.pair, *bond.pair, *after.pair, *local)
+    if not complete:
         chain.prune(site + 1, reach)
         bond = chain.bonds[site + 1]
-    dims = np.zeros(reach.size, np.int64)
-    dims[np.searchsorted(reach, bond.charges)] = bond.dims
-    turned_bond, turned_after = bond.mirrored(chain.total), after.mirrored(chain.total)
-    bra, turned_bra = Bond(reach, dims), Bond(chain.total - reach, dims)
     here, there = chain.operators[site], chain.other_operators[chain.length - 2 - site]
-    steps = chain.plan(here, left, bond, local[0], -1, here.end, bra)
-    turned_steps = chain.plan(there, turned_after, turned_bond, local[1], -1, there.start, turned_bra)
     # An operator finished on the left leaves the right space alone; the channel of those not yet begun completes the
     # residual.
-    tensor = chain.turned_tensor(site + 1)
-    near = contraction.half(chain.tensor(site), chain.left_by_ket(site), steps)
-    by_ket = blocks.to_ket(chain.right[site + 2], *turned_after.pair, there.delta_left, there.start)
-    far = contraction.half(tensor, by_ket, turned_steps)
-    own = blocks.gather_right(tensor, *turned_after.pair, *turned_bra.pair, local[1])
-    return near, far, own, steps[5], turned_steps[5], dims, reach
+    near, far, own, groups, turned_groups, needed = halves(
+        chain.tensor(site), chain.left[site], *left.pair, *bond.pair, local[0], here.delta_left, here.delta_right,
+        here.start, here.end, here.entries, chain.weights(here), chain.turned_tensor(site + 1), chain.right[site + 2],
+        *after.pair, local[1], there.delta_left, there.delta_right, there.start, there.end, there.entries,
+        chain.weights(there), reach, dims, chain.total, chain.scratch.array,
+    )  # fmt: skip
+    chain.scratch.enlarge(needed)
+    return near, far, own, groups, turned_groups, dims, reach
+
+
+@compiled
+def halves(
+    tensor, before, left, left_dims, bond, bond_dims, local, delta_left, delta_right, start, end, entries, weights,
+    turned_tensor, after, right, right_dims, turned_local, turned_delta_left, turned_delta_right, turned_start,
+    turned_end, turned_entries, turned_weights, reach, dims, total, scratch,
+):  # fmt: skip
+    """near, far, own and the groups of both as in residual_halves, scratch elements needed; near and far lie in the
+    scratch memory."""
+    turned, turned_bond, turned_reach = total - right, total - bond, total - reach
+    steps = contraction.plan(
+        left, left_dims, bond, bond_dims, local, delta_left, delta_right, start, -1, end, entries, weights, reach, dims
+    )
+    turned_steps = contraction.plan(
+        turned, right_dims, turned_bond, bond_dims, turned_local, turned_delta_left, turned_delta_right, turned_start,
+        -1, turned_start, turned_entries, turned_weights, turned_reach, dims,
+    )  # fmt: skip
+    sizes, turned_sizes = steps[6], turned_steps[6]
+    near_size, far_size = sizes[2], turned_sizes[2]
+    both = near_size + far_size
+    kets = both + max(before.size, after.size)
+    needed = kets + max(sizes[4], turned_sizes[4])
+    work = room(scratch, needed)
+    near, far, part = work[:near_size], work[near_size:both], work[kets:needed]
+    by_ket = work[both : both + before.size]
+    blocks.to_ket(before, left, left_dims, delta_left, start, by_ket)
+    contraction.half(tensor, tensor, by_ket, steps, (part, near))
+    by_ket = work[both : both + after.size]
+    blocks.to_ket(after, turned, right_dims, turned_delta_left, turned_start, by_ket)
+    contraction.half(turned_tensor, turned_tensor, by_ket, turned_steps, (part, far))
+    own = blocks.gather_right(turned_tensor, turned, right_dims, turned_reach, dims, turned_local)
+    return near, far, own, steps[5], turned_steps[5], needed
 
 
 @compiled
@@ -89,7 +136,7 @@ def _outside(near, far, own, groups, turned_groups, dims):
             x = far[v : v + r * columns].reshape(r, columns)
             if d > 0:
                 b = own[place : place + r * d].reshape(r, d)
-                x = x - np.dot(b, np.dot(np.conj(b).T, x))
+                x = x - np.dot(b, np.dot(conjugate(b).T, x))
             y = np.dot(near[u : u + m * columns].reshape(m, columns), np.ascontiguousarray(x.T))
             total += np.sum((y * np.conj(y)).real)
         place += r * d

@@ -26,11 +26,14 @@ def test_energy_belongs_to_the_vector_and_falls_with_products(vectors):
     left, right, local = state.bonds[14], state.bonds[16], state.local[14:16]
     pair = two_site.join(state, 14)
     operator = state.pair_operator(14)
-    steps = state.plan(operator, left, right, blocks.pair_charges(*local), operator.end, -1)
-    environments = state.left_by_ket(14), state.right[16]
-    first = np.vdot(pair, variance.image(pair, *environments, steps)) / np.vdot(pair, pair)
-    energy, vector, residual, used = lanczos.lowest(pair, *environments, steps, vectors, 0.0)
-    image = variance.image(vector, *environments, steps)
+    place = operator, 14, 16, blocks.pair_charges(*local)
+    first = np.vdot(pair, variance.image(state, pair, *place)) / np.vdot(pair, pair)
+    energy, vector, residual, used, _ = lanczos.lowest(
+        pair, state.left[14], state.right[16], *left.pair, *right.pair, place[3], operator.delta_left,
+        operator.delta_right, operator.start, operator.end, operator.entries, state.weights(operator), vectors, 0.0,
+        np.empty(0),
+    )  # fmt: skip
+    image = variance.image(state, vector, *place)
     assert used == min(vectors, pair.size)
     assert abs(np.linalg.norm(vector) - 1) < 1e-13
     np.testing.assert_allclose(np.vdot(vector, image), energy, rtol=1e-13)
