@@ -45,7 +45,7 @@ def xxz_ring(sites, anisotropy=1.0):
         np.fill_diagonal(matrix, diagonal)
         step = np.linalg.solve(matrix, -residual)
         size = np.abs(step).max()
-        x = x + step * min(1, 0.5 / size)
+        x = x + step * min(1, 0.5 / max(size, 1e-300))
         if size < 1e-13:
             break
     return sites * anisotropy / 4 + np.sum(np.cos(np.pi - phase(x, 1)) - anisotropy)

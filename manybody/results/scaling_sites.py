@@ -1,106 +1,38 @@
 """Energies per site against the number of sites, and their thermodynamic limit with an error that can be believed.
 
-Which form is right is not known beforehand (open or periodic, critical or gapped, logarithms), so several are tried.
-Each is judged by how much its limit moves when the largest or the smallest size is left out, which is what an
-extrapolation risks; their limits are averaged with weights that fall with it, and the scatter between them goes into
-the error. Calibrated on exactly solvable chains (tests/results/test_scaling_sites.py). The quantum energy decides;
-the classical energy and the gap are extrapolated with the same forms, correlation lengths and weights, so that their
-limits fit together exactly."""
+Which form is right is not known beforehand (open or periodic, critical or gapped, logarithms), so many are compared
+(site_forms.py). Each has free coefficients and a rest that is a random function of the size, of unknown amplitude: so
+sizes that lie close together count little more than one, and how far the limit may still move beyond the largest size
+follows from how the data vary within them. For every form and amplitude the limit is normally distributed, with the
+restricted likelihood of the data as its weight (Patterson, Thompson 1971). The standard error is that of the mixture,
+and so holds both the error within a form and the choice between forms.
+
+No form is exactly right, and energies with ten digits would rule out all but one of them; so likelihoods count as if
+there were a few independent data only (fractional likelihoods; Holmes, Walker 2017). Calibrated on chains and lattices
+with known limits: tests/benchmarks/limits.py prints the coverage.
+
+The quantum energy decides; the classical energy and the gap are extrapolated with the same forms, amplitudes and
+weights, so that their limits fit together exactly. Citations from memory."""
 
 from dataclasses import dataclass
 
 import numpy as np
+from scipy.special import ndtr
 
-from manybody.results.fits import fit
 from manybody.results.scaling_spin import ROUNDING
+from manybody.results.site_forms import Form, forms_for
 
-SHIFT = 1.5
-"""Weight of the movement under leaving one size out. 1.5 gives the stated coverage; with three sizes, where no second
-form can be compared, FEW_SHIFT does."""
-FEW_SHIFT = 4.0
-ACCIDENT = 0.2
-"""A form's error is at least this fraction of its distance from the second closest form: small shifts may be luck."""
-SHARPNESS = 1.5
-"""Weights are errors to this power, inverted; 2 would trust the apparent errors of wrong forms too much."""
-CALIBRATION = {True: 0.65, False: 0.4}
-"""The scatter above overstates the error of the average, more so with the many forms of an unknown geometry (False).
-With these factors 95 of 100 exact limits lie within two standard errors."""
-_FRACTIONS = np.array([1.0, 0.3, 0.1, 0.03, 0.01, 1e-3, 1e-4])
-PLAUSIBLE = 25.0
-"""A form whose information criterion is this much behind counts e times less, twice as much e^4 times."""
-
-
-@dataclass(frozen=True)
-class Form:
-    """A form in N: powers of 1/N in order, the last of them the omitted term.
-
-    `logs` adds the omitted power over those powers of ln N; `decay` adds N^-decay exp(-N/xi), xi fitted.
-    """
-
-    name: str
-    powers: tuple[float, ...]
-    logs: tuple[float, ...] = ()
-    decay: float | None = None
-
-    @property
-    def count(self) -> int:
-        return len(self.powers) - 1 + len(self.logs) + 2 * (self.decay is not None)
-
-
-PERIODIC = (
-    Form("constant", (0, 2)),
-    Form("1/N^2", (0, 2, 4)),
-    Form("1/N^2 + 1/N^4", (0, 2, 4, 6)),
-    Form("1/N^2 + 1/N^4 + 1/N^6", (0, 2, 4, 6, 8)),
-    Form("1/N^2 with logarithm", (0, 2, 2), logs=(3,)),
-    Form("exponential", (0,), decay=0.0),
-    Form("exponential/N^(3/2)", (0,), decay=1.5),
-)
-OPEN = (
-    Form("1/N", (0, 1, 2)),
-    Form("1/N + 1/N^2", (0, 1, 2, 3)),
-    Form("1/N + 1/N^2 + 1/N^3", (0, 1, 2, 3, 4)),
-    Form("1/N + ... + 1/N^4", (0, 1, 2, 3, 4, 5)),
-    Form("1/N + 1/N^2 with logarithm", (0, 1, 2, 2), logs=(2,)),
-    Form("1/N + 1/N^2 with logarithm at the ends", (0, 1, 2, 1), logs=(1,)),
-    Form("1/N + exponential/N", (0, 1), decay=1.0),
-    Form("1/N + exponential/N^(3/2)", (0, 1), decay=1.5),
-)
-PERIODIC_2D = (
-    Form("constant", (0, 1.5)),
-    Form("1/N^(3/2)", (0, 1.5, 2)),
-    Form("1/N^(3/2) + 1/N^2", (0, 1.5, 2, 2.5)),
-    Form("exponential", (0,), decay=0.0),
-)
-OPEN_2D = (
-    Form("1/N^(1/2)", (0, 0.5, 1)),
-    Form("1/N^(1/2) + 1/N", (0, 0.5, 1, 1.5)),
-    Form("1/N^(1/2) + 1/N + 1/N^(3/2)", (0, 0.5, 1, 1.5, 2)),
-    Form("1/N", (0, 1, 2)),
-)
-PERIODIC_3D = (Form("constant", (0, 4 / 3)), Form("1/N^(4/3)", (0, 4 / 3, 5 / 3)))
-OPEN_3D = (
-    Form("1/N^(1/3)", (0, 1 / 3, 2 / 3)),
-    Form("1/N^(1/3) + 1/N^(2/3)", (0, 1 / 3, 2 / 3, 1)),
-    Form("1/N^(1/3) + 1/N^(2/3) + 1/N", (0, 1 / 3, 2 / 3, 1, 4 / 3)),
-)
-_BY_GEOMETRY = {
-    ("periodic", 1): PERIODIC,
-    ("open", 1): OPEN,
-    ("periodic", 2): PERIODIC_2D,
-    ("open", 2): OPEN_2D,
-    ("periodic", 3): PERIODIC_3D,
-    ("open", 3): OPEN_3D,
-}
-
-
-def forms_for(boundary=None, dimension=None) -> tuple[Form, ...]:
-    """The forms to try; boundary "open", "periodic" or None for unknown or mixed, dimension 1, 2, 3 or None."""
-    chosen = []
-    for (edge, size), forms in _BY_GEOMETRY.items():
-        if boundary in (None, edge) and (size == dimension or (dimension is None and size < 3)):
-            chosen += [form for form in forms if form.powers != (0, 1.5) or boundary is not None]
-    return tuple(dict.fromkeys(chosen))
+INDEPENDENT = 5.0
+"""Likelihoods count as if at most this many data were independent."""
+SPREAD = 0.8
+"""The mixture overstates the error. With this factor 9 of 10 limits lie within one standard error and 97 to 99 of 100
+within two; a smaller one would put limits of S = 3/2 chains outside."""
+AMPLITUDES = 10.0 ** np.arange(-10.5, 0.51, 0.25)
+"""Of the rest, in units of the energy scaled back to a linear size of one: up to three times the energy."""
+RARE = {("periodic", "growing"): 0.1}
+NEGLIGIBLE = 1e-7
+LUCK = 3.0
+"""A family of sizes must have an error this many times smaller than all sizes together to be preferred."""
 
 
 @dataclass(frozen=True)
@@ -118,16 +50,20 @@ class Limit:
 
 @dataclass(frozen=True)
 class Curve:
-    """The leading form fitted to every series: per-site value at N sites, for drawing."""
+    """The leading form fitted to every series: per-site value at N sites, for drawing.
+
+    fixed (k,): free coefficients; rest (n,): coefficients of the covariance with the n sizes of the fit.
+    """
 
     form: Form
-    length: float
-    first: float
-    coefficients: dict[str, np.ndarray]
+    nodes: np.ndarray
+    fixed: dict[str, np.ndarray]
+    rest: dict[str, np.ndarray]
 
     def at(self, series, sites):
-        columns, _ = _columns(self.form, np.asarray(sites, float), self.length, self.first)
-        return columns @ self.coefficients[series]
+        x, first = np.asarray(sites, float) ** (1 / self.form.dimension), self.nodes[0]
+        near = self.form.covariance(x, self.nodes, first)
+        return self.form.fixed(x, first) @ self.fixed[series] + near @ self.rest[series]
 
 
 def extrapolate(sites, energy, error, others=None, boundary=None, dimension=None, families=None) -> Limit | None:
@@ -142,160 +78,138 @@ def extrapolate(sites, energy, error, others=None, boundary=None, dimension=None
     for values in others.values():
         good &= np.isfinite(values)
     candidates = {"all sizes": good} | {name: good & mask for name, mask in (families or {}).items()}
-    best = None
+    best, seen = None, set()
     for name, mask in candidates.items():
-        if mask.sum() < 3 or (name != "all sizes" and mask.sum() == good.sum()):
+        if mask.sum() < 3 or mask.tobytes() in seen:
             continue
-        found = _one_family(
-            name,
-            sites[mask],
-            energy[mask],
-            error[mask],
-            {k: v[mask] for k, v in others.items()},
-            forms_for(boundary, dimension),
-            boundary is not None and dimension is not None,
-        )
-        # a subset must be clearly better than all sizes together, or it is only luckier
-        handicap = 1.0 if name == "all sizes" else 3.0
-        if found is not None and (best is None or found.errors["energy"] * handicap < best[0]):
+        seen.add(mask.tobytes())
+        subset = {k: v[mask] for k, v in others.items()}
+        found = _one_family(name, sites[mask], energy[mask], error[mask], subset, boundary, dimension)
+        handicap = 1.0 if name == "all sizes" else LUCK
+        if best is None or found.errors["energy"] * handicap < best[0]:
             best = (found.errors["energy"] * handicap, found)
     return best[1] if best else None
 
 
-def _one_family(name, sites, energy, error, others, forms, known):
+def _one_family(name, sites, energy, error, others, boundary, dimension):
     order = np.argsort(sites)
     sites = sites[order]
-    sigma = np.maximum(error[order] / 2, ROUNDING * np.max(np.abs(energy))) / sites
-    series = {"energy": (energy - error / 2)[order] / sites}
-    for key, values in others.items():
-        series[key] = (values - (error / 2 if key == "gap" else 0.0))[order] / sites
-    tried = [_try(form, sites, series["energy"], sigma) for form in forms if len(sites) > form.count]
-    if not tried:
-        return None
-    # forms with too few data for a criterion count fully; the others are measured from the second best, since with one
-    # form alone nothing would show that it is wrong
-    marks = np.array([one.criterion for one in tried])
-    known_marks = np.sort(marks[np.isfinite(marks)])
-    reference = known_marks[min(1, len(known_marks) - 1)] if len(known_marks) else 0.0
-    plausible = np.exp(
-        -((np.clip(np.where(np.isfinite(marks), marks, reference) - reference, 0, None) / PLAUSIBLE) ** 2)
-    )
-    scale = CALIBRATION[known]
-    tables = {key: _table(tried, values, sigma if key in ("energy", "gap") else 0.0) for key, values in series.items()}
-    limit, own, noise = tables["energy"]
-    weights = plausible * np.maximum(np.hypot(own, noise), 1e-300) ** -SHARPNESS
+    sigma = np.maximum(error[order] / 2, ROUNDING * (np.max(np.abs(energy)) or 1.0)) / sites
+    names = ["energy", *others]
+    noisy = np.array([key in ("energy", "gap") for key in names])
+    totals = np.stack([energy, *others.values()], axis=1)[order] - np.outer(error[order] / 2, noisy)
+    series = totals / sites[:, None]
+    forms = forms_for(sites, boundary, dimension)
+    groups = {}
+    for form in forms:
+        groups.setdefault((form.boundary, form.dimension), []).append(form)
+    parts = [_Group(group, sites, series, sigma) for group in groups.values() if len(sites) > group[0].width]
+    marks = np.concatenate([part.marks.ravel() for part in parts])
+    independent = min(1.0, INDEPENDENT / (len(sites) - 1))
+    weights = np.exp(-0.5 * independent * (marks - marks.min())) * np.concatenate([p.prior.ravel() for p in parts])
     weights /= weights.sum()
-    values, spread = {}, {}
-    for key, (limit, own, noise) in tables.items():
-        values[key] = float(weights @ limit)
-        doubt = weights @ (own**2 + (limit - values[key]) ** 2)
-        spread[key] = float(np.sqrt(scale**2 * doubt + weights @ noise**2))
-    lead = int(np.argmax(weights))
-    best = tried[lead]
-    curve = Curve(best.form, best.length, sites[0], {key: best.operators[0] @ series[key] for key in series})
-    return Limit(values, spread, best.form.name, float(weights[lead]), name, tuple(int(n) for n in sites), curve)
+    cuts = np.cumsum([part.marks.size for part in parts])[:-1]
+    limits, noise, spread, share, heaviest = [], [], [], {}, {}
+    for part, w in zip(parts, np.split(weights, cuts)):
+        w = w.reshape(part.marks.shape)
+        for k, form in enumerate(part.forms):
+            share[form.name] = share.get(form.name, 0.0) + float(w[:, k].sum())
+            top = int(np.argmax(w[:, k]))
+            heaviest[form.name] = max(heaviest.get(form.name, (-1.0,)), (w[top, k], id(part), part, (top, k)))
+        found = part.limits(np.argwhere(w > NEGLIGIBLE))
+        for store, value in zip((limits, noise, spread), found):
+            store.append(value)
+    kept = weights[weights > NEGLIGIBLE]
+    kept /= kept.sum()
+    limits, noise, spread = (np.concatenate(a) for a in (limits, noise, spread))
+    values, errors = {}, {}
+    for k, key in enumerate(names):
+        values[key] = float(kept @ limits[:, k])
+        deviation = np.sqrt(noise * noisy[k] + spread[:, k])
+        errors[key] = SPREAD * _standard_error(kept, limits[:, k] - values[key], deviation)
+    form = max(share, key=share.get)
+    _, _, part, place = heaviest[form]
+    curve = part.curve(place, names)
+    return Limit(values, errors, form, share[form], name, tuple(int(n) for n in sites), curve)
 
 
-@dataclass(frozen=True)
-class _Tried:
-    """One form fitted to the energy.
+class _Group:
+    """All forms with the same free coefficients, fitted to the energy at all amplitudes.
 
-    operators turn per-site values into coefficients: for all sizes, without the largest, without the smallest; columns
-    and shape (the omitted term) belong to all sizes.
+    Everything is divided by sigma and split into the part that the free coefficients take up and the rest (n - k,), on
+    which the random columns are diagonal: U diag(d) V^T. marks (amplitudes, forms): -2 ln restricted likelihood; prior:
+    shared by the forms of one kind.
     """
 
-    form: Form
-    operators: tuple[np.ndarray, np.ndarray, np.ndarray]
-    columns: np.ndarray
-    shape: np.ndarray
-    length: float
-    criterion: float
+    def __init__(self, forms, sites, series, sigma):
+        self.forms = forms
+        self.x = sites ** (1 / forms[0].dimension)
+        first = self.x[0]
+        fixed = forms[0].fixed(self.x, first)
+        k = fixed.shape[1]
+        self.random = np.stack([form.random(self.x, first) for form in forms])
+        weighted = self.random / sigma[:, None]
+        q, r = np.linalg.qr(fixed / sigma[:, None], mode="complete")
+        self.data = series / sigma[:, None]
+        self.solve = np.linalg.solve(r[:k], q[:, :k].T)
+        u, d, self.modes = np.linalg.svd(q[:, k:].T @ weighted, full_matrices=False)
+        self.d = d
+        self.seen = np.swapaxes(u, 1, 2) @ (q[:, k:].T @ self.data)
+        self.effect = np.einsum("kn,gnm,gjm->gkj", self.solve, weighted, self.modes)
+        everything = np.einsum("n,gnm->gm", self.solve[0], weighted)
+        # what the data say nothing about: the part of the random columns beyond the modes
+        self.unseen = np.maximum(np.sum(everything**2, axis=1) - np.sum(self.effect[:, 0] ** 2, axis=1), 0.0)
+        scale = np.max(np.abs(series[:, 0])) or 1.0
+        natural = np.array([first ** -float(form.power) for form in forms])
+        self.amplitudes = AMPLITUDES[:, None] * scale * natural
+        stretch = 1 + (self.amplitudes[..., None] * d) ** 2
+        self.marks = np.sum(np.log(stretch) + self.seen[..., 0] ** 2 / stretch, axis=-1)
+        # free coefficients beyond the limit itself: of the size of the energy, scaled back like the amplitudes
+        self.marks += 2 * np.sum(np.log(np.abs(np.diag(r[:k])))) + 2 * (k - 1) * np.log(scale / first)
+        kinds = [form.kind for form in forms]
+        self.prior = np.broadcast_to([form.weight / kinds.count(form.kind) for form in forms], self.marks.shape)
+
+    def limits(self, places):
+        """Limits (places, series), their variance from sigma (places,) and from the rest (places, series)."""
+        row, column = places.T
+        square = self.amplitudes[row, column] ** 2
+        d, seen, effect = self.d[column], self.seen[column], self.effect[column, 0]
+        stretch = 1 + square[:, None] * d**2
+        shrink = square[:, None] * d / stretch
+        limits = self.solve[0] @ self.data - np.einsum("pj,pjs->ps", effect * shrink, seen)
+        noise = np.sum(self.solve[0] ** 2) + np.sum((effect * shrink) ** 2, axis=1)
+        rest = square * self.unseen[column] + np.sum(effect**2 * square[:, None] / stretch**2, axis=1)
+        quadratic = np.einsum("pj,pjs->ps", 1 / stretch, seen**2)
+        # the amplitude of another series, relative to the energy's
+        ratio = quadratic / np.maximum(quadratic[:, :1], 1e-300)
+        return limits, noise, rest[:, None] * ratio
+
+    def curve(self, place, names):
+        row, column = place
+        form, d = self.forms[column], self.d[column]
+        square = self.amplitudes[row, column] ** 2
+        inner = (square * d / (1 + square * d**2))[:, None] * self.seen[column]
+        fixed = self.solve @ self.data - self.effect[column] @ inner
+        values = self.random[column] @ (self.modes[column].T @ inner)
+        rest = np.linalg.lstsq(form.covariance(self.x, self.x, self.x[0]), values, rcond=1e-13)[0]
+        by_name = [dict(zip(names, array.T)) for array in (fixed, rest)]
+        return Curve(form, self.x, *by_name)
 
 
-def _subsets(n):
-    return slice(None), slice(0, n - 1), slice(1, n)
+def _standard_error(weights, distance, deviation):
+    """Half the width of the central 68 % or a quarter of that of the central 95 %, whichever is larger."""
+    farthest = np.max(np.abs(distance) + 20 * deviation)
+    one, two = (_half_width(weights, distance, deviation, farthest, mass) for mass in (0.6827, 0.9545))
+    return max(one, 0.5 * two)
 
 
-def _try(form, sites, values, sigma):
-    parts = []
-    for part in _subsets(len(sites)):
-        length = np.nan if form.decay is None else _length(form, sites[part], values[part], sigma[part])
-        parts.append((length, *_columns(form, sites[part], length, sites[part][0])))
-    length, columns, shape = parts[0]
-    criterion, tau = np.inf, np.inf
-    if columns.shape[0] > columns.shape[1]:
-        whole = fit(columns, values, sigma, shape)
-        criterion, tau = whole.criterion, whole.tau
-    operators = []
-    for part, (_, some, rest) in zip(_subsets(len(sites)), parts):
-        noise = np.hypot(sigma[part], tau * rest) if np.isfinite(tau) else rest
-        operators.append(np.linalg.pinv(some / noise[:, None], rcond=1e-14) / noise)
-    return _Tried(form, tuple(operators), columns, shape, length, criterion)
-
-
-def _table(tried, values, sigma):
-    """Limits of one series by every form, their errors from truncation and from leaving sizes out, and from sigma."""
-    n = len(values)
-    factor = SHIFT if n > 3 else FEW_SHIFT
-    sigma = np.maximum(sigma, ROUNDING * max(np.max(np.abs(values)), 1e-300))
-    limits, errors, noise = [], [], []
-    for one in tried:
-        parts = [operator[0] @ values[part] for operator, part in zip(one.operators, _subsets(n))]
-        residuals = values - one.columns @ (one.operators[0] @ values)
-        freedom = max(n - one.columns.shape[1], 1)
-        tau = np.sqrt(np.sum((residuals / one.shape) ** 2) / freedom)
-        # what exceeds the stated errors is truncation, distributed as the omitted term
-        excess = max(np.sum((residuals / sigma) ** 2) / freedom - 1, 0) > 0
-        row = one.operators[0][0]
-        own = np.linalg.norm(row * tau * one.shape) * excess
-        noise.append(np.linalg.norm(row * sigma))
-        limits.append(parts[0])
-        errors.append(np.hypot(own, factor * max(abs(parts[0] - parts[1]), abs(parts[0] - parts[2]))))
-    limits = np.array(limits)
-    return limits, _no_accidents(limits, np.array(errors)), np.array(noise)
-
-
-def _no_accidents(limits, errors):
-    if len(limits) < 2:
-        return errors
-    distance = np.abs(limits[:, None] - limits)
-    np.fill_diagonal(distance, np.inf)
-    distance.sort(axis=1)
-    return np.maximum(errors, ACCIDENT * distance[:, min(2, len(limits) - 1) - 1])
-
-
-def _columns(form, sites, length, first):
-    """Columns (..., n, k) and the shape of the omitted term (..., n); length may be an array (m, 1)."""
-    columns = [sites**-p for p in form.powers[: None if form.decay is not None else -1]]
-    if form.decay is not None:
-        tail = (sites / first) ** -form.decay * np.exp(-(sites - first) / length)
-        shape = np.maximum(tail * first / sites, 1e-14)
-        return np.stack([*(np.broadcast_to(c, tail.shape) for c in columns), tail], axis=-1), shape
-    shape = sites ** -float(form.powers[-1])
-    if form.logs:
-        columns += [shape / np.log(sites) ** power for power in form.logs]
-        shape = shape / np.log(sites) ** (form.logs[-1] + 1)
-    return np.stack(columns, axis=-1), shape
-
-
-def _length(form, sites, values, sigma):
-    """The correlation length of largest likelihood, from a grid and one refinement; the rest is linear."""
-    low, high = 0.15 * np.min(np.diff(sites)), 2 * (sites[-1] - sites[0])
-    for _ in range(2):
-        lengths = np.geomspace(low, high, 30)
-        columns, shapes = _columns(form, sites, lengths[:, None], sites[0])
-        rest = _rest(columns, values, 1 / shapes)
-        taus = np.sqrt(np.mean((rest / shapes) ** 2, axis=1))[:, None] * _FRACTIONS
-        variance = sigma**2 + (taus[..., None] * shapes[:, None]) ** 2
-        rest = _rest(columns[:, None], values, 1 / np.sqrt(variance))
-        marks = np.sum(np.log(variance) + rest**2 / variance, axis=-1).min(axis=1)
-        best = int(np.argmin(marks))
-        low, high = lengths[max(best - 1, 0)], lengths[min(best + 1, len(lengths) - 1)]
-    return float(lengths[best])
-
-
-def _rest(columns, values, weights):
-    """Residuals of weighted least squares, batched over leading axes."""
-    q = np.linalg.qr(columns * weights[..., None])[0]
-    y = values * weights
-    return (y - np.einsum("...nk,...k->...n", q, np.einsum("...nk,...n->...k", q, y))) / weights
+def _half_width(weights, distance, deviation, farthest, mass):
+    if farthest == 0:
+        return 0.0
+    deviation = np.maximum(deviation, 1e-12 * farthest)
+    low, high = 0.0, farthest
+    for _ in range(40):
+        middle = (low + high) / 2
+        inside = weights @ (ndtr((middle - distance) / deviation) - ndtr((-middle - distance) / deviation))
+        low, high = (middle, high) if inside < mass else (low, middle)
+    return float(high)

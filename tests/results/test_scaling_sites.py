@@ -2,8 +2,10 @@
 
 import numpy as np
 import pytest
+from limit_cases import SPIN_LIMITS, WINDOWS, chain_cases, computed, xxz_chain
 from reference import reference
 from solvable import (
+    chain_pairs,
     heisenberg,
     ising_chain,
     ising_limit,
@@ -14,21 +16,19 @@ from solvable import (
     xxz_ring,
 )
 
-from manybody.results.scaling_sites import extrapolate, forms_for
-
-WINDOWS = ((4, 6, 8), (4, 8, 12, 16), (4, 6, 8, 10, 12), (6, 8, 10, 12, 14, 16), (8, 16, 24, 32, 40), (8, 16, 32, 64))
+from manybody.results.scaling_sites import extrapolate
 
 
 def limit(sites, energies, error=0.0, **geometry):
     sites = np.array(sites, float)
     families = {f"{q},{r}": sites % q == r for q in (2, 3) for r in range(q)}
-    return extrapolate(sites, np.array(energies), np.full(len(sites), error), {}, families=families, **geometry)
+    return extrapolate(sites, np.array(energies), np.zeros(len(sites)) + error, {}, families=families, **geometry)
 
 
-def judged(found, truth, useful):
-    """Within two stated standard errors, and those no larger than asked."""
+def judged(found, truth, useful, within=1.0, uncertainty=0.0):
+    """Within one stated standard error (and that of the truth), and it no larger than asked."""
     deviation = abs(found.values["energy"] - truth)
-    assert deviation <= 2 * found.errors["energy"], (deviation, found)
+    assert deviation <= within * np.hypot(found.errors["energy"], uncertainty), (deviation, found)
     assert found.errors["energy"] <= useful, found
 
 
@@ -38,6 +38,9 @@ def test_bethe_ansatz_agrees_with_the_reference_values():
     assert xxz_ring(16, 2.0) == pytest.approx(reference("A214").value, abs=1e-9)
     assert xxz_ring(12, 0.5) == pytest.approx(reference("A210").value, abs=1e-9)
     assert xx_chain(64) == pytest.approx(reference("A206").value, abs=1e-9)
+    assert xxz_chain(32) == pytest.approx(reference("A037").value, abs=1e-9)
+    assert xxz_chain(128) == pytest.approx(reference("A039").value, abs=1e-9)
+    assert xxz_chain(40, 1e-9) == pytest.approx(xx_chain(40), abs=1e-7)
 
 
 def test_half_spin_chain_from_rings():
@@ -68,90 +71,100 @@ def test_transverse_field_ising_chain(field, row):
 
 
 def test_square_lattice_from_small_tori():
-    """-0.669437(5) (row B023, from memory), from tori of 8 to 20 sites: a wide error, but not a wrong one."""
+    """-0.669437(5) (row B023, from memory), from tori of 8 to 20 sites: a wide error, but not a wrong one. With three
+    sizes it is 1.2 standard errors off."""
     energies = {8: -6.0, 10: reference("A234").value, 16: reference("A230").value, 20: reference("A236").value}
     sites, pairs = tilted_square((3, 3), (-3, 3))
     energies[sites] = heisenberg(0.5, pairs, sites)
     truth = reference("B023").value
     for chosen in ((8, 10, 16, 18, 20), (10, 16, 18, 20), (10, 16, 20)):
         found = limit(chosen, [energies[n] for n in chosen], boundary="periodic", dimension=2)
-        judged(found, truth, 0.05)
+        judged(found, truth, 0.05, within=2.0 if len(chosen) == 3 else 1.0)
 
 
 def test_spin_one_chain_from_rings():
-    """-1.401484039 (row B002, from memory), from rings of 4 to 10 sites by exact diagonalization."""
+    """-1.401484039 (row B002, from memory), from rings of 4 to 10 sites by exact diagonalization: 1.3 errors off."""
     sites = (4, 6, 8, 10)
     energies = [heisenberg(1, ring_pairs(n), n) for n in sites]
-    judged(limit(sites, energies, boundary="periodic", dimension=1), reference("B002").value, 0.05)
+    judged(limit(sites, energies, boundary="periodic", dimension=1), reference("B002").value, 0.05, within=2.0)
 
 
-def open_chain_energies(spin, sizes, accuracy):
-    """Open Heisenberg chains by the matrix-product engine, with spin operators."""
+@pytest.mark.parametrize("sizes", [(12, 16, 20, 24, 28, 32, 40, 48, 56, 64), range(24, 66, 8), range(16, 66, 4)])
+def test_spin_one_chain_from_open_chains(sizes):
+    """-1.401484039 (row B002) to 1e-5, from open chains up to 64 sites with their nearly free end spins."""
+    table, (truth, _) = computed(1.0), SPIN_LIMITS[1.0, 1.0]
+    found = limit(sizes, *np.transpose([table[n] for n in sizes]), boundary="open", dimension=1)
+    judged(found, truth, 2e-5)
+    assert abs(found.values["energy"] - truth) < 1e-5
+
+
+@pytest.mark.parametrize(
+    "sizes",
+    [
+        *(range(6, 26, 2), (6, 8, 10, 12, 16, 20, 24), (12, 16, 20, 24, 32, 40), range(12, 42, 2)),
+        *(range(6, 42, 2), range(6, 42, 4), range(16, 50, 2), range(16, 50, 4), (8, 16, 24, 32, 40)),
+    ],
+)
+def test_spin_three_halves_chain_from_open_chains(sizes):
+    """-2.82833(1) (Hallberg, Wang, Horsch, Moreo 1996, from memory) to 1e-4, within one standard error: a critical
+    chain with end spins and a slow crossover."""
+    table, (truth, uncertainty) = computed(1.5), SPIN_LIMITS[1.5, 1.0]
+    found = limit(sizes, *np.transpose([table[n] for n in sizes]), boundary="open", dimension=1)
+    judged(found, truth, 1e-4, uncertainty=uncertainty)
+    assert abs(found.values["energy"] - truth) < 1e-4
+
+
+def test_spin_two_chain_is_a_known_weakness():
+    """-4.761248(1) (row B005): open chains up to 36 sites are shorter than the correlation length, about 50 sites, which
+    nothing in them shows; the limit is up to three stated errors off."""
+    table, (truth, _) = computed(2.0), SPIN_LIMITS[2.0, 1.0]
+    for sizes in (range(8, 34, 4), range(12, 38, 4), range(6, 37, 2)):
+        found = limit(sizes, *np.transpose([table[n] for n in sizes]), boundary="open", dimension=1)
+        judged(found, truth, 1e-4, within=3.0)
+        assert abs(found.values["energy"] - truth) < 2e-4
+
+
+@pytest.mark.parametrize(("spin", "anisotropy", "sites"), [(1.0, 1.0, 8), (1.5, 1.0, 6), (2.0, 1.0, 4)])
+def test_table_of_open_chains_agrees_with_diagonalization(spin, anisotropy, sites):
+    assert computed(spin, anisotropy)[sites][0] == pytest.approx(heisenberg(spin, chain_pairs(sites), sites), abs=1e-9)
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize(
+    ("spin", "anisotropy", "sites"), [(1.0, 1.0, 40), (1.5, 1.0, 24), (2.0, 1.0, 12), (0.5, 2.0, 32)]
+)
+def test_table_of_open_chains_is_what_the_engine_computes(spin, anisotropy, sites):
     from manybody.model.couplings import exchange
     from manybody.model.quantization import quantize
     from manybody.quantum.ground_state import ground_state
     from manybody.quantum.result import QuantumSettings
 
-    energies, errors = [], []
-    for sites in sizes:
-        pairs = np.stack([np.arange(sites - 1), np.arange(1, sites)], axis=1)
-        start = np.zeros((sites, 3))
-        start[:, 2] = (-1.0) ** np.arange(sites)
-        operator = quantize(exchange(sites, pairs, 1.0), spin, "wick")
-        found = ground_state(operator, QuantumSettings(accuracy=accuracy, max_bond=400), start, sites - 1.0)
-        energies.append(found.energy * spin**2)
-        errors.append(found.error * spin**2)
-    return np.array(energies), np.array(errors)
+    pairs = np.stack([np.arange(sites - 1), np.arange(1, sites)], axis=1)
+    start = np.zeros((sites, 3))
+    start[:, 2] = (-1.0) ** np.arange(sites)
+    operator = quantize(exchange(sites, pairs, [1.0, 1.0, anisotropy]), spin, "wick")
+    found = ground_state(operator, QuantumSettings(accuracy=1e-8, max_bond=600), start, sites - 1.0)
+    energy, error = computed(spin, anisotropy)[sites]
+    assert found.energy * spin**2 == pytest.approx(energy, abs=error + found.error * spin**2)
 
 
-@pytest.mark.slow
-def test_spin_one_chain_from_large_open_chains():
-    """-1.401484039 (row B002) to 1e-5, from open chains up to 64 sites with their nearly free end spins."""
-    sizes = (12, 16, 20, 24, 28, 32, 40, 48, 56, 64)
-    energies, errors = open_chain_energies(1.0, sizes, 1e-9)
-    found = extrapolate(np.array(sizes, float), energies, errors, boundary="open", dimension=1)
-    judged(found, reference("B002").value, 2e-5)
-    assert abs(found.values["energy"] - reference("B002").value) < 1e-5
-
-
-@pytest.mark.slow
-def test_spin_three_halves_chain_from_large_open_chains():
-    """-2.82833(1) (Hallberg, Wang, Horsch, Moreo 1996, from memory) to 1e-4: a critical chain with end spins.
-
-    Known weakness, measured: the crossover is slow, and other windows understate their error. Sizes 6 to 24 miss by
-    1.2e-4 at a stated 2.4e-5, sizes 6 to 40 by 8.4e-5 at 3.0e-5. This window passes at two standard errors, not at one.
-    """
-    sizes = (12, 16, 20, 24, 32, 40)
-    energies, errors = open_chain_energies(1.5, sizes, 1e-8)
-    found = extrapolate(np.array(sizes, float), energies, errors, boundary="open", dimension=1)
-    judged(found, -2.82833, 2e-4)
-    assert abs(found.values["energy"] + 2.82833) < 1e-4
-
-
-def bank():
-    for window in WINDOWS:
-        for anisotropy, row in ((1.0, "B001"), (0.5, "B007"), (2.0, "B010")):
-            yield window, [xxz_ring(n, anisotropy) for n in window], reference(row).value, "periodic"
-        for field in (0.3, 0.5, 0.8, 0.95, 1.0, 1.05, 1.5):
-            yield window, [ising_ring(n, field) for n in window], ising_limit(field), "periodic"
-            yield window, [ising_chain(n, field) for n in window], ising_limit(field), "open"
-        yield window, [xx_chain(n) for n in window], reference("B006").value, "open"
-
-
-@pytest.mark.parametrize("known", [True, False])
-def test_stated_errors_are_honest_and_useful(known):
-    """Over chains with exact limits, critical, near-critical and gapped: 95 of 100 within two errors, not padded."""
-    ratios, padding = [], []
-    for window, energies, truth, boundary in bank():
-        geometry = {"boundary": boundary, "dimension": 1} if known else {}
-        found = limit(window, energies, **geometry)
-        ratio = abs(found.values["energy"] - truth) / found.errors["energy"]
-        ratios.append(ratio)
-        if len(window) > 3:
-            padding.append(1 / max(ratio, 1e-6))
-    assert len(ratios) == 108
-    assert np.mean(np.array(ratios) < 2) > 0.95
-    assert np.median(padding) < (10 if known else 15)
+@pytest.mark.parametrize(("known", "windows"), [(True, WINDOWS[::4]), (False, WINDOWS[1::9])])
+def test_stated_errors_are_honest_and_useful(known, windows):
+    """Chains with known limits, critical, near-critical and gapped: a part of tests/benchmarks/limits.py. A standard
+    error holds two limits of three at least, two of them 95 of 100, and it is not padded."""
+    ratios = []
+    for case in chain_cases(windows):
+        geometry = {"boundary": case.boundary, "dimension": 1} if known else {}
+        found = extrapolate(
+            np.array(case.sites, float), case.energy, case.error, {}, families=case.families(), **geometry
+        )
+        error = np.hypot(found.errors["energy"], max(case.uncertainty, 1e-10))
+        ratios.append(abs(found.values["energy"] - case.truth) / error)
+    ratios = np.array(ratios)
+    assert len(ratios) > 120
+    assert 0.68 < np.mean(ratios < 1) < 0.96
+    assert np.mean(ratios < 2) > 0.95 and np.mean(ratios < 4) > 0.985
+    assert np.median(ratios) > (0.2 if known else 0.15)
 
 
 def test_gap_limit_is_the_difference_of_the_limits():
@@ -192,7 +205,21 @@ def test_fewer_than_three_sizes_have_no_limit():
     assert extrapolate([4, 6, 8], [-2.0, -2.8, np.nan], [0, 0, 0]) is None
 
 
-def test_forms_follow_the_geometry():
-    assert {f.powers[0] for f in forms_for("open", 2)} == {0}
-    assert any(0.5 in f.powers for f in forms_for("open", 2)) and not any(0.5 in f.powers for f in forms_for("open", 1))
-    assert set(forms_for("periodic", 1)) < set(forms_for())
+def test_zero_energies_have_a_zero_limit():
+    found = extrapolate([4, 6, 8], [0.0, 0.0, 0.0], [0, 0, 0], {"gap": np.zeros(3)}, "open", 1)
+    assert abs(found.values["gap"]) < 1e-12 and found.errors["gap"] < 1e-8
+
+
+@pytest.mark.parametrize("boundary", ["open", "periodic", None])
+def test_leading_form_runs_through_the_data_and_bends_towards_the_limit(boundary):
+    sites = np.array([6.0, 8, 10, 14, 20])
+    energies = np.array(
+        [ising_ring(int(n), 1.0) if boundary == "periodic" else ising_chain(int(n), 1.0) for n in sites]
+    )
+    found = extrapolate(
+        sites, energies, np.zeros(5), {"gap": energies + sites}, boundary, None if boundary is None else 1
+    )
+    np.testing.assert_allclose(found.curve.at("energy", sites), energies / sites, atol=1e-6)
+    np.testing.assert_allclose(found.curve.at("gap", sites), energies / sites + 1, atol=1e-6)
+    far = found.curve.at("energy", [1e9])[0]
+    assert far == pytest.approx(found.values["energy"], abs=3 * found.errors["energy"])
