@@ -28,8 +28,9 @@ def run_fake(payload, inputs, report, checkpoint):
     if steps := payload.get("steps"):
         first = int(checkpoint.load() or 0)
         for step in range(first, steps):
-            time.sleep(0.05)
             report(step=step)
+            while step == payload.get("await_stop") and first <= step and not checkpoint.due():
+                time.sleep(0.01)
             if checkpoint.due() or payload.get("save_always"):
                 checkpoint.save(str(step + 1).encode())
         return {"value": float(payload["number"]), "first": first, "steps": steps}

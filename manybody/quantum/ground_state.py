@@ -1,5 +1,6 @@
 """The ground state of any quantized operator: which method, cluster by cluster, and one result with a verdict."""
 
+import functools
 from collections.abc import Callable
 from dataclasses import dataclass, replace
 
@@ -32,8 +33,8 @@ def ground_state(
 
     Clusters without coupling between them are solved apart, equal ones once; energies, errors and sectors add. The
     sector is then that of one state in a possibly degenerate ground space. Clusters found done in a checkpoint come
-    without their states (None in ClusterStates). Raises ValueError for a start of the wrong
-    shape or couplings that overflow.
+    without their states (None in ClusterStates). Raises ValueError for a start of the wrong shape or couplings that
+    overflow.
     """
     settings = settings or QuantumSettings()
     if start is not None:
@@ -63,7 +64,8 @@ def _separate(op, parts, settings, start, scale, progress, saved: SavedStates) -
         key = (piece.spins.tobytes(), piece.symbol.fingerprint())
         if key not in known:
             direction = None if start is None else start[sites]
-            known[key] = _cluster(piece, inner, direction, scale, progress, saved.within(f"cluster{number}"))
+            told = progress and functools.partial(_of_cluster, progress, f"{number + 1} of {len(parts)}")
+            known[key] = _cluster(piece, inner, direction, scale, told, saved.within(f"cluster{number}"))
         results.append(known[key])
     return _together(op, parts, results)
 
@@ -101,6 +103,10 @@ def without_scalars(op: SpinOperator) -> SpinOperator:
 
 def _affordable(cost: Estimate, settings: QuantumSettings) -> bool:
     return cost.dimension <= LARGEST_DIMENSION and cost.bytes <= settings.memory
+
+
+def _of_cluster(progress: Callable[[dict], None], which: str, facts: dict) -> None:
+    progress({"cluster": which, **facts})
 
 
 def _cluster(op, settings, start, scale, progress, saved: SavedStates) -> GroundState:

@@ -18,6 +18,8 @@ from manybody.quantum.schedule import Limits, Run
 from manybody.quantum.sectors import SectorSearch, isotropic_directions, start_chain
 from manybody.quantum.start_state import classical_start
 
+STAGES = {"sector": "search for the sector", "run": "main run", "parity": "other parity", "guard": "guard run"}
+"""What a solve goes through, by the names of its saved states."""
 MIXED = 1e-3
 """A state of S^z = 0 whose overlap with its turned-over self misses 1 by more than this is a mixture of both
 parities."""
@@ -38,10 +40,10 @@ def matrix_product_ground_state(
     """Lowest energy found by sweeps, its error and what stopped them.
 
     start (N, 3): classical unit vectors, found here by a short descent if None. scale: |f_min - f_mean|, to which
-    settings.accuracy is relative; 0 takes a bound on the norm of the operator. progress: called with a dict (sweep,
-    bond_dimension, energy, variance, discarded_weight, sector) after every half sweep. checkpoint: where the
-    solve keeps how far it is and takes it up again, whatever it was at: see saved_states (a path is written every two
-    minutes and removed in the end).
+    settings.accuracy is relative; 0 takes a bound on the norm of the operator. progress: called with a dict after every
+    half sweep: stage (one of STAGES), sweep, bond_dimension, energy, variance, discarded_weight, sector. checkpoint:
+    where the solve keeps how far it is and takes it up again, whatever it was at, see saved_states; a path is written
+    every two minutes and removed in the end.
     """
     settings = settings or QuantumSettings()
     saved = checkpoint if isinstance(checkpoint, SavedStates) else open_states(checkpoint)
@@ -96,7 +98,7 @@ class _Solver:
         # What is found of a later stage tells that the earlier ones are done.
         run = self._taken_up("run") or self._kept("run", self._chosen())
         self.saved.drop("sector")
-        guard = self._taken_up("guard", quiet=True)
+        guard = self._taken_up("guard")
         if guard is None:
             run = self._kept("run", self._lower_parity(run))
             self.saved.drop("parity")
@@ -126,30 +128,32 @@ class _Solver:
             name, self._run(start_chain(self.problem, self._directions(self.start), total, self._sharp))
         )
 
-    def _run(self, chain: Chain, quiet: bool = False) -> Run:
-        report = None if quiet else self._reporter(chain.total)
-        return Run(chain, self.limits, self.rng, report, pause=self.saved.pause)
+    def _run(self, chain: Chain) -> Run:
+        return Run(chain, self.limits, self.rng, pause=self.saved.pause)
 
     def _kept(self, name: str, run: Run) -> Run:
-        """The run, which from now on is saved under a name."""
+        """The run, which from now on is saved under a name and reports as what it is."""
         self.saved.put(name, lambda: run_arrays(run, self.problem))
+        run.report = self._reporter(STAGES[name.partition("/")[0]], run.chain.total)
         return run
 
-    def _taken_up(self, name: str, quiet: bool = False) -> Run | None:
+    def _taken_up(self, name: str) -> Run | None:
         """A saved run; None where there is none or it belongs to other frames."""
         arrays = self.saved.get(name)
-        found = arrays and restored_run(arrays, self.problem, lambda chain: self._run(chain, quiet))
+        found = arrays and restored_run(arrays, self.problem, self._run)
         if not found:
             return None
         run, self.problem = found
         return self._kept(name, run)
 
-    def _reporter(self, total: int):
+    def _reporter(self, stage: str, total: int):
         if self.progress is None:
             return None
         sector = self._sector(total)
         shift = self.problem.constant
-        return lambda facts: self.progress({**facts, "energy": facts["energy"] + shift, "sector": sector})
+        return lambda facts: self.progress(
+            {"stage": stage, **facts, "energy": facts["energy"] + shift, "sector": sector}
+        )
 
     def _sector(self, total: int) -> float:
         return float(total - self.problem.spins.sum()) if self.problem.conserved else float("nan")
@@ -220,13 +224,13 @@ class _Solver:
         S^z of the first site changes the parity and hardly anything else where nearly free spins sit at the ends. Its
         run is refined until its error puts it above the first one.
         """
-        other = self._taken_up("parity", quiet=True)
+        other = self._taken_up("parity")
         if other is None:
             self._finish(run)
             chain = spin_flip.other_parity(run.chain) if self._has_parity(run.chain) else None
             if chain is None:
                 return run
-            other = self._kept("parity", self._run(chain, quiet=True))
+            other = self._kept("parity", self._run(chain))
         other.pursue(lambda: other.energy - other.error <= run.energy)
         if other.energy < run.energy:
             self._finish(other)
@@ -256,7 +260,7 @@ class _Solver:
             random = self.rng.standard_normal((self.op.sites, 3))
             random /= np.linalg.norm(random, axis=1, keepdims=True)
             chain = start_chain(self.problem, self.problem.directions(random), run.chain.total)
-            other = self._kept("guard", self._run(chain, quiet=True))
+            other = self._kept("guard", self._run(chain))
         other.pursue(lambda: 2 * other.chain.bond_dimension <= run.chain.bond_dimension)
         return other
 

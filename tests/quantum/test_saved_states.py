@@ -205,6 +205,7 @@ def test_state_in_a_file(tmp_path, monkeypatch, steps):
     op, settings = in_a_field(4, 1), QuantumSettings(accuracy=1e-4)
 
     def tired(facts):
+        assert facts["stage"] == "search for the sector"
         if facts["sweep"] == 4:
             raise BrokenOff
 

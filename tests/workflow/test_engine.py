@@ -1,9 +1,10 @@
 """The engine in-process, on parts that do what the test wants: order, admission, failures, states, stopping."""
 
+import io
 import os
+import re
 import signal
 import threading
-import time
 
 import pytest
 from fake_parts import fake_study, fake_task, run_fake
@@ -156,92 +157,150 @@ def test_long_parts_report_and_save(tmp_path):
     assert not (tmp_path / "states.sqlite").exists()
 
 
-def interrupt(after, times=1, gap=0.3):
-    def send():
-        time.sleep(after)
-        for _ in range(times):
-            os.kill(os.getpid(), signal.SIGINT)
-            time.sleep(gap)
+class Pressing(Recorder):
+    """Presses Ctrl-C at the first report of a part, and again, if told to, when the run says that it is stopping."""
 
-    thread = threading.Thread(target=send)
-    thread.start()
-    return thread
+    def __init__(self, twice=False):
+        super().__init__()
+        self.twice = twice
+
+    def report(self, key, info):
+        if not self.heard:
+            os.kill(os.getpid(), signal.SIGINT)
+        super().report(key, info)
+
+    def say(self, text):
+        super().say(text)
+        if self.twice and text.startswith("Stopping"):
+            os.kill(os.getpid(), signal.SIGINT)
 
 
 def test_interrupt_saves_states_and_a_second_run_resumes_from_them(tmp_path):
-    tasks = [fake_task(1, steps=40, seconds=60.0), fake_task(2, seconds=50.0)]
-    thread = interrupt(0.5)
-    with pytest.raises(Interrupted):
-        run(tasks, tmp_path)
-    thread.join()
+    tasks = [fake_task(1, steps=10, await_stop=4, seconds=60.0), fake_task(2, seconds=50.0)]
+    with Journal(tmp_path) as journal, pytest.raises(Interrupted):
+        run_tasks(tasks, run_fake, journal, InProcess(1e9), Pressing())
     assert (tmp_path / "states.sqlite").exists()
     _, results, _, _ = run(tasks, tmp_path)
-    assert 0 < results["quantum-1"]["first"] < 40
+    assert results["quantum-1"]["first"] == 5
     assert results["quantum-2"]["value"] == 2.0
 
 
 def test_second_interrupt_stops_at_once(tmp_path):
-    tasks = [fake_task(1, sleep=8.0, seconds=60.0)]
-    thread = interrupt(0.3, times=2)
-    began = time.monotonic()
-    with pytest.raises(KeyboardInterrupt):
-        run(tasks, tmp_path)
-    assert time.monotonic() - began < 6
-    thread.join()
+    release = threading.Event()
+
+    def endless(payload, inputs, report, checkpoint):
+        report(step=0)
+        release.wait()
+
+    display = Pressing(twice=True)
+    try:
+        with Journal(tmp_path) as journal, pytest.raises(KeyboardInterrupt):
+            run_tasks([fake_task(1, seconds=60.0)], endless, journal, InProcess(1e9), display)
+    finally:
+        release.set()
+    assert "Ctrl-C again stops at once" in display.said[-1]
     with Journal(tmp_path) as journal:
         assert journal.entries() == {}
     assert signal.getsignal(signal.SIGINT) is signal.default_int_handler
 
 
-def test_plain_lines_tell_counts_failures_and_long_parts(monkeypatch):
-    import io
+class Watched(io.StringIO):
+    """Tells when some words have been written."""
 
+    def __init__(self, words):
+        super().__init__()
+        self.words, self.seen = words, threading.Event()
+
+    def write(self, text):
+        if self.words in text:
+            self.seen.set()
+        return super().write(text)
+
+
+def shown(seen):
+    """As run_fake, but part 1 says how far it is and then waits until that has been shown."""
+
+    def run_part(payload, inputs, report, checkpoint):
+        if payload["number"] == 1:
+            report(step=7)
+            seen.wait()
+        return run_fake(payload, inputs, report, checkpoint)
+
+    return run_part
+
+
+def test_plain_lines_tell_counts_failures_and_long_parts(monkeypatch):
     from manybody.workflow import progress
 
-    monkeypatch.setattr(progress, "LONG", 0.2)
-    stream = io.StringIO()
+    monkeypatch.setattr(progress, "LONG", 0.0)
+    stream = Watched("step 7")
     lines = Lines(stream)
-    lines.every = 0.2
-    tasks = [fake_task(1, steps=20, seconds=60.0), *(fake_task(i, error="too bad") for i in range(2, 20))]
+    lines.every = 0.0
+    tasks = [fake_task(1, seconds=60.0), *(fake_task(i, error="too bad") for i in range(2, 20))]
     with Journal(None) as journal:
-        run_tasks(tasks, run_fake, journal, InProcess(1e9), lines)
+        run_tasks(tasks, shown(stream.seen), journal, InProcess(1e9), lines)
     text = stream.getvalue()
     assert text.startswith("19 parts\n")
-    assert "quantum-1 (quantum) on " in text and "step 0" in text
+    assert re.search(r"  quantum-1 \(quantum\) on \S+ for .*: step 7\n", text)
     assert text.count("failed: quantum-") == 10 and text.count("further failures: see `manybody status`") == 1
-    assert "to do, about" in text and "finished: quantum-1 (quantum) in 1 s" in text
+    assert "to do, about" in text and "finished: quantum-1 (quantum) in " in text
 
 
 def test_long_runs_write_what_they_have_now_and_then(monkeypatch, tmp_path):
     from manybody.workflow import engine
 
-    monkeypatch.setattr(engine, "MEANWHILE", 0.3)
-    monkeypatch.setattr(engine, "NOTE_EVERY", 0.1)
-    seen = []
+    def written(every, folder):
+        monkeypatch.setattr(engine, "MEANWHILE", every)
+        seen = []
+        with Journal(folder) as journal:
+            tasks = [fake_task(i, seconds=5.0) for i in range(12)]
+            run_tasks(
+                tasks, run_fake, journal, InProcess(1e9), meanwhile=lambda: seen.append(len(journal.entries()))
+            )  # fmt: skip
+        return seen
+
+    seen = written(0.0, tmp_path)
+    # The first part travels alone, since nobody knows yet how short it is; then only what is new is written.
+    assert seen[0] == 1 and seen == sorted(set(seen)) and seen[-1] <= 12
+    assert written(1e6, None) == []
+
+
+def test_what_is_running_is_noted_for_others(monkeypatch, tmp_path):
+    from manybody.workflow import engine
+    from manybody.workflow.summary import status_text
+
+    monkeypatch.setattr(engine, "NOTE_EVERY", 0.0)
+    seen = threading.Event()
+    told = []
+
+    class Looking(Display):
+        every = 0.0
+
+        def update(self, counts, batches):
+            told.append(status_text(tmp_path))
+            if "step 7" in told[-1]:
+                seen.set()
+
     with Journal(tmp_path) as journal:
-        tasks = [fake_task(i, sleep=0.1, seconds=5.0) for i in range(12)]
-        run_tasks(
-            tasks,
-            run_fake,
-            journal,
-            InProcess(1e9),
-            meanwhile=lambda: seen.append((len(journal.entries()), journal.notes())),
-        )
-    assert 0 < seen[0][0] < 12 and len(seen) <= 6
-    assert '"quantum-' in seen[0][1]["running"]
+        tasks = [fake_task(1, seconds=60.0), fake_task(2)]
+        journal.set_study(tasks, {})
+        run_tasks(tasks, shown(seen), journal, InProcess(1e9), Looking())
+    during = next(text for text in told if "step 7" in text)
+    assert f"A run is going on: process {os.getpid()} on " in during and "2 waiting" in during
+    assert re.search(r"  quantum-1 \(quantum\) on \S+ for .*: step 7", during)
+    assert status_text(tmp_path).startswith("2 finished\n") and "No run is going on." in status_text(tmp_path)
 
 
 def test_live_display_shows_what_runs_where():
-    import io
-
     from rich.console import Console
 
     from manybody.workflow.progress import Live
 
-    console = Console(file=io.StringIO(), force_terminal=True, width=150)
+    stream = Watched("step 7")
+    console = Console(file=stream, force_terminal=True, width=150)
     with Journal(None) as journal:
-        tasks = [fake_task(1, steps=30, seconds=60.0), fake_task(2, error="[red]no[/red]")]
-        run_tasks(tasks, run_fake, journal, InProcess(1e9), Live(console))
-    text = console.file.getvalue()
-    assert "quantum-1" in text and "step 0" in text and "to do" in text
+        tasks = [fake_task(1, seconds=60.0), fake_task(2, error="[red]no[/red]")]
+        run_tasks(tasks, shown(stream.seen), journal, InProcess(1e9), Live(console))
+    text = stream.getvalue()
+    assert "quantum-1" in text and "to do" in text
     assert "failed: quantum-2 (quantum): ValueError: [red]no[/red]" in text
