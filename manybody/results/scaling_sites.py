@@ -14,6 +14,7 @@ with known limits: tests/benchmarks/limits.py prints the coverage.
 The quantum energy decides; the classical energy and the gap are extrapolated with the same forms, amplitudes and
 weights, so that their limits fit together exactly. Citations from memory."""
 
+import functools
 from dataclasses import dataclass
 
 import numpy as np
@@ -30,7 +31,7 @@ within two; a smaller one would put limits of S = 3/2 chains outside."""
 AMPLITUDES = 10.0 ** np.arange(-10.5, 0.51, 0.25)
 """Of the rest, in units of the energy scaled back to a linear size of one: up to three times the energy."""
 RARE = {("periodic", "growing"): 0.1}
-NEGLIGIBLE = 1e-7
+NEGLIGIBLE = 1e-6
 LUCK = 3.0
 """A family of sizes must have an error this many times smaller than all sizes together to be preferred."""
 
@@ -99,11 +100,8 @@ def _one_family(name, sites, energy, error, others, boundary, dimension):
     noisy = np.array([key in ("energy", "gap") for key in names])
     totals = np.stack([energy, *others.values()], axis=1)[order] - np.outer(error[order] / 2, noisy)
     series = totals / sites[:, None]
-    forms = forms_for(sites, boundary, dimension)
-    groups = {}
-    for form in forms:
-        groups.setdefault((form.boundary, form.dimension), []).append(form)
-    parts = [_Group(group, sites, series, sigma) for group in groups.values() if len(sites) > group[0].width]
+    groups = _groups(tuple(sites.tolist()), boundary, dimension)
+    parts = [_Fits(group, series, sigma) for group in groups if len(sites) > group.fixed.shape[1]]
     marks = np.concatenate([part.marks.ravel() for part in parts])
     independent = min(1.0, INDEPENDENT / (len(sites) - 1))
     weights = np.exp(-0.5 * independent * (marks - marks.min())) * np.concatenate([p.prior.ravel() for p in parts])
@@ -112,10 +110,12 @@ def _one_family(name, sites, energy, error, others, boundary, dimension):
     limits, noise, spread, share, heaviest = [], [], [], {}, {}
     for part, w in zip(parts, np.split(weights, cuts)):
         w = w.reshape(part.marks.shape)
-        for k, form in enumerate(part.forms):
-            share[form.name] = share.get(form.name, 0.0) + float(w[:, k].sum())
-            top = int(np.argmax(w[:, k]))
-            heaviest[form.name] = max(heaviest.get(form.name, (-1.0,)), (w[top, k], id(part), part, (top, k)))
+        for k, (title, weight, top) in enumerate(
+            zip(part.group.names, w.sum(axis=0).tolist(), w.argmax(axis=0).tolist())
+        ):
+            share[title] = share.get(title, 0.0) + weight
+            if title not in heaviest or w[top, k] > heaviest[title][0]:
+                heaviest[title] = w[top, k], part, (top, k)
         found = part.limits(np.argwhere(w > NEGLIGIBLE))
         for store, value in zip((limits, noise, spread), found):
             store.append(value)
@@ -128,27 +128,60 @@ def _one_family(name, sites, energy, error, others, boundary, dimension):
         deviation = np.sqrt(noise * noisy[k] + spread[:, k])
         errors[key] = SPREAD * _standard_error(kept, limits[:, k] - values[key], deviation)
     form = max(share, key=share.get)
-    _, _, part, place = heaviest[form]
+    _, part, place = heaviest[form]
     curve = part.curve(place, names)
     return Limit(values, errors, form, share[form], name, tuple(int(n) for n in sites), curve)
 
 
+@dataclass(frozen=True)
 class _Group:
-    """All forms with the same free coefficients, fitted to the energy at all amplitudes.
+    """All forms with the same free coefficients, in linear sizes x (n,): fixed (n, k) and random (forms, n, m) columns;
+    what the amplitude is measured in, and weights before any data that are shared by the forms of one kind."""
+
+    forms: list[Form]
+    names: list[str]
+    x: np.ndarray
+    fixed: np.ndarray
+    random: np.ndarray
+    natural: np.ndarray
+    prior: np.ndarray
+
+
+@functools.lru_cache(maxsize=64)
+def _groups(sites, boundary, dimension):
+    groups = {}
+    for form in forms_for(sites, boundary, dimension):
+        groups.setdefault((form.boundary, form.dimension), []).append(form)
+    found = []
+    for forms in groups.values():
+        x = np.array(sites) ** (1 / forms[0].dimension)
+        kinds = [form.kind for form in forms]
+        found.append(
+            _Group(
+                forms,
+                [form.name for form in forms],
+                x,
+                forms[0].fixed(x, x[0]),
+                np.stack([form.random(x, x[0]) for form in forms]),
+                np.array([x[0] ** -float(form.power) for form in forms]),
+                np.array([form.weight / kinds.count(form.kind) for form in forms]),
+            )
+        )
+    return found
+
+
+class _Fits:
+    """The forms of a group fitted to the energy at all amplitudes.
 
     Everything is divided by sigma and split into the part that the free coefficients take up and the rest (n - k,), on
-    which the random columns are diagonal: U diag(d) V^T. marks (amplitudes, forms): -2 ln restricted likelihood; prior:
-    shared by the forms of one kind.
+    which the random columns are diagonal: U diag(d) V^T. marks (amplitudes, forms): -2 ln restricted likelihood.
     """
 
-    def __init__(self, forms, sites, series, sigma):
-        self.forms = forms
-        self.x = sites ** (1 / forms[0].dimension)
-        first = self.x[0]
-        fixed = forms[0].fixed(self.x, first)
+    def __init__(self, group, series, sigma):
+        self.group = group
+        fixed, first = group.fixed, group.x[0]
         k = fixed.shape[1]
-        self.random = np.stack([form.random(self.x, first) for form in forms])
-        weighted = self.random / sigma[:, None]
+        weighted = group.random / sigma[:, None]
         q, r = np.linalg.qr(fixed / sigma[:, None], mode="complete")
         self.data = series / sigma[:, None]
         self.solve = np.linalg.solve(r[:k], q[:, :k].T)
@@ -160,14 +193,12 @@ class _Group:
         # what the data say nothing about: the part of the random columns beyond the modes
         self.unseen = np.maximum(np.sum(everything**2, axis=1) - np.sum(self.effect[:, 0] ** 2, axis=1), 0.0)
         scale = np.max(np.abs(series[:, 0])) or 1.0
-        natural = np.array([first ** -float(form.power) for form in forms])
-        self.amplitudes = AMPLITUDES[:, None] * scale * natural
+        self.amplitudes = AMPLITUDES[:, None] * scale * group.natural
         stretch = 1 + (self.amplitudes[..., None] * d) ** 2
         self.marks = np.sum(np.log(stretch) + self.seen[..., 0] ** 2 / stretch, axis=-1)
         # free coefficients beyond the limit itself: of the size of the energy, scaled back like the amplitudes
         self.marks += 2 * np.sum(np.log(np.abs(np.diag(r[:k])))) + 2 * (k - 1) * np.log(scale / first)
-        kinds = [form.kind for form in forms]
-        self.prior = np.broadcast_to([form.weight / kinds.count(form.kind) for form in forms], self.marks.shape)
+        self.prior = np.broadcast_to(group.prior, self.marks.shape)
 
     def limits(self, places):
         """Limits (places, series), their variance from sigma (places,) and from the rest (places, series)."""
@@ -186,14 +217,14 @@ class _Group:
 
     def curve(self, place, names):
         row, column = place
-        form, d = self.forms[column], self.d[column]
+        form, x, d = self.group.forms[column], self.group.x, self.d[column]
         square = self.amplitudes[row, column] ** 2
         inner = (square * d / (1 + square * d**2))[:, None] * self.seen[column]
         fixed = self.solve @ self.data - self.effect[column] @ inner
-        values = self.random[column] @ (self.modes[column].T @ inner)
-        rest = np.linalg.lstsq(form.covariance(self.x, self.x, self.x[0]), values, rcond=1e-13)[0]
+        values = self.group.random[column] @ (self.modes[column].T @ inner)
+        rest = np.linalg.lstsq(form.covariance(x, x, x[0]), values, rcond=1e-13)[0]
         by_name = [dict(zip(names, array.T)) for array in (fixed, rest)]
-        return Curve(form, self.x, *by_name)
+        return Curve(form, x, *by_name)
 
 
 def _standard_error(weights, distance, deviation):

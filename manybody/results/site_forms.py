@@ -121,6 +121,7 @@ def _root(logs, span):
     return np.linalg.cholesky(rational_quadratic(logs[:, None] - logs, span) + 1e-13 * np.eye(len(logs)))
 
 
+@functools.cache
 def _power(power, dimension):
     if power == dimension:
         return "1/N"

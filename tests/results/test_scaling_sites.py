@@ -115,8 +115,8 @@ def test_spin_three_halves_chain_from_open_chains(sizes):
 
 
 def test_spin_two_chain_is_a_known_weakness():
-    """-4.761248(1) (row B005): open chains up to 36 sites are shorter than the correlation length, about 50 sites, which
-    nothing in them shows; the limit is up to three stated errors off."""
+    """-4.761248(1) (row B005): open chains up to 36 sites are shorter than the correlation length, about 50 sites,
+    which nothing in them shows; the limit is up to three stated errors off."""
     table, (truth, _) = computed(2.0), SPIN_LIMITS[2.0, 1.0]
     for sizes in (range(8, 34, 4), range(12, 38, 4), range(6, 37, 2)):
         found = limit(sizes, *np.transpose([table[n] for n in sizes]), boundary="open", dimension=1)
@@ -148,7 +148,7 @@ def test_table_of_open_chains_is_what_the_engine_computes(spin, anisotropy, site
     assert found.energy * spin**2 == pytest.approx(energy, abs=error + found.error * spin**2)
 
 
-@pytest.mark.parametrize(("known", "windows"), [(True, WINDOWS[::4]), (False, WINDOWS[1::9])])
+@pytest.mark.parametrize(("known", "windows"), [(True, WINDOWS[::5]), (False, (WINDOWS[0], WINDOWS[9]))])
 def test_stated_errors_are_honest_and_useful(known, windows):
     """Chains with known limits, critical, near-critical and gapped: a part of tests/benchmarks/limits.py. A standard
     error holds two limits of three at least, two of them 95 of 100, and it is not padded."""
@@ -161,7 +161,7 @@ def test_stated_errors_are_honest_and_useful(known, windows):
         error = np.hypot(found.errors["energy"], max(case.uncertainty, 1e-10))
         ratios.append(abs(found.values["energy"] - case.truth) / error)
     ratios = np.array(ratios)
-    assert len(ratios) > 120
+    assert len(ratios) > 80
     assert 0.68 < np.mean(ratios < 1) < 0.96
     assert np.mean(ratios < 2) > 0.95 and np.mean(ratios < 4) > 0.985
     assert np.median(ratios) > (0.2 if known else 0.15)

@@ -41,11 +41,11 @@ def test_random_columns_and_covariance_are_the_same_function(form):
     np.testing.assert_allclose(form.covariance(x, x, 4.0), columns @ columns.T, atol=1e-10)
 
 
-@pytest.mark.parametrize("form", forms_for(SIZES), ids=lambda form: "")
-def test_every_rest_vanishes_for_many_sites(form):
+def test_every_rest_vanishes_for_many_sites():
     x = np.array([4.0, 1e12])
-    variance = np.diag(form.covariance(x, x, 4.0))
-    assert variance[1] < 1e-15 * variance[0]
+    for form in forms_for(SIZES):
+        variance = np.diag(form.covariance(x, x, 4.0))
+        assert variance[1] < 1e-15 * variance[0], form
 
 
 def test_names_say_what_is_fitted():
