@@ -13,6 +13,8 @@ from manybody.results.schema import units_text
 from manybody.results.trust import STATES, UNKNOWN, trust_all
 
 TOLERANCES = (0.1, 0.05, 0.02, 0.01)
+HARMONIC_ERROR = 1e-8
+"""One-sided error of e_1, relative: rounding of zero modes."""
 LIMITS = {
     "energy": "quantum ground energy per site, limit of many sites",
     "classical": "classical ground energy per site, limit of many sites",
@@ -31,7 +33,8 @@ def scaling_dataset(tree, tolerances=TOLERANCES):
     root = _root(tree)
     parts = [spin_fits(root), site_limits(tree)]
     parts.append(trust_spin(root, tolerances, fits=parts[0]))
-    parts.append(trust_spin_limit(root, tolerances, limits=parts[1]))
+    first = None if parts[1] is None else harmonic_limits(tree)
+    parts += [first, trust_spin_limit(tree, tolerances, limits=parts[1], first=first)]
     known = [part for part in parts if part is not None]
     return xr.merge(known, join="exact", compat="equals", combine_attrs="drop_conflicts") if known else xr.Dataset()
 
@@ -235,24 +238,77 @@ def trust_spin(tree, tolerance=0.05, fits=None):
     return _trust_dataset(root, [*dims, "rule"], verdicts, tolerance, "")
 
 
-def trust_spin_limit(tree, tolerance=0.05, limits=None):
-    """trust_spin in the limit of many sites, from the extrapolated gaps per site; None where those do not suffice."""
+def harmonic_limits(tree):
+    """The first quantum correction e_1 per site in the limit of many sites: limit_first, with limit_first_error.
+
+    Extrapolated like the energies (scaling_sites.py) for every parameter set and rule; missing where fewer than three
+    sizes have one e_1 that all spins share. None where nothing is known.
+    """
+    import xarray as xr
+
+    root = _root(tree)
+    if root.sizes["sites"] < 3 or not np.isfinite(root["harmonic_coefficient"]).any():
+        return None
+    dims = [*(d for d in _cluster_dims(root) if d != "sites"), "rule"]
+    shape = [root.sizes[d] for d in dims]
+    value, error = np.full(shape, np.nan), np.full(shape, np.nan)
+    first = root["harmonic_coefficient"].transpose(*dims, "sites", "spin").values
+    for place in np.ndindex(*shape):
+        common = [_common(one) for one in first[place]]
+        series = np.array([np.nan if one is None else one for one in common])
+        if np.isfinite(series).sum() < 3:
+            continue
+        noise = np.full(len(series), HARMONIC_ERROR * np.nanmax(np.abs(series)))
+        found = extrapolate(
+            root["sites"].values, series, noise, {}, *_geometry(tree, dict(zip(dims, place)).get("lattice"))
+        )
+        value[place], error[place] = found.values["energy"], found.errors["energy"]
+    title = "first quantum correction e_1 per site, limit of many sites"
+    attrs = {
+        "long_name": f"standard error: {title}",
+        "units": _unit(root),
+        "comment": "includes the choice of the form",
+    }
+    out = {
+        "limit_first": (dims, value, {"long_name": title, "units": _unit(root)}),
+        "limit_first_error": (dims, error, attrs),
+    }
+    return xr.Dataset(out, coords=_coords(root, dims)) if np.isfinite(value).any() else None
+
+
+def trust_spin_limit(tree, tolerance=0.05, limits=None, first=None):
+    """trust_spin in the limit of many sites, from the extrapolated gaps per site; None where those do not suffice.
+
+    The coefficient of 1/S is the extrapolated harmonic one, which counts with its standard error, where there is one;
+    else it is fitted. limits, first: results of site_limits and harmonic_limits, if they are at hand.
+    """
     root = _root(tree)
     limits = site_limits(tree) if limits is None else limits
     if limits is None or root.sizes["spin"] < 2:
         return None
+    first = harmonic_limits(tree) if first is None else first
     spins = root["spin"].values
     dims = [d for d in _cluster_dims(root) if d != "sites"]
-    ordered = limits.transpose(*dims, "rule", "spin")
+    gaps, deviations, scales = (
+        limits[name].transpose(*dims, "rule", "spin").values for name in ("limit_gap", "limit_gap_error", "limit_scale")
+    )
     verdicts = {}
     for place in np.ndindex(*[root.sizes[d] for d in [*dims, "rule"]]):
-        one = ordered.isel(dict(zip([*dims, "rule"], place)))
         # the extrapolated gap has a two-sided standard error: as an interval [gap - error, gap] of 95 % it is
         # the value shifted up by two of them, four wide
-        deviation = one["limit_gap_error"].values
-        gap, scale = one["limit_gap"].values + 2 * deviation, float(one["limit_scale"].mean())
+        deviation = deviations[place]
+        gap = gaps[place] + 2 * deviation
+        scale = (
+            float(np.mean(scales[place][np.isfinite(scales[place])])) if np.isfinite(scales[place]).any() else np.nan
+        )
+        known = [None, 0.0]
+        if first is not None:
+            known = [
+                float(first[n].transpose(*dims, "rule").values[place]) for n in ("limit_first", "limit_first_error")
+            ]
+            known = known if np.isfinite(known).all() else [None, 0.0]
         rule = root["rule"].values[place[-1]]
-        found = fit_spins(spins, gap, 4 * deviation, scale, rule=rule)
+        found = fit_spins(spins, gap, 4 * deviation, scale, known[0], rule=rule, first_error=known[1])
         nothing = np.full((2, POWERS), np.nan), None, 0.0
         parts = (found.coefficients, found.covariance, found.shift) if found else nothing
         verdicts[place] = _judge(spins, gap, 4 * deviation, scale, *parts, tolerance)

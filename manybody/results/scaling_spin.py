@@ -77,10 +77,11 @@ def half_integer(spins):
     return np.round(2 * np.asarray(spins, float)).astype(int) % 2 == 1
 
 
-def fit_spins(spins, gap, error, scale, first=None, odd_sites=False, rule="") -> SpinFit | None:
+def fit_spins(spins, gap, error, scale, first=None, odd_sites=False, rule="", first_error=0.0) -> SpinFit | None:
     """Fit the gap (n,) with its one-sided 95 % errors (n,) by powers of x; None where the data do not suffice.
 
-    scale: energy scale |f_min - f_mean| for the rounding floor. first: e_1, or None to fit it as well.
+    scale: energy scale |f_min - f_mean| for the rounding floor. first: e_1, or None to fit it as well. With a standard
+    error first_error > 0 of its own, e_1 is fitted like the others and its given value is one more datum.
     """
     spins, gap, error = (np.asarray(a, float) for a in (spins, gap, error))
     good = np.isfinite(gap) & np.isfinite(error)
@@ -89,7 +90,9 @@ def fit_spins(spins, gap, error, scale, first=None, odd_sites=False, rule="") ->
     centre = gap - error / 2
     shift = SHIFTS.get(rule, 0.0)
     x = 1 / (spins + shift)
-    found = _best(x, half_integer(spins), centre, sigma, first, odd_sites)
+    measured = (first, first_error) if first is not None and first_error > 0 else None
+    fixed = first if measured is None else None
+    found = _best(x, half_integer(spins), centre, sigma, fixed, odd_sites, measured)
     if found is None:
         return None
     columns, powers, order, parity, result = found
@@ -105,13 +108,13 @@ def fit_spins(spins, gap, error, scale, first=None, odd_sites=False, rule="") ->
                 spread[1, column] = 1.0
         coefficients[row] = spread @ result.coefficients
         covariance[row] = factor * spread @ result.covariance @ spread.T
-        if first is not None:
-            coefficients[row, 0] += first
+        if fixed is not None:
+            coefficients[row, 0] += fixed
     odd = half_integer(spins)
     if odd_sites and (odd.all() or not odd.any()):
         missing = 0 if odd.all() else 1
         coefficients[missing], covariance[missing] = np.nan, np.nan
-    free, free_error = _first_alone(x, centre, sigma, columns, order, first)
+    free, free_error = _first_alone(x, centre, sigma, columns, order, fixed)
     return SpinFit(
         coefficients,
         covariance,
@@ -120,7 +123,7 @@ def fit_spins(spins, gap, error, scale, first=None, odd_sites=False, rule="") ->
         first is not None,
         free,
         free_error,
-        float(np.sqrt(np.mean(result.residuals**2))),
+        float(np.sqrt(np.mean(result.residuals[: len(x)] ** 2))),
         len(spins),
         float(spins.min()),
         float(spins.max()),
@@ -128,11 +131,16 @@ def fit_spins(spins, gap, error, scale, first=None, odd_sites=False, rule="") ->
     )
 
 
-def _best(x, odd, centre, sigma, first, odd_sites):
-    """The candidate with the best criterion: (columns, powers, order, parity, Fit), or None."""
-    n = len(x)
+def _best(x, odd, centre, sigma, first, odd_sites, measured=None):
+    """The candidate with the best criterion: (columns, powers, order, parity, Fit), or None.
+
+    measured: (e_1, standard error) as a datum beside the gaps; it has no omitted terms.
+    """
     y = centre if first is None else centre - first * x
     start = 1 if first is None else 2
+    if measured is not None:
+        y, sigma = np.append(y, measured[0]), np.append(sigma, measured[1])
+    n = len(y)
     mixed = bool(odd.any() and not odd.all())
     # an odd number of sites needs its extra term as soon as there are enough spins to fit it
     demanded = odd_sites and mixed and n > (3 if first is None else 2)
@@ -143,17 +151,21 @@ def _best(x, odd, centre, sigma, first, odd_sites):
             if n <= len(powers):
                 break
             columns = np.stack([_column(p, x, odd) for p in powers], axis=1)
-            result = fit(columns, y, sigma, x ** (order + 1.0))
-            candidates.append((columns, powers, order, parity, result))
+            shape = x ** (order + 1.0)
+            if measured is not None:
+                columns = np.vstack([columns, np.equal(np.arange(len(powers)), 0)])
+                shape = np.append(shape, 1e-9 * shape.min())
+            result = fit(columns, y, sigma, shape)
+            candidates.append((columns, powers, order, parity, result, shape))
     if not candidates:
         return None
-    finite = [c for c in candidates if np.isfinite(c[-1].criterion)]
+    finite = [c for c in candidates if np.isfinite(c[4].criterion)]
     # too few spins to compare forms: the shortest one
-    best = min(finite, key=lambda c: c[-1].criterion) if finite else candidates[0]
-    columns, powers, order, parity, result = best
+    best = min(finite, key=lambda c: c[4].criterion) if finite else candidates[0]
+    columns, powers, order, parity, result, shape = best
     if result.freedom == 1:
         least = ACCIDENT * np.max(np.abs(result.coefficients))
-        result = fit(columns, y, sigma, x ** (order + 1.0), least)
+        result = fit(columns, y, sigma, shape, least)
     return columns, powers, order, parity, result
 
 

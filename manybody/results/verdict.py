@@ -7,7 +7,7 @@ import numpy as np
 
 from manybody.results import wording
 from manybody.results.dataset import flag_words
-from manybody.results.scaling import rule_spread, trust_spin
+from manybody.results.scaling import rule_spread, trust_spin, trust_spin_limit
 from manybody.results.trust import STATES
 
 JUDGE = (
@@ -131,7 +131,27 @@ def _trusted(view, tolerance):
         parts.append(f"{_spin_range(spins)} under {rule} ({size} sites{_how(view, one)})")
     spread = float(verdict["trust_spin_spread"].max()) if len(view.rules) > 1 else np.nan
     tail = f"; the rules differ by up to {wording.spin(spread)} in spin" if np.isfinite(spread) and spread > 0 else ""
-    return f"The classical energy stays {within} from this spin on: {wording.several(parts)}{tail}."
+    many = _trusted_limit(view, tolerance)
+    return f"The classical energy stays {within} from this spin on: {wording.several(parts)}{tail}{many}."
+
+
+def _trusted_limit(view, tolerance):
+    """How the size changes it: the same in the limit of many sites, where that is known."""
+    if "limit_gap" not in view.scaling:
+        return ""
+    first = view.scaling if "limit_first" in view.scaling else None
+    verdict = trust_spin_limit(view.tree, tolerance, limits=view.scaling, first=first)
+    if verdict is None:
+        return ""
+    verdict = verdict.rename({n: n.removeprefix("limit_") for n in verdict.data_vars})
+    parts = []
+    for rule in view.rules:
+        one = verdict.sel(rule=rule)
+        if np.isfinite(one["trust_spin"]).any():
+            low, high = float(one["trust_spin_low"].min()), float(one["trust_spin_high"].max())
+            between = f" (possibly {wording.spin(low)} to {wording.spin(high)})" if low < high else ""
+            parts.append(f"{_spin_range(one['trust_spin'].values)}{between} under {rule}")
+    return f"; extrapolated to many sites, from {wording.several(parts)}" if parts else ""
 
 
 def _how(view, one):

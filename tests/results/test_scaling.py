@@ -1,7 +1,7 @@
 import numpy as np
 import pytest
 import xarray as xr
-from solvable import ATTRS, ring_records
+from solvable import ATTRS, ring_records, xxz_ring
 
 from manybody.results import scaling
 from manybody.results.dataset import flag_words, open_results, records_to_tree, write_results
@@ -66,11 +66,36 @@ def test_rule_spread_is_the_largest_difference(tree):
 
 
 def test_limit_of_many_sites_has_its_own_verdict():
+    """Spin-wave theory (Anderson 1952): |gap| = 0.36338/S + 0.0330/S^2 per site (rows C001 and G001): S = 15/2."""
     records = ring_records((4, 6, 8), (0.5, 1.0, 1.5), rules=("wick",))
-    verdict = scaling.trust_spin_limit(records_to_tree(records), 0.05)
-    # spin-wave theory (Anderson 1952): |gap| = 0.3634/S + ..., so about S = 7 to 8
-    assert 6 < float(verdict["limit_trust_spin"].sel(rule="wick")) < 10
-    assert float(verdict["limit_trust_spin_low"].item()) <= float(verdict["limit_trust_spin"].item())
+    tree = records_to_tree(records)
+    verdict = scaling.trust_spin_limit(tree, 0.05).sel(rule="wick")
+    assert float(verdict["limit_trust_spin"]) == 7.5
+    assert 6.5 <= float(verdict["limit_trust_spin_low"]) <= 7.5 <= float(verdict["limit_trust_spin_high"]) <= 8.5
+    # without the harmonic result e_1 is fitted from the gaps, and less certain
+    for record in records:
+        del record["harmonic_coefficient"]
+    alone = scaling.trust_spin_limit(records_to_tree(records), 0.05).sel(rule="wick")
+    assert scaling.harmonic_limits(records_to_tree(records)) is None
+    assert 6 < float(alone["limit_trust_spin"]) < 10
+
+    def width(one):
+        return float(one["limit_trust_spin_high"] - one["limit_trust_spin_low"])
+
+    assert width(alone) > width(verdict)
+
+
+def test_first_correction_has_a_limit_of_many_sites():
+    """2/pi - 1 per site under wick (Anderson 1952), 2 more under toeplitz (both traces: 4 kappa N = N each)."""
+    sizes = (4, 6, 8, 10, 12)
+    tree = records_to_tree(ring_records(sizes, (0.5,), energies={(n, 0.5): xxz_ring(n) for n in sizes}))
+    found = scaling.harmonic_limits(tree)
+    for rule, truth in (("wick", 2 / np.pi - 1), ("toeplitz", 2 / np.pi + 1)):
+        one = found.sel(rule=rule)
+        error = float(one["limit_first_error"])
+        assert abs(float(one["limit_first"]) - truth) < error < 1e-3
+    assert found["limit_first"].attrs["units"] == tree["gap"].attrs["units"]
+    assert scaling.harmonic_limits(records_to_tree(ring_records((4, 6), (0.5, 1.0)))) is None
 
 
 @pytest.mark.parametrize(

@@ -53,6 +53,22 @@ def test_first_coefficient_is_fitted_where_unknown_and_checked_where_known():
     assert abs(wrong.first_free + 1.5) > 4 * wrong.first_free_error
 
 
+def test_a_first_coefficient_with_an_error_is_one_more_datum():
+    gap = -2 / SPINS + 0.3 / SPINS**2
+    noisy = np.full(10, 2e-3)
+    data = gap + noisy / 2
+    exact, sharp, vague, free = (
+        fit_spins(SPINS, data, noisy, 4.0, first=first, first_error=error)
+        for first, error in ((-2.0, 0.0), (-2.0, 1e-9), (-2.3, 10.0), (None, 0.0))
+    )
+    np.testing.assert_allclose(sharp.coefficients, exact.coefficients, atol=1e-6)
+    np.testing.assert_allclose(vague.coefficients, free.coefficients, atol=1e-3)
+    wrong = fit_spins(SPINS, data, noisy, 4.0, first=-2.001, first_error=1e-3)
+    error = np.sqrt(wrong.covariance[0, 0, 0])
+    assert wrong.first_known and abs(wrong.coefficients[0, 0] + 2) < error < 3e-3
+    assert np.sqrt(sharp.covariance[0, 0, 0]) < 1e-8
+
+
 def test_statistical_errors_are_propagated():
     random = np.random.default_rng(5)
     truth = -2 / SPINS + 0.3 / SPINS**2
