@@ -113,16 +113,15 @@ class Chain:
             self.composites[key] = composite(first, second, (self.local[site].size, self.local[site + 1].size))
         return self.composites[key]
 
-    def weights(self, operator: OperatorSite) -> np.ndarray:
-        """Weights of an operator in the number type of the tensors."""
-        return operator.weights.astype(self.dtype, copy=False)
+    def arrays(self, operator: OperatorSite) -> tuple:
+        """An operator as compiled functions take it, weights in the number type of the tensors."""
+        return operator.arrays(self.dtype)
 
     def lowest(self, tensor, operator: OperatorSite, left: int, right: int, local, vectors: int, tolerance: float):
         """(energy, tensor) of the lowest state of everything between two bonds; see lanczos.lowest."""
         energy, tensor, _, _, needed = lanczos.lowest(
-            tensor, self.left[left], self.right[right], *self.bonds[left].pair, *self.bonds[right].pair, local,
-            operator.delta_left, operator.delta_right, operator.start, operator.end, operator.entries,
-            self.weights(operator), vectors, tolerance, self.scratch.array,
+            tensor, self.left[left], self.right[right], self.bonds[left].pair, self.bonds[right].pair, local,
+            self.arrays(operator), vectors, tolerance, self.scratch.array,
         )  # fmt: skip
         self.scratch.enlarge(needed)
         return energy, tensor
@@ -147,9 +146,8 @@ class Chain:
 
     def _environment(self, operator: OperatorSite, before: np.ndarray, left: Bond, right: Bond, local, tensor):
         environment, needed = contraction.environment(
-            tensor, before, *left.pair, *right.pair, local, operator.delta_left, operator.delta_right, operator.start,
-            operator.entries, self.weights(operator), self.scratch.array,
-        )  # fmt: skip
+            tensor, before, left.pair, right.pair, local, self.arrays(operator), self.scratch.array
+        )
         self.scratch.enlarge(needed)
         return environment
 

@@ -21,34 +21,24 @@ FROM_T, TO_O, ASSIGN = 1, 2, 4
 
 
 @compiled
-def plan(
-    left,
-    left_dims,
-    right,
-    right_dims,
-    local,
-    delta_left,
-    delta_right,
-    start,
-    end,
-    skip,
-    entries,
-    weights,
-    bra,
-    bra_dims,
-):
+def plan(left_bond, right_bond, local, operator, end, skip, bra_bond):
     """Everything `apply`, `half` and `close` need to know.
 
-    entries (n, 4): left channel, right channel, outgoing and incoming local state. The right channel `skip` is left out
-    of U altogether (-1: none), `end` goes to the result. bra, bra_dims: right bond of the result, the ket bond itself
-    except where new charges are probed (then `end` must be -1). Returns first (n, 8): rows, inner, columns, offsets in
-    L, A, T of the product of every left charge and its first and last move; moves (n, 7): flags (sum of FROM_T, TO_O,
-    ASSIGN), offset and stride of the source, in A or in the T of this charge, and of the target, in U or in the result
-    by left, rows, columns; factors (n,); second (n, 6): rows, inner, columns, offsets in U, R, O; back (n, 6): offset
-    and stride in O, the same in the result, rows, columns; groups (n, 4): rows, columns, offset in U and in O per bra
-    charge; holes (n, 4): offset, stride, rows, columns of the blocks of U that no move reaches; sizes (5,): elements of
-    A, T, U, O and of the largest T of one charge.
+    Bonds: tuples (charges, dims). operator: OperatorSite.arrays in the number type of the tensors. The right channel
+    `skip` is left out of U altogether, `end` goes to the result (-1: none). bra_bond: right bond of the result, the ket
+    bond itself except where new charges are probed (then `end` must be -1).
+
+    Returns first (n, 8): rows, inner, columns, offsets in L, A, T of the product of every left charge and its first and
+    last move; moves (n, 7): flags (sum of FROM_T, TO_O, ASSIGN), offset and stride of the source, in A or in the T of
+    this charge, and of the target, in U or in the result by left, rows, columns; factors (n,); second (n, 6): rows,
+    inner, columns, offsets in U, R, O; back (n, 6): offset and stride in O, the same in the result, rows, columns;
+    groups (n, 4): rows, columns, offset in U and in O per bra charge; sizes (5,): elements of A, T, U, O and of the
+    largest T of one charge; holes (n, 4): offset, stride, rows, columns of the blocks of U that no move reaches.
     """
+    left, left_dims = left_bond
+    right, right_dims = right_bond
+    bra, bra_dims = bra_bond
+    delta_left, delta_right, start, _, entries, weights = operator
     target, column, width, a_start, a_size = by_left(left, left_dims, right, right_dims, local)
     bra_of, l_row, l_height, l_start, _ = by_ket(left, left_dims, delta_left, start)
     u_row, u_height = by_right(left, left_dims, bra, local)
@@ -166,7 +156,7 @@ def _product(tensor, environment, buffer, step, start):
 @compiled
 def apply(tensor, result, left, right, steps, buffers):
     """result = H_eff tensor, both by left. buffers = (T of one charge, U, O), contents of no matter."""
-    _, moves, factors, second, back, _, _, _ = steps
+    second, back = steps[3], steps[4]
     _, stacked, grouped = buffers
     result[:] = 0
     half(tensor, result, left, steps, buffers)
@@ -243,20 +233,16 @@ def close(stacked, grouped, steps, dims):
 
 
 @compiled
-def environment(
-    tensor, before, left, left_dims, right, right_dims, local, delta_left, delta_right, start, entries, weights, scratch
-):
+def environment(tensor, before, left, right, local, operator, scratch):
     """Environment by bra on the right bond from the one on the left, also by bra, and a site orthonormal towards the
     right; elements of scratch memory needed."""
-    steps = plan(
-        left, left_dims, right, right_dims, local, delta_left, delta_right, start, -1, start, entries, weights, right,
-        right_dims,
-    )  # fmt: skip
+    delta_left, start = operator[0], operator[2]
+    steps = plan(left, right, local, operator, -1, start, right)
     sizes = steps[6]
     a, b, c = before.size, before.size + sizes[4], before.size + sizes[4] + sizes[2]
     needed = c + tensor.size
     work = room(scratch, needed)
-    to_ket(before, left, left_dims, delta_left, start, work[:a])
+    to_ket(before, left[0], left[1], delta_left, start, work[:a])
     half(tensor, tensor, work[:a], steps, (work[a:b], work[b:c]))
-    gather_into(work[c:needed], tensor, left, left_dims, right, right_dims, local)
-    return close(work[b:c], work[c:needed], steps, right_dims), needed
+    gather_into(work[c:needed], tensor, left[0], left[1], right[0], right[1], local)
+    return close(work[b:c], work[c:needed], steps, right[1]), needed

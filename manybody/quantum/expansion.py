@@ -13,6 +13,7 @@ import numpy as np
 from manybody.quantum import blocks
 from manybody.quantum.chain import Bond, Chain
 from manybody.quantum.compiled import compiled, conjugate
+from manybody.quantum.split import orthonormal_columns
 from manybody.quantum.variance import residual_halves
 
 NEGLIGIBLE = 1e-14
@@ -26,27 +27,55 @@ def expand(chain: Chain, site: int, fraction: float, limit: int, rng: np.random.
     if wanted <= 0:
         return
     near, far, own, groups, turned_groups, dims, reach = residual_halves(chain, site)
-    left, after, local = chain.bonds[site], chain.bonds[site + 2], chain.local[site : site + 2]
-    rows, turned_rows = groups[:, 0], turned_groups[:, 0]
-    probes = np.ceil(1.2 * fraction * dims).astype(np.int64) + 2
-    probes = np.maximum(np.minimum(probes, np.minimum(rows, turned_rows - dims)), 0)
-    noise = rng.standard_normal(int((probes * rows).sum())).astype(chain.dtype)
+    probes, size = sampling(fraction, groups[:, 0], turned_groups[:, 0], dims)
+    noise = rng.standard_normal(size).astype(chain.dtype, copy=False)
     found, added = directions(near, far, own, groups, turned_groups, dims, probes, noise, wanted, NEGLIGIBLE)
     if added.any():
-        larger = dims + added
-        stay = larger > 0
-        new = Bond(reach[stay], larger[stay])
-        grouped = append(own, found, turned_rows, dims, added)
-        centre = blocks.gather_right(chain.tensor(site), *left.pair, reach, dims, local[0])
-        centre = append(centre, np.zeros(int((rows * added).sum()), chain.dtype), rows, dims, added)
-        chain.bonds[site + 1] = new
-        chain.put(site, blocks.scatter_left(centre, *left.pair, *new.pair, local[0]))
-        pairs = (*after.mirrored(chain.total).pair, *new.mirrored(chain.total).pair)
-        chain.tensors[site + 1] = blocks.scatter_left(grouped, *pairs, local[1])
+        left, after, local = chain.bonds[site], chain.bonds[site + 2], chain.local[site : site + 2]
+        centre, turned, charges, larger = with_directions(
+            chain.tensor(site), own, found, left.pair, after.mirrored(chain.total).pair, (reach, dims), added,
+            *local, chain.total,
+        )  # fmt: skip
+        chain.bonds[site + 1] = Bond(charges, larger)
+        chain.put(site, centre)
+        chain.tensors[site + 1] = turned
         chain.turned[site + 1] = True
         chain.right[site + 1] = None
     if chain.right[site + 1] is None:
         chain.retreat(site + 1)
+
+
+@compiled
+def sampling(fraction, rows, turned_rows, dims):
+    """Random vectors per charge and how many random numbers they hold."""
+    probes = np.empty(dims.size, np.int64)
+    size = 0
+    for g in range(dims.size):
+        wanted = int(np.ceil(1.2 * fraction * dims[g])) + 2
+        probes[g] = max(min(wanted, rows[g], turned_rows[g] - dims[g]), 0)
+        size += probes[g] * rows[g]
+    return probes, size
+
+
+@compiled
+def with_directions(tensor, own, found, left, turned, reach, added, local, turned_local, total):
+    """The centre with zeros and the next tensor, as seen from the far end, with its new states; charges and dims of the
+    bond between them."""
+    charges, dims = reach
+    larger = dims + added
+    stay = larger > 0
+    bond, bond_dims = charges[stay], larger[stay]
+    grouped = blocks.gather_right(tensor, left[0], left[1], charges, dims, local)
+    _, rows = blocks.by_right(left[0], left[1], charges, local)
+    _, turned_rows = blocks.by_right(turned[0], turned[1], total - charges, turned_local)
+    centre = append(grouped, np.zeros((rows * added).sum(), tensor.dtype), rows, dims, added)
+    further = append(own, found, turned_rows, dims, added)
+    return (
+        blocks.scatter_left(centre, left[0], left[1], bond, bond_dims, local),
+        blocks.scatter_left(further, turned[0], turned[1], total - bond, bond_dims, turned_local),
+        bond,
+        bond_dims,
+    )
 
 
 @compiled
@@ -99,20 +128,20 @@ def directions(near, far, own, groups, turned_groups, dims, probes, noise, wante
         size += added[g] * turned_groups[g, 0]
         w_place += probes[g]
     found = np.empty(size, own.dtype)
-    o_place, s_place, goal = 0, 0, 0
+    o_place, s_place, w_place, goal = 0, 0, 0, 0
     for g in range(count):
         r, k, d, a = turned_groups[g, 0], probes[g], dims[g], added[g]
         if a > 0:
             z = np.ascontiguousarray(samples[s_place : s_place + r * k].reshape(r, k)[:, k - a :])
-            q, _ = np.linalg.qr(z)
+            z /= np.sqrt(k * weights[w_place + k - a : w_place + k])
+            # Columns far smaller than before their projection have kept a part of what was projected out.
             if d > 0:
                 b = own[o_place : o_place + r * d].reshape(r, d)
-                q = np.ascontiguousarray(q)
-                q -= np.dot(b, np.dot(conjugate(b).T, q))
-                q, _ = np.linalg.qr(q)
-            found[goal : goal + r * a] = np.ascontiguousarray(q).reshape(r * a)
+                z -= np.dot(b, np.dot(conjugate(b).T, z))
+            orthonormal_columns(z, found[goal : goal + r * a].reshape(r, a))
         o_place += r * d
         s_place += r * k
+        w_place += k
         goal += r * a
     return found, added
 

@@ -151,9 +151,8 @@ class _Channels:
 
     def values(self, centre, left: Bond, right: Bond, local, ladder) -> np.ndarray:
         """(channels, 3): <channel operator times S^+, S^-, S^z at the centre>."""
-        arguments = (*left.pair, *right.pair, local, self.delta, self.delta, 0, -1, 0)
-        none = (np.zeros((0, 4), np.int64), np.zeros(0, self.dtype))
-        steps = contraction.plan(*arguments, *none, *right.pair)
+        operator = (self.delta, self.delta, 0, -1, np.zeros((0, 4), np.int64), np.zeros(0, self.dtype))
+        steps = contraction.plan(left.pair, right.pair, local, operator, -1, 0, right.pair)
         by_ket = np.empty_like(self.environment)
         blocks.to_ket(self.environment, *left.pair, self.delta, 0, by_ket)
         return _pair_values(centre, by_ket, steps, *left.pair, *right.pair, local, self.delta, ladder)
@@ -169,10 +168,11 @@ class _Channels:
             rows, columns = np.nonzero(ladder[a])
             entries.extend((0, old + a, s, t) for s, t in zip(rows.tolist(), columns.tolist(), strict=True))
             weights.extend(ladder[a][rows, columns].tolist())
+        operator = (self.delta, delta, 0, -1, np.array(entries, np.int64), np.array(weights, self.dtype))
+        scratch = np.empty(0, self.dtype)
         self.environment, _ = contraction.environment(
-            tensor, self.environment, *left.pair, *right.pair, local, self.delta, delta, 0,
-            np.array(entries, np.int64), np.array(weights, self.dtype), np.empty(0, self.dtype),
-        )  # fmt: skip
+            tensor, self.environment, left.pair, right.pair, local, operator, scratch
+        )
         self.delta = delta
 
 

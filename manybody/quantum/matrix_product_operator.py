@@ -49,6 +49,11 @@ class OperatorSite:
     start: int = START
     end: int = END
 
+    def arrays(self, dtype: np.dtype) -> tuple:
+        """(delta_left, delta_right, start, end, entries, weights of the given number type), for compiled functions."""
+        weights = self.weights.astype(dtype, copy=False)
+        return self.delta_left, self.delta_right, self.start, self.end, self.entries, weights
+
     def mirrored(self) -> "OperatorSite":
         entries = np.ascontiguousarray(self.entries[:, [1, 0, 2, 3]])
         return OperatorSite(entries, self.weights, -self.delta_right, -self.delta_left, self.end, self.start)

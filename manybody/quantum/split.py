@@ -115,8 +115,8 @@ def orthonormal_columns(x, q):
     """q r = x with orthonormal columns q, written in place; returns r.
 
     The columns of x are orthogonal but for rounding, so one Cholesky factor (Stathopoulos, Wu 2002, SIAM J. Sci.
-    Comput. 23, 2165, from memory) mends them at a fraction of the cost of Householder reflections, which take over where the
-    smallest columns are too far off.
+    Comput. 23, 2165, from memory) mends them at a fraction of the cost of Householder reflections, which take over
+    where the smallest columns are too far off.
     """
     k = x.shape[1]
     lengths = np.zeros(k)

@@ -36,24 +36,18 @@ def at_centre(chain: Chain) -> tuple[float, float]:
 def image(chain: Chain, tensor, operator: OperatorSite, left: int, right: int, local) -> np.ndarray:
     """H_eff tensor, everything between two bonds."""
     return _image(
-        tensor, chain.left[left], chain.right[right], *chain.bonds[left].pair, *chain.bonds[right].pair, local,
-        operator.delta_left, operator.delta_right, operator.start, operator.end, operator.entries,
-        chain.weights(operator),
+        tensor, chain.left[left], chain.right[right], chain.bonds[left].pair, chain.bonds[right].pair, local,
+        chain.arrays(operator),
     )  # fmt: skip
 
 
 @compiled
-def _image(
-    tensor, before, after, left, left_dims, right, right_dims, local, delta_left, delta_right, start, end, entries,
-    weights,
-):  # fmt: skip
-    steps = contraction.plan(
-        left, left_dims, right, right_dims, local, delta_left, delta_right, start, end, -1, entries, weights, right,
-        right_dims,
-    )  # fmt: skip
+def _image(tensor, before, after, left, right, local, operator):
+    delta_left, start, end = operator[0], operator[2], operator[3]
+    steps = contraction.plan(left, right, local, operator, end, -1, right)
     sizes = steps[6]
     by_ket = np.empty_like(before)
-    blocks.to_ket(before, left, left_dims, delta_left, start, by_ket)
+    blocks.to_ket(before, left[0], left[1], delta_left, start, by_ket)
     buffers = (
         np.empty(sizes[4], tensor.dtype), np.empty(sizes[2], tensor.dtype), np.empty(sizes[3], tensor.dtype)
     )  # fmt: skip
@@ -82,10 +76,9 @@ def residual_halves(chain: Chain, site: int):
     # An operator finished on the left leaves the right space alone; the channel of those not yet begun completes the
     # residual.
     near, far, own, groups, turned_groups, needed = halves(
-        chain.tensor(site), chain.left[site], *left.pair, *bond.pair, local[0], here.delta_left, here.delta_right,
-        here.start, here.end, here.entries, chain.weights(here), chain.turned_tensor(site + 1), chain.right[site + 2],
-        *after.pair, local[1], there.delta_left, there.delta_right, there.start, there.end, there.entries,
-        chain.weights(there), reach, dims, chain.total, chain.scratch.array,
+        chain.tensor(site), chain.left[site], left.pair, bond.pair, local[0], chain.arrays(here),
+        chain.turned_tensor(site + 1), chain.right[site + 2], after.mirrored(chain.total).pair, local[1],
+        chain.arrays(there), (reach, dims), chain.total, chain.scratch.array,
     )  # fmt: skip
     chain.scratch.enlarge(needed)
     return near, far, own, groups, turned_groups, dims, reach
@@ -93,20 +86,16 @@ def residual_halves(chain: Chain, site: int):
 
 @compiled
 def halves(
-    tensor, before, left, left_dims, bond, bond_dims, local, delta_left, delta_right, start, end, entries, weights,
-    turned_tensor, after, right, right_dims, turned_local, turned_delta_left, turned_delta_right, turned_start,
-    turned_end, turned_entries, turned_weights, reach, dims, total, scratch,
+    tensor, before, left, bond, local, operator, turned_tensor, after, turned, turned_local, turned_operator, reach,
+    total, scratch,
 ):  # fmt: skip
     """near, far, own and the groups of both as in residual_halves, scratch elements needed; near and far lie in the
-    scratch memory."""
-    turned, turned_bond, turned_reach = total - right, total - bond, total - reach
-    steps = contraction.plan(
-        left, left_dims, bond, bond_dims, local, delta_left, delta_right, start, -1, end, entries, weights, reach, dims
-    )
+    scratch memory. turned: the bond after both sites as seen from the far end; reach: charges and dims there."""
+    turned_bond, turned_reach = (total - bond[0], bond[1]), (total - reach[0], reach[1])
+    steps = contraction.plan(left, bond, local, operator, -1, operator[3], reach)
     turned_steps = contraction.plan(
-        turned, right_dims, turned_bond, bond_dims, turned_local, turned_delta_left, turned_delta_right, turned_start,
-        -1, turned_start, turned_entries, turned_weights, turned_reach, dims,
-    )  # fmt: skip
+        turned, turned_bond, turned_local, turned_operator, -1, turned_operator[2], turned_reach
+    )
     sizes, turned_sizes = steps[6], turned_steps[6]
     near_size, far_size = sizes[2], turned_sizes[2]
     both = near_size + far_size
@@ -115,12 +104,12 @@ def halves(
     work = room(scratch, needed)
     near, far, part = work[:near_size], work[near_size:both], work[kets:needed]
     by_ket = work[both : both + before.size]
-    blocks.to_ket(before, left, left_dims, delta_left, start, by_ket)
+    blocks.to_ket(before, left[0], left[1], operator[0], operator[2], by_ket)
     contraction.half(tensor, tensor, by_ket, steps, (part, near))
     by_ket = work[both : both + after.size]
-    blocks.to_ket(after, turned, right_dims, turned_delta_left, turned_start, by_ket)
+    blocks.to_ket(after, turned[0], turned[1], turned_operator[0], turned_operator[2], by_ket)
     contraction.half(turned_tensor, turned_tensor, by_ket, turned_steps, (part, far))
-    own = blocks.gather_right(turned_tensor, turned, right_dims, turned_reach, dims, turned_local)
+    own = blocks.gather_right(turned_tensor, turned[0], turned[1], turned_reach[0], turned_reach[1], turned_local)
     return near, far, own, steps[5], turned_steps[5], needed
 
 

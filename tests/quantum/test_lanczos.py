@@ -29,8 +29,7 @@ def test_energy_belongs_to_the_vector_and_falls_with_products(vectors):
     place = operator, 14, 16, blocks.pair_charges(*local)
     first = np.vdot(pair, variance.image(state, pair, *place)) / np.vdot(pair, pair)
     energy, vector, residual, used, _ = lanczos.lowest(
-        pair, state.left[14], state.right[16], *left.pair, *right.pair, place[3], operator.delta_left,
-        operator.delta_right, operator.start, operator.end, operator.entries, state.weights(operator), vectors, 0.0,
+        pair, state.left[14], state.right[16], left.pair, right.pair, place[3], state.arrays(operator), vectors, 0.0,
         np.empty(0),
     )  # fmt: skip
     image = variance.image(state, vector, *place)
@@ -39,3 +38,17 @@ def test_energy_belongs_to_the_vector_and_falls_with_products(vectors):
     np.testing.assert_allclose(np.vdot(vector, image), energy, rtol=1e-13)
     np.testing.assert_allclose(np.linalg.norm(image - energy * vector), residual, rtol=1e-3, atol=1e-11)
     assert energy <= first + 1e-12
+
+
+@pytest.mark.parametrize("size", [1, 2, 3, 7, 40])
+def test_lowest_state_of_a_tridiagonal_matrix(size):
+    # against numpy's dense solver, scales of the two diagonals up to eight orders apart
+    rng = np.random.default_rng(size)
+    for _ in range(200):
+        diagonal = rng.standard_normal(size) * 10.0 ** rng.uniform(-3, 5)
+        beside = rng.standard_normal(size - 1) * 10.0 ** rng.uniform(-8, 3)
+        matrix = np.diag(diagonal) + np.diag(beside, 1) + np.diag(beside, -1)
+        value, vector = lanczos.lowest_of_tridiagonal(diagonal, beside)
+        scale = np.abs(matrix).max()
+        assert abs(value - np.linalg.eigvalsh(matrix)[0]) < 1e-14 * size * scale
+        assert np.linalg.norm(matrix @ vector - value * vector) < 1e-13 * size * scale
