@@ -18,7 +18,7 @@ import functools
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.special import ndtr
+from scipy.special import ndtr, stdtrit
 
 from manybody.results.scaling_spin import ROUNDING
 from manybody.results.site_forms import Form, forms_for
@@ -116,7 +116,7 @@ def _one_family(name, sites, energy, error, others, boundary, dimension):
             share[title] = share.get(title, 0.0) + weight
             if title not in heaviest or w[top, k] > heaviest[title][0]:
                 heaviest[title] = w[top, k], part, (top, k)
-        found = part.limits(np.argwhere(w > NEGLIGIBLE))
+        found = part.limits(np.argwhere(w > NEGLIGIBLE), noisy)
         for store, value in zip((limits, noise, spread), found):
             store.append(value)
     kept = weights[weights > NEGLIGIBLE]
@@ -200,7 +200,7 @@ class _Fits:
         self.marks += 2 * np.sum(np.log(np.abs(np.diag(r[:k])))) + 2 * (k - 1) * np.log(scale / first)
         self.prior = np.broadcast_to(group.prior, self.marks.shape)
 
-    def limits(self, places):
+    def limits(self, places, noisy):
         """Limits (places, series), their variance from sigma (places,) and from the rest (places, series)."""
         row, column = places.T
         square = self.amplitudes[row, column] ** 2
@@ -211,8 +211,10 @@ class _Fits:
         noise = np.sum(self.solve[0] ** 2) + np.sum((effect * shrink) ** 2, axis=1)
         rest = square * self.unseen[column] + np.sum(effect**2 * square[:, None] / stretch**2, axis=1)
         quadratic = np.einsum("pj,pjs->ps", 1 / stretch, seen**2)
-        # the amplitude of another series, relative to the energy's
-        ratio = quadratic / np.maximum(quadratic[:, :1], 1e-300)
+        # The amplitude of another series, relative to the energy's, from few degrees of freedom. That of the gap is not
+        # taken to be smaller than the energy's: with three or four sizes a smooth gap of rough energies may be luck.
+        own = quadratic / np.maximum(quadratic[:, :1], 1e-300)
+        ratio = np.where(noisy, np.maximum(own, 1.0), own * stdtrit(seen.shape[1], 0.8413) ** 2)
         return limits, noise, rest[:, None] * ratio
 
     def curve(self, place, names):

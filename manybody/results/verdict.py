@@ -148,9 +148,8 @@ def _trusted_limit(view, tolerance):
     for rule in view.rules:
         one = verdict.sel(rule=rule)
         if np.isfinite(one["trust_spin"]).any():
-            low, high = float(one["trust_spin_low"].min()), float(one["trust_spin_high"].max())
-            between = f" (possibly {wording.spin(low)} to {wording.spin(high)})" if low < high else ""
-            parts.append(f"{_spin_range(one['trust_spin'].values)}{between} under {rule}")
+            between = _between(one)
+            parts.append(f"{_spin_range(one['trust_spin'].values)}{between and f' ({between})'} under {rule}")
     return f"; extrapolated to many sites, from {wording.several(parts)}" if parts else ""
 
 
@@ -164,11 +163,16 @@ def _how(view, one):
         "measured": "measured",
     }
     words = [text[name] for name in STATES if name in state]
+    between = _between(one)
+    return f", {' or '.join(words)}{between and f', {between}'}"
+
+
+def _between(one):
+    """What the errors allow, where that is more than the verdicts themselves span."""
     low, high = float(one["trust_spin_low"].min()), float(one["trust_spin_high"].max())
     spins = one["trust_spin"].values
     wide = low < np.nanmin(spins) or high > np.nanmax(spins)
-    between = f", possibly {wording.spin(low)} to {wording.spin(high)}" if wide else ""
-    return f", {' or '.join(words)}{between}"
+    return f"possibly {wording.spin(low)} to {wording.spin(high)}" if wide else ""
 
 
 def _unproved(root):

@@ -1,5 +1,7 @@
 """Limits of many sites against exact and published ones; rows are those of data/reference_values.csv."""
 
+import itertools
+
 import numpy as np
 import pytest
 from limit_cases import SPIN_LIMITS, WINDOWS, chain_cases, computed, xxz_chain
@@ -175,6 +177,23 @@ def test_gap_limit_is_the_difference_of_the_limits():
     found = extrapolate(sites, quantum, error, {"classical": classical, "gap": quantum - classical}, "periodic", 1)
     assert found.values["gap"] == pytest.approx(found.values["energy"] - found.values["classical"], abs=1e-13)
     assert found.errors["gap"] > 0
+
+
+def test_limits_of_the_gap_are_not_certain_by_luck():
+    """Open patches of the square lattice, 2x2, 2x3, 3x4, S = 1/2: 4 (-0.669437) + 2 = -0.678 (row B023). The gaps of
+    these three lie on a line in 1/N^(1/2) that leads to -0.556; the energies do not."""
+    sites, bonds = np.array([4.0, 6, 12]), np.array([4.0, 7, 17])
+    spans = ((2, 2), (2, 3), (3, 4))
+    energies = np.array([4 * heisenberg(0.5, open_square(*span), span[0] * span[1]) for span in spans])
+    found = extrapolate(sites, energies, np.zeros(3), {"gap": energies + bonds, "classical": -bonds}, "open", 2)
+    assert abs(found.values["gap"] - (4 * reference("B023").value + 2)) < found.errors["gap"] < 0.3
+    assert abs(found.values["classical"] + 2) < found.errors["classical"]
+
+
+def open_square(rows, columns):
+    number = np.arange(rows * columns).reshape(rows, columns)
+    across = [(a, b) for row in number.tolist() for a, b in itertools.pairwise(row)]
+    return across + [(a, b) for column in number.T.tolist() for a, b in itertools.pairwise(column)]
 
 
 def test_constant_energies_per_site_have_a_limit_without_error():
