@@ -32,7 +32,7 @@ def run_fake(payload, inputs, report, checkpoint):
             while step == payload.get("await_stop") and first <= step and not checkpoint.due():
                 time.sleep(0.01)
             if checkpoint.due() or payload.get("save_always"):
-                checkpoint.save(str(step + 1).encode())
+                checkpoint.save(str(step + 1).encode().ljust(payload.get("state_bytes", 1)))
         return {"value": float(payload["number"]), "first": first, "steps": steps}
     value = payload["number"] + sum(item["value"] for item in inputs.values())
     rng = np.random.default_rng(payload["number"])

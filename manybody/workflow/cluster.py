@@ -94,6 +94,8 @@ class DaskExecutor(abc.ABC):
         self._quieten()
         # dask remembers this many messages with all they carried, a thousand unless told otherwise
         self._stack.enter_context(dask.config.set({"distributed.admin.low-level-log-length": MESSAGES}))
+        # a saved state travels with its part, however large it is
+        self._stack.enter_context(dask.config.set({"distributed.admin.large-graph-warning-threshold": "1TB"}))
         client = self._client = self.connect(parts)
         self.dashboard = getattr(client, "dashboard_link", "") or ""
         client.subscribe_topic(self.topic, self._on_message)
@@ -279,16 +281,20 @@ class LocalProcesses(DaskExecutor):
         # dask passes these on from our own environment, and writes there too: it is put back when we are done
         self._stack.callback(_restore_environment, {name: os.environ.get(name) for name in THREADS})
         os.environ.update({name: str(self.threads) for name in THREADS})
-        with dask.config.set({f"distributed.nanny.pre-spawn-environ.{name}": self.threads for name in THREADS}):
-            cluster = LocalCluster(
-                n_workers=workers,
-                threads_per_worker=1,
-                processes=True,
-                memory_limit=int(MEMORY_LIMIT / workers),
-                dashboard_address="127.0.0.1:0",  # any free port: the usual one may be taken, and dask would warn
-                scheduler_kwargs={"dashboard": self._dashboard},
-                silence_logs=logging.CRITICAL,
-            )
+        try:
+            with dask.config.set({f"distributed.nanny.pre-spawn-environ.{name}": self.threads for name in THREADS}):
+                cluster = LocalCluster(
+                    n_workers=workers,
+                    threads_per_worker=1,
+                    processes=True,
+                    memory_limit=int(MEMORY_LIMIT / workers),
+                    dashboard_address="127.0.0.1:0",  # any free port: the usual one may be taken, and dask would warn
+                    scheduler_kwargs={"dashboard": self._dashboard},
+                    silence_logs=logging.CRITICAL,
+                )
+        except Exception as error:
+            cause = error.__cause__ or error
+            raise EngineError(f"local workers cannot be started: {cause}. `--workers 0` does without them.") from error
         self._stack.callback(cluster.close, timeout=10)
         client = Client(cluster, set_as_default=False)
         self._stack.callback(client.close, timeout=10)

@@ -157,7 +157,8 @@ class _Run:
             elif self.deadline == float("inf"):
                 self.deadline = time.monotonic() + GRACE
                 self.executor.ask_to_stop()
-                wait = f"waiting up to {GRACE:.0f} s for {self._in_hand()} parts in hand"
+                parts = "1 part" if self._in_hand() == 1 else f"{self._in_hand()} parts"
+                wait = f"waiting up to {GRACE:.0f} s for {parts} in hand"
                 self.display.say(f"Stopping: {wait}; Ctrl-C again stops at once.")
             if not self.batches and (self.interrupts.stop or not self.waiting):
                 return
@@ -259,10 +260,13 @@ class _Run:
                     continue
                 outcomes = {outcome.key: outcome for outcome in event[2]}
                 for task in batch.tasks:
-                    if task.key in outcomes:
-                        done.append((task.key, replace(outcomes[task.key], attempts=self.tries[task.key] + 1)))
-                    else:
-                        self._again(task.key)
+                    outcome = outcomes.get(task.key)
+                    if outcome is not None and outcome.status != "stopped":
+                        done.append((task.key, replace(outcome, attempts=self.tries[task.key] + 1)))
+                        continue
+                    if outcome is not None:
+                        self.journal.store_state(task.key, outcome.data)
+                    self._again(task.key)
             elif what == "broken":
                 batch = self._take_back(event[1])
                 if batch is not None:

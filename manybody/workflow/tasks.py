@@ -44,7 +44,10 @@ class Task:
 
 @dataclass(frozen=True)
 class Outcome:
-    """What became of one part. `data` is the packed result, empty unless finished."""
+    """What became of one part. `data` is the packed result, empty unless finished.
+
+    On its way from a worker `status` may also be "stopped": broken off on request, `data` being the saved state.
+    """
 
     key: str
     status: str

@@ -19,7 +19,11 @@ SAVE_EVERY = 180.0  # seconds between saved states of one part
 
 
 class StopPart(BaseException):
-    """Raised inside a part that has saved its state after a stop was asked for; not an error of the part."""
+    """Raised inside a part that saves its state after a stop was asked for; not an error of the part."""
+
+    def __init__(self, state: bytes):
+        super().__init__()
+        self.state = state
 
 
 class Checkpoint:
@@ -27,7 +31,8 @@ class Checkpoint:
 
     load() : what an earlier, broken-off run saved last (bytes), or None
     due() : True when it is time to save, which it also is when the run is asked to stop
-    save(state) : hand over the present state, opaque bytes; replaces the previous one
+    save(state) : hand over the present state, opaque bytes; replaces the previous one. Does not return when the run
+        is asked to stop
     """
 
     def __init__(self, key: str, state: bytes | None, channel, every: float = SAVE_EVERY):
@@ -42,10 +47,10 @@ class Checkpoint:
         return time.monotonic() - self._last >= self._every or self._channel.stopping()
 
     def save(self, state: bytes) -> None:
-        self._last = time.monotonic()
-        self._channel.state(self._key, bytes(state))
         if self._channel.stopping():
-            raise StopPart
+            raise StopPart(bytes(state))
+        self._channel.state(self._key, bytes(state))
+        self._last = time.monotonic()
 
 
 def _reporter(key: str, channel):
@@ -107,7 +112,8 @@ def set_threads(count: int) -> None:
 def run_batch(run_part, items, inputs, states, channel, slice_seconds, measure_memory=True) -> list[Outcome]:
     """Run parts one after another: items are (key, payload, dependencies), inputs packed results, states saved bytes.
 
-    Returns the outcomes of those that ran. After `slice_seconds`, or when asked to stop, the rest is left to the run.
+    Returns the outcomes of those that ran. After `slice_seconds`, or when asked to stop, the rest is left to the run; a
+    part that saved its state then is "stopped", its data that state, so that no run ends before it has it.
     """
     host = socket.gethostname()
     results: dict[str, dict] = {}
@@ -126,7 +132,8 @@ def run_batch(run_part, items, inputs, states, channel, slice_seconds, measure_m
             checkpoint = Checkpoint(key, states.get(key), channel)
             given = {name: results[name] for name in depends}
             data = pack(run_part(payload, given, _reporter(key, channel), checkpoint))
-        except StopPart:
+        except StopPart as stop:
+            outcomes.append(Outcome(key, "stopped", stop.state))
             break
         except (Exception, SystemExit) as error:
             status, message = "failed", _describe(error)
@@ -183,10 +190,9 @@ def run_on_dask(run_part, items, inputs, states, channel, slice_seconds) -> list
     try:
         return run_batch(run_part, items, inputs, states, channel, slice_seconds, get_worker().state.nthreads == 1)
     finally:
-        # a state handed over at the very end is of no use once its part is done; one of a stopped part is
-        if channel.topic not in _STOPPING:
-            for key, *_ in items:
-                _STATES.pop((channel.topic, key), None)
+        # a state handed over at the very end is of no use once its part is done
+        for key, *_ in items:
+            _STATES.pop((channel.topic, key), None)
 
 
 def take_state(topic: str, key: str) -> bytes | None:

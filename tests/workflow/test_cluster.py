@@ -130,7 +130,8 @@ def test_existing_cluster_survives_the_death_of_a_worker_and_states_travel(tmp_p
     assert results["quantum-59"]["value"] == 59 + 11
 
     # a long part, interrupted: its state comes back over the network and the next run goes on from it
-    long = [fake_task(1, "sweeps", steps=10, await_stop=4, seconds=60.0)]
+    # (large enough for dask to warn of what it takes for data that should have been loaded elsewhere)
+    long = [fake_task(1, "sweeps", steps=10, await_stop=4, state_bytes=11_000_000, seconds=60.0)]
     with pytest.raises(Interrupted):
         run(long, ExistingCluster(scheduler_file=file), out, Interrupter())
     _, results, _ = run(long, ExistingCluster(scheduler_file=file), out)
@@ -145,6 +146,17 @@ def test_unreachable_schedulers_are_told(tmp_path, monkeypatch):
         run([fake_task(1)], ExistingCluster(scheduler_file=tmp_path / "nothing.json"))
     with pytest.raises(EngineError, match=r"no scheduler answers at tcp://127\.0\.0\.1:1"):
         run([fake_task(1)], ExistingCluster("tcp://127.0.0.1:1"))
+
+
+def test_local_workers_that_do_not_start_are_told(monkeypatch):
+    import distributed
+
+    def broken(**options):
+        raise RuntimeError("Nanny failed to start.") from OSError("no process can be started")
+
+    monkeypatch.setattr(distributed, "LocalCluster", broken)
+    with pytest.raises(EngineError, match=r"cannot be started: no process can be started\. `--workers 0` does"):
+        run([fake_task(1)], LocalProcesses(1))
 
 
 def test_fewer_parts_than_cores_get_more_threads_each(monkeypatch):
