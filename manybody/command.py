@@ -6,6 +6,7 @@ Exit status: 0 all points finished, 1 stopped by the outside (disk, cluster), 2 
 
 import contextlib
 import os
+import shlex
 import sys
 from pathlib import Path
 from typing import Annotated
@@ -56,7 +57,9 @@ def run(
     from manybody.workflow.summary import gap_table
     from manybody.workflow.tasks import Interrupted
 
-    again = f"manybody run {file} --out {out}"
+    options = {"--workers": workers, "--scheduler": scheduler, "--scheduler-file": scheduler_file, "--batch": batch}
+    given = [word for name, value in options.items() if value is not None for word in (name, str(value))]
+    again = shlex.join(["manybody", "run", str(file), "--out", str(out), *given])
     if workers is not None and (scheduler or scheduler_file):
         raise BadInput("--workers starts local processes and does not go with --scheduler: give one of them")
     study = as_study(file)

@@ -71,7 +71,11 @@ def test_failed_points_give_status_3_and_are_listed(manybody, study, tmp_path, m
     with monkeypatch.context() as patch:
         patch.setattr(pairing, "quantum_part", broken)
         code, text, errors = manybody("run", study, "--out", out, "--workers", "0")
-    assert code == 3 and "4 failed: `manybody status" in errors and "--retry-failed" in errors
+    assert (
+        code == 3
+        and "4 failed: `manybody status" in errors
+        and f"`manybody run {study} --out {out} --workers 0 --retry-failed`" in errors
+    )
     assert text.count(" failed\n") == 4
     code, text, _ = manybody("status", out)
     assert code == 0 and "2 sites, S = 1, wick (exact): ArithmeticError: overflow in site 1" in text
@@ -158,7 +162,7 @@ def test_interrupted_run_says_how_to_go_on(study, tmp_path):
         _, rest = process.communicate("on\n", timeout=120)
     errors += rest
     assert process.returncode == 130, errors
-    assert f"`manybody run {study} --out {out}` goes on from here" in errors and "Traceback" not in errors
+    assert f"`manybody run {study} --out {out} --workers 0` goes on from here" in errors and "Traceback" not in errors
     assert (out / "results.nc").is_file()
     with Journal(out) as journal:
         done = sum(entry.status == "finished" for entry in journal.entries().values())
