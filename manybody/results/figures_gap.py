@@ -18,7 +18,9 @@ from manybody.results.figure_view import NotDrawn
 from manybody.results.normalization import factor_at
 from manybody.results.published import matching
 from manybody.results.scaling import limit_at
+from manybody.results.scaling_sites import determined
 from manybody.results.scaling_spin import evaluate_class
+from manybody.results.wording import several
 
 
 def gap_against_spin(view):
@@ -95,7 +97,7 @@ def gap_against_sites(view):
     spins = even_choice([s for s in view.spins if bool(np.isfinite(gaps.sel(spin=s)).any())])
     figure, axes = new_figure(len(rules))
     published = matching(view.root)
-    handles, cited, extrapolated, shown = {}, [], False, [0.0]
+    handles, cited, vague, extrapolated, shown = {}, [], [], False, [0.0]
     for axis, rule in zip(axes[0], rules):
         for k, spin in enumerate(spins):
             colour, marker = COLOURS[k % len(COLOURS)], MARKERS[k]
@@ -112,7 +114,9 @@ def gap_against_sites(view):
                 "rule": view.rules.index(rule),
             }
             limit = limit_at(view.tree, index)
-            if limit is not None:
+            if limit is not None and not determined(limit.values["gap"], limit.errors["gap"], limit.values["scale"]):
+                vague.append(f"S = {spin_text(spin)} ({rule})")
+            elif limit is not None:
                 extrapolated = True
                 inverse = np.linspace(1 / max(limit.sizes), 1 / min(limit.sizes), 80)
                 axis.plot(inverse, limit.curve.at("gap", 1 / inverse) * factor, color=colour, lw=1)
@@ -123,7 +127,9 @@ def gap_against_sites(view):
                 axis.errorbar([0], [end], yerr=2 * limit.errors["gap"] * factor, fmt=marker, mfc="white", color=colour)
                 handles["limit, two standard errors"] = axis.plot([], [], "o", mfc="white", color=INK)[0]
                 for row in published:
-                    if (row.spin, row.rule) == (spin, rule):
+                    # a published energy can only be compared where this study knows the classical one
+                    known = limit.errors["classical"] < 0.1 * abs(row.value - limit.values["classical"])
+                    if (row.spin, row.rule) == (spin, rule) and known:
                         at = (row.value - limit.values["classical"]) * factor
                         axis.plot([0], [at], marker="*", color="none", mec=colour, ms=12, zorder=5)
                         handles["published limit"] = axis.plot([], [], "*", mfc="none", mec=INK, ms=11, ls="")[0]
@@ -140,8 +146,12 @@ def gap_against_sites(view):
         " Solid: leading form, over the sizes that were extrapolated; open symbols at zero: limit of many "
         "sites, whose error may leave the frame."
         if extrapolated
+        else ""
+        if vague
         else " No limit of many sites: that needs three sizes of one family."
     )
+    if vague:
+        what += f" These sizes do not determine the limit of many sites for {several(vague)}."
     source = (
         f" Stars: published energies minus this study's classical limit ({'; '.join(dict.fromkeys(cited))})."
         if cited

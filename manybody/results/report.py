@@ -19,6 +19,7 @@ from manybody.results.dataset import flag_words, open_results, points_table
 from manybody.results.figure_view import look
 from manybody.results.figures import figures_of, save
 from manybody.results.normalization import title as normalization_title
+from manybody.results.scaling_sites import determined
 from manybody.results.schema import VARIABLES
 from manybody.results.verdict import answer, cautions
 
@@ -197,11 +198,8 @@ def _limits(view):
             continue
         row = {d: data[d].values.tolist()[i] for d, i in zip(dims, place)}
         factor = float(view.factor.sel(spin=row["spin"], rule=row["rule"]))
-        cells = [
-            wording.measured(float(one[f"limit_{key}"]) * factor, float(one[f"limit_{key}_error"]) * factor)
-            for key in ("energy", "classical", "gap")
-        ]
-        cells.append(wording.measured(float(one["limit_relative_gap"]), float(one["limit_relative_gap_error"])))
+        cells = [_limit_cell(one, key, factor) for key in ("energy", "classical", "gap")]
+        cells.append(_limit_cell(one, "relative_gap", 1.0))
         sizes = f"{int(one['limit_sizes'])}, up to {int(one['limit_largest'])}"
         rows.append(
             [*_named(row, dims), *cells, str(one["limit_form"].item()), f"{sizes} ({one['limit_family'].item()})"]
@@ -209,6 +207,14 @@ def _limits(view):
     head = [*(_title(d) for d in dims), "quantum", "classical", "gap", "relative gap", "leading form", "sizes"]
     note = f"Per site{_in_unit(view)}; standard errors on the last digits include the choice of the form."
     return _table("limits", "Limit of many sites", note, head, rows)
+
+
+def _limit_cell(one, key, factor):
+    value, error = float(one[f"limit_{key}"]) * factor, float(one[f"limit_{key}_error"]) * factor
+    scale = 1.0 if key == "relative_gap" else float(one["limit_scale"]) * factor
+    if not determined(value, error, scale):
+        return f"undetermined (\N{PLUS-MINUS SIGN} {wording.number(error, 2)})"
+    return wording.measured(value, error)
 
 
 def _ladder(view):

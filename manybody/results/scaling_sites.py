@@ -63,8 +63,16 @@ class Curve:
 
     def at(self, series, sites):
         x, first = np.asarray(sites, float) ** (1 / self.form.dimension), self.nodes[0]
-        near = self.form.covariance(x, self.nodes, first)
+        near = self.form.trend(x, self.nodes, first)
         return self.form.fixed(x, first) @ self.fixed[series] + near @ self.rest[series]
+
+
+def determined(value, error, scale=0.0):
+    """Whether a limit with this standard error says anything: else it is better not drawn or quoted.
+
+    scale: |f_min - f_mean| per site, in the same unit; a limit of zero is determined to a millionth of it.
+    """
+    return bool(error <= max(abs(value) / 2, 1e-6 * scale))
 
 
 def extrapolate(sites, energy, error, others=None, boundary=None, dimension=None, families=None) -> Limit | None:

@@ -103,9 +103,13 @@ class Form:
         rough = (first / x)[:, None] ** self.extra * _root(tuple(np.log(x).tolist()), self.span)
         return self._envelope(x, first)[:, None] * np.hstack([self._steady(x, first), rough])
 
-    def covariance(self, x, other, first):
+    def trend(self, x, other, first):
+        """As covariance, but only what clusters of different shape have in common."""
+        return self.covariance(x, other, first, common=self.kind == "irregular")
+
+    def covariance(self, x, other, first, common=False):
         """Of the rest between sizes x (n,) and other (m,)."""
-        rough = rational_quadratic(np.log(x)[:, None] - np.log(other), self.span)
+        rough = rational_quadratic(np.log(x)[:, None] - np.log(other), self.span) * (not common)
         rough *= np.outer((first / x) ** self.extra, (first / other) ** self.extra)
         steady = self._steady(x, first) @ self._steady(other, first).T
         return np.outer(self._envelope(x, first), self._envelope(other, first)) * (steady + rough)

@@ -8,6 +8,7 @@ import numpy as np
 from manybody.results import wording
 from manybody.results.dataset import flag_words
 from manybody.results.scaling import rule_spread, trust_spin, trust_spin_limit
+from manybody.results.scaling_sites import determined
 from manybody.results.trust import STATES
 
 JUDGE = (
@@ -69,7 +70,7 @@ def _size_of_gap(view):
     spins = view.spins[usable.sel(rule=rule, sites=size).values]
     unit = "" if view.unit in ("", "1") else f" {view.unit}"
     ends = [float(s) for s in dict.fromkeys([spins[0], spins[-1]])]
-    swept = [d if d != "lattice" else "lattices" for d in view.place if view.root.sizes[d] > 1]
+    swept = _swept(view)
     parts, parts_relative, signs = [], [], []
     for spin in ends:
         place = {"rule": rule, "sites": size, "spin": spin}
@@ -93,6 +94,10 @@ def _size_of_gap(view):
     return text + _limit_of_gap(view, rule, ends[0], unit) + "."
 
 
+def _swept(view):
+    return [d if d != "lattice" else "lattices" for d in view.place if view.root.sizes[d] > 1]
+
+
 def _limit_of_gap(view, rule, spin, unit):
     if "limit_gap" not in view.scaling:
         return ""
@@ -100,7 +105,7 @@ def _limit_of_gap(view, rule, spin, unit):
     value, error = float(one["limit_gap"]), float(one["limit_gap_error"])
     if not np.isfinite(value):
         return ""
-    if error > abs(value) / 2:
+    if not determined(value, error, float(one["limit_scale"])):
         return "; these sizes do not determine its limit for many sites"
     factor = float(view.factor.sel(rule=rule, spin=spin))
     text = wording.measured(abs(value) * factor, error * factor)
@@ -132,7 +137,9 @@ def _trusted(view, tolerance):
     spread = float(verdict["trust_spin_spread"].max()) if len(view.rules) > 1 else np.nan
     tail = f"; the rules differ by up to {wording.spin(spread)} in spin" if np.isfinite(spread) and spread > 0 else ""
     many = _trusted_limit(view, tolerance)
-    return f"The classical energy stays {within} from this spin on: {wording.several(parts)}{tail}{many}."
+    swept = _swept(view)
+    over = f", over all {wording.several(swept)}" if swept else ""
+    return f"The classical energy stays {within} from this spin on{over}: {wording.several(parts)}{tail}{many}."
 
 
 def _trusted_limit(view, tolerance):
@@ -148,9 +155,14 @@ def _trusted_limit(view, tolerance):
     for rule in view.rules:
         one = verdict.sel(rule=rule)
         if np.isfinite(one["trust_spin"]).any():
+            vague = one["trust_spin_high"] > 2 * one["trust_spin_low"]
             between = _between(one)
-            parts.append(f"{_spin_range(one['trust_spin'].values)}{between and f' ({between})'} under {rule}")
-    return f"; extrapolated to many sites, from {wording.several(parts)}" if parts else ""
+            parts.append(
+                f"it is not determined by these sizes under {rule}"
+                if bool(vague.any())
+                else f"from {_spin_range(one['trust_spin'].values)}{between and f' ({between})'} under {rule}"
+            )
+    return f"; with many sites, extrapolated, {wording.several(parts)}" if parts else ""
 
 
 def _how(view, one):
