@@ -11,7 +11,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 import scipy.linalg
-from scipy.sparse.linalg import ArpackNoConvergence, eigsh
+from scipy.sparse.linalg import ArpackNoConvergence, LinearOperator, eigsh
 
 from manybody.model.quantization import SpinOperator
 from manybody.quantum.basis import Basis, TooLarge, sector_dimensions
@@ -19,6 +19,7 @@ from manybody.quantum.frame import Frame, natural_frame
 from manybody.quantum.ladder import Shifts, shifts
 from manybody.quantum.operators import assemble, entry_count
 from manybody.quantum.result import GroundState, QuantumSettings
+from manybody.quantum.saved_states import SavedStates, open_states
 from manybody.quantum.split_operator import SplitOperator, split_bytes
 
 LARGEST_DIMENSION = 3_000_000
@@ -29,6 +30,8 @@ _ALWAYS_FITS = 20_000  # up to here nobody needs to count entries
 _VECTORS = 20  # Lanczos vectors kept between restarts
 _TOLERANCE = 1e-12  # residual relative to the norm bound
 _COARSE = 1e-4  # the same, for a first look at a sector
+_LONG = 150_000_000  # entries from which an iteration takes minutes: it then goes in stages whose vectors can be saved,
+_STAGES = (1e-4, 1e-8, _TOLERANCE)  # which costs a third more products
 _SCAN_ALL = 200_000  # total dimension up to which every sector is solved outright
 _SCAN_COARSE = 4_000_000  # and up to which every sector gets at least a coarse look
 _SCAN_COUNT = 100  # if there are no more sectors than these
@@ -70,8 +73,12 @@ class _Solved:
     sector: float | None
     energy: float  # of the shifted, scaled operator
     residual: float
-    vector: np.ndarray
-    basis: Basis
+    vector: np.ndarray | None
+    basis: Basis | None
+
+    def to_arrays(self) -> dict[str, np.ndarray]:
+        vector = np.zeros(0) if self.vector is None else self.vector
+        return {"numbers": np.array([self.energy, self.residual]), "vector": vector}
 
 
 def exact_ground_state(
@@ -80,11 +87,13 @@ def exact_ground_state(
     start: np.ndarray | None = None,
     scale: float = 0.0,
     progress: Callable[[dict], None] | None = None,
+    saved: SavedStates | None = None,
 ) -> GroundState:
     """Ground state by exact diagonalization.
 
     start (N, 3): classical unit vectors, which sector to try first and which to prefer among degenerate ones. scale:
-    |f_min - f_mean|, to which settings.accuracy is relative; 0 takes the norm bound of the operator.
+    |f_min - f_mean|, to which settings.accuracy is relative; 0 takes the norm bound of the operator. saved: where
+    solved sectors, and the stages of a long iteration in one, are kept and found again.
 
     error: the residual norm |H v - E v| (an eigenvalue lies that close), what was neglected as rounding errors in the
     operator, and a rounding floor of 8 machine epsilons of the norm bound. Raises TooLarge where dimension or
@@ -95,7 +104,7 @@ def exact_ground_state(
     parts = shifts(frame.op, conserve=frame.conserved)
     if not math.isfinite(parts.norm):
         raise ValueError("the couplings are too large: their sum is not a finite number")
-    problem = _Problem(parts, settings, progress)
+    problem = _Problem(parts, settings, progress, saved or open_states(None))
     lead = _classical_magnetization(op, frame, start)
     if not parts.terms:
         best = _trivial(parts, lead)
@@ -167,39 +176,61 @@ class _Problem:
     0].
     """
 
-    def __init__(self, parts: Shifts, settings: QuantumSettings, progress):
+    def __init__(self, parts: Shifts, settings: QuantumSettings, progress, saved: SavedStates):
         terms = tuple(replace(term, amplitude=term.amplitude / parts.norm) for term in parts.terms)
         self.parts = replace(parts, terms=terms, constant=-1.0)
-        self.settings, self.progress = settings, progress
+        self.settings, self.progress, self.saved = settings, progress, saved
 
     def solve(self, sector: float | None, tolerance: float = _TOLERANCE) -> _Solved:
+        name = f"sector/{sector}/{tolerance}"
+        if done := self.saved.get(name):
+            energy, residual = done["numbers"].tolist()
+            vector = done["vector"] if done["vector"].size else None
+            solved = _Solved(sector, energy, residual, vector, None if vector is None else self._basis(sector))
+            self.saved.put(name, solved.to_arrays)
+            return solved
+        basis = self._basis(sector)
+        matrix, long = self._matrix(basis)
+        stages = self.saved.within(f"iteration/{sector}/{tolerance}") if long else None
+        energy, residual, vector = lowest_state(matrix, self.settings.seed, tolerance, stages)
+        if self.progress:
+            self.progress({"stage": "exact", "sector": sector, "dimension": basis.dimension, "residual": residual})
+        solved = _Solved(sector, energy, residual, vector, basis)
+        # Of a coarse look nobody asks for the vector.
+        kept = solved if tolerance == _TOLERANCE else replace(solved, vector=None, basis=None)
+        self.saved.put(name, kept.to_arrays)
+        self.saved.drop("iteration")
+        self.saved.pause()
+        return solved
+
+    def _basis(self, sector: float | None) -> Basis:
         basis = Basis(self.parts.spins, sector)
         if basis.dimension > LARGEST_DIMENSION:
             raise TooLarge(f"dimension {basis.dimension} is above {LARGEST_DIMENSION}")
-        matrix = self._matrix(basis)
-        energy, residual, vector = lowest_state(matrix, self.settings.seed, tolerance)
-        if self.progress:
-            self.progress({"stage": "exact", "sector": sector, "dimension": basis.dimension, "residual": residual})
-        return _Solved(sector, energy, residual, vector, basis)
+        return basis
 
     def _matrix(self, basis: Basis):
+        """The matrix or what multiplies by it, and whether an iteration with it is long."""
         item = 8 if self.parts.real else 16
         vectors = (_VECTORS + 6) * item * basis.dimension
         if vectors > self.settings.memory:
             raise TooLarge(f"Lanczos vectors of {vectors / 2**30:.1f} GiB do not fit the memory allowed")
         if basis.dimension <= _ALWAYS_FITS:
-            return assemble(self.parts, basis)
+            return assemble(self.parts, basis), False
         entries = basis.dimension + entry_count(self.parts, basis.sector)
+        long = entries >= _LONG
         if entries * (item + 4) + vectors + 2**26 <= self.settings.memory:
-            return assemble(self.parts, basis)
-        return SplitOperator(self.parts, basis)
+            return assemble(self.parts, basis), long
+        return SplitOperator(self.parts, basis), long
 
 
-def lowest_state(matrix, seed: int, tolerance: float = _TOLERANCE) -> tuple[float, float, np.ndarray]:
+def lowest_state(
+    matrix, seed: int, tolerance: float = _TOLERANCE, saved: SavedStates | None = None
+) -> tuple[float, float, np.ndarray]:
     """Lowest eigenvalue, residual norm and normalized vector of a Hermitian matrix (scipy CSR or LinearOperator).
 
     The matrix is expected to have its lowest eigenvalue near -1 ... -2 in size, since the tolerance is relative to it.
-    Repeatable: the start vector is drawn from `seed`.
+    Repeatable: the start vector is drawn from `seed`. saved: keeps what the iteration has reached, in stages.
     """
     dimension = matrix.shape[0]
     if dimension == 1:
@@ -220,15 +251,33 @@ def lowest_state(matrix, seed: int, tolerance: float = _TOLERANCE) -> tuple[floa
     start = random.standard_normal(dimension).astype(matrix.dtype)
     if np.issubdtype(matrix.dtype, np.complexfloating):
         start += 1j * random.standard_normal(dimension)
+    if saved is None or not saved.kept:
+        return _measured(matrix, _iterated(matrix, start, tolerance))
+    stages = [*(stage for stage in _STAGES if stage > tolerance), tolerance]
+    if found := saved.get("stage"):
+        start = found["vector"]
+        stages = stages[int(found["done"][0]) :]
+    watched = LinearOperator(
+        matrix.shape, dtype=matrix.dtype, matvec=lambda vector: (saved.pause(), matrix @ vector)[1]
+    )  # fmt: skip
+    for stage in stages:
+        start = _iterated(watched, start, stage)
+        done = sum(other >= stage for other in _STAGES)
+        saved.put("stage", lambda start=start, done=done: {"vector": start, "done": np.array([done])})
+    return _measured(matrix, start)
+
+
+def _iterated(matrix, start: np.ndarray, tolerance: float) -> np.ndarray:
+    """The lowest eigenvector, as nearly as restarted Lanczos iterations come to it."""
     for vectors in (_VECTORS, 3 * _VECTORS):
         try:
-            _, found = eigsh(matrix, k=1, which="SA", v0=start, tol=tolerance, ncv=min(vectors, dimension - 1))
-            start = found[:, 0]
-            break
+            ncv = min(vectors, len(start) - 1)
+            _, found = eigsh(matrix, k=1, which="SA", v0=start, tol=tolerance, ncv=ncv)
+            return found[:, 0]
         except ArpackNoConvergence as failure:
             if failure.eigenvectors.shape[1]:
                 start = failure.eigenvectors[:, 0]
-    return _measured(matrix, start)
+    return start
 
 
 def _measured(matrix, vector: np.ndarray) -> tuple[float, float, np.ndarray]:

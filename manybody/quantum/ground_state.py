@@ -124,9 +124,9 @@ def _connected(op, settings, start, scale, progress, saved: SavedStates) -> Grou
     small = np.sum(np.log2(2 * op.spins + 1)) < _SMALL
     if small or _affordable(estimate_exact(op, memory=settings.memory), settings):
         try:
-            return exact_ground_state(op, settings, start, scale, progress)
+            return exact_ground_state(op, settings, start, scale, progress, saved.within("exact"))
         except TooLarge:
-            pass  # very unequal spins: the tables of a half do not fit although the sector does
+            saved.drop("exact")  # very unequal spins: the tables of a half do not fit although the sector does
     from manybody.quantum.sweeps import matrix_product_ground_state
 
     return matrix_product_ground_state(op, settings, start, scale, progress, saved)

@@ -73,6 +73,11 @@ class SavedStates:
     store: _Store
     prefix: str = ""
 
+    @property
+    def kept(self) -> bool:
+        """Whether there is a checkpoint at all."""
+        return self.store.checkpoint is not None
+
     def within(self, name: str) -> "SavedStates":
         return SavedStates(self.store, f"{self.prefix}{name}/")
 

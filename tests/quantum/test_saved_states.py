@@ -9,8 +9,8 @@ from spin_models import chain, heisenberg, ring
 
 from manybody.model import couplings
 from manybody.model.quantization import quantize
+from manybody.quantum import exact, schedule, sweeps
 from manybody.quantum import ground_state as entry
-from manybody.quantum import schedule, sweeps
 from manybody.quantum.ground_state import ground_state
 from manybody.quantum.result import GroundState, QuantumSettings
 from manybody.quantum.saved_states import FORMAT, FileCheckpoint, open_states, pack, unpack
@@ -146,8 +146,8 @@ def sweeps_only(monkeypatch):
 
 def test_clusters_that_are_done_are_not_solved_again(steps, sweeps_only, monkeypatch):
     solved = []
-    exact = entry.exact_ground_state
-    monkeypatch.setattr(entry, "exact_ground_state", lambda *given: (solved.append(1), exact(*given))[1])
+    solve = entry.exact_ground_state
+    monkeypatch.setattr(entry, "exact_ground_state", lambda *given: (solved.append(1), solve(*given))[1])
     # Two sites, a chain in a field twice, another one; numbered in turns.
     pairs = [(0, 7), (1, 2), (2, 3), (3, 4), (5, 8), (8, 9), (9, 10), (6, 11), (11, 12), (12, 13), (13, 14)]
     f = couplings.exchange(15, pairs, 1.0) + couplings.field(15, range(15), [0, 0, 0.8]) + 0.25
@@ -228,6 +228,30 @@ def test_state_in_a_file(tmp_path, monkeypatch, steps):
     # Saved last before the step after which it broke off.
     assert len(steps) == undisturbed - before + 1
     assert not path.exists()
+
+
+def test_sectors_and_stages_of_exact_diagonalization_are_not_repeated(monkeypatch):
+    # As if the iteration in every sector of more than 300 states were long.
+    monkeypatch.setattr(exact, "_ALWAYS_FITS", 0)
+    monkeypatch.setattr(exact, "_LONG", 0)
+    done = []
+    iterated = exact._iterated
+
+    def counted(matrix, start, tolerance):
+        vector = iterated(matrix, start, tolerance)
+        done.append(tolerance)
+        return vector
+
+    monkeypatch.setattr(exact, "_iterated", counted)
+    f = couplings.exchange(12, ring(12), [1.0, 1.0, 0.6]) + couplings.field(12, range(12), [0, 0, 0.9])
+    op = quantize(f, 0.5)
+    alone = ground_state(op)
+    sectors = len(done)
+    done.clear()
+    found, seen = broken_off(lambda kept: ground_state(op, checkpoint=kept), 70)
+    same(found, alone)
+    assert abs(found.energy - alone.energy) < 1e-12 and found.state is not None and {"exact"} in seen
+    assert sectors == 5 and done == list(exact._STAGES) * sectors and len(seen) >= sectors
 
 
 def test_nothing_is_kept_without_a_checkpoint():
