@@ -193,22 +193,18 @@ def offsets(sizes):
 @compiled
 def reachable(left, right, first_local, second_local):
     """Charges of the middle bond that both sides can reach: left + first and right - second, ascending."""
-    wanted = np.zeros(right.size * second_local.size, np.int64)
-    count = 0
-    for j in range(right.size):
-        for s in range(second_local.size):
-            wanted[count] = right[j] - second_local[s]
-            count += 1
-    table, low = lookup(np.unique(wanted))
-    offered = np.zeros(left.size * first_local.size, np.int64)
-    count = 0
+    low = left.min() + first_local.min()
+    offered = np.zeros(left.max() + first_local.max() - low + 1, np.bool_)
     for i in range(left.size):
         for s in range(first_local.size):
-            charge = left[i] + first_local[s]
-            if find(table, low, charge) >= 0:
-                offered[count] = charge
-                count += 1
-    return np.unique(offered[:count])
+            offered[left[i] + first_local[s] - low] = True
+    wanted = np.zeros_like(offered)
+    for j in range(right.size):
+        for s in range(second_local.size):
+            place = right[j] - second_local[s] - low
+            if 0 <= place < wanted.size:
+                wanted[place] = True
+    return low + np.nonzero(offered & wanted)[0]
 
 
 @compiled

@@ -13,7 +13,7 @@ from manybody.quantum.compiled import Scratch, shared_scratch
 from manybody.quantum.matrix_product_operator import OperatorSite, composite
 
 
-@dataclass
+@dataclass(slots=True)
 class Bond:
     """charges (n,) distinct integers and dims (n,) states of each."""
 

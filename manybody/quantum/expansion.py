@@ -23,12 +23,13 @@ NEGLIGIBLE = 1e-14
 def expand(chain: Chain, site: int, fraction: float, limit: int, rng: np.random.Generator) -> None:
     """Add about `fraction` of its dimension (at least 4 states) to the bond after the centre, at most up to `limit`.
     The state itself is unchanged: the centre gets zeros."""
-    wanted = min(max(4, math.ceil(fraction * chain.bonds[site + 1].dimension)), limit - chain.bonds[site + 1].dimension)
+    present = chain.bonds[site + 1].dimension
+    wanted = min(max(4, math.ceil(fraction * present)), limit - present)
     if wanted <= 0:
         return
     near, far, own, groups, turned_groups, dims, reach = residual_halves(chain, site)
     probes, size = sampling(fraction, groups[:, 0], turned_groups[:, 0], dims)
-    noise = rng.standard_normal(size).astype(chain.dtype, copy=False)
+    noise = (rng.random(size) - 0.5).astype(chain.dtype, copy=False)
     found, added = directions(near, far, own, groups, turned_groups, dims, probes, noise, wanted, NEGLIGIBLE)
     if added.any():
         left, after, local = chain.bonds[site], chain.bonds[site + 2], chain.local[site : site + 2]
@@ -65,17 +66,28 @@ def with_directions(tensor, own, found, left, turned, reach, added, local, turne
     larger = dims + added
     stay = larger > 0
     bond, bond_dims = charges[stay], larger[stay]
-    grouped = blocks.gather_right(tensor, left[0], left[1], charges, dims, local)
-    _, rows = blocks.by_right(left[0], left[1], charges, local)
+    centre = padded(tensor, left, reach, local, bond, bond_dims)
     _, turned_rows = blocks.by_right(turned[0], turned[1], total - charges, turned_local)
-    centre = append(grouped, np.zeros((rows * added).sum(), tensor.dtype), rows, dims, added)
     further = append(own, found, turned_rows, dims, added)
-    return (
-        blocks.scatter_left(centre, left[0], left[1], bond, bond_dims, local),
-        blocks.scatter_left(further, turned[0], turned[1], total - bond, bond_dims, turned_local),
-        bond,
-        bond_dims,
-    )
+    further = blocks.scatter_left(further, turned[0], turned[1], total - bond, bond_dims, turned_local)
+    return centre, further, bond, bond_dims
+
+
+@compiled
+def padded(tensor, left, right, local, bond, bond_dims):
+    """A site tensor by left whose right bond gets more states: zeros there."""
+    target, column, width, start, _ = blocks.by_left(left[0], left[1], right[0], right[1], local)
+    _, new_column, new_width, new_start, size = blocks.by_left(left[0], left[1], bond, bond_dims, local)
+    result = np.zeros(size, tensor.dtype)
+    for i in range(left[0].size):
+        for s in range(local.size):
+            if target[i, s] >= 0:
+                columns = right[1][target[i, s]]
+                source, goal = start[i] + column[i, s], new_start[i] + new_column[i, s]
+                for x in range(left[1][i]):
+                    for y in range(columns):
+                        result[goal + x * new_width[i] + y] = tensor[source + x * width[i] + y]
+    return result
 
 
 @compiled

@@ -34,9 +34,13 @@ def spectra(matrices, shapes):
             np.dot(x, conjugate(x).T, gram)
         else:
             np.dot(conjugate(x).T, x, gram)
-        values, states = np.linalg.eigh(gram)
-        weights[place : place + side] = np.maximum(values, 0.0)
-        vectors[goal : goal + side * side] = np.ascontiguousarray(states).reshape(side * side)
+        if side == 1:
+            weights[place] = gram[0, 0].real
+            vectors[goal] = 1.0
+        else:
+            values, states = np.linalg.eigh(gram)
+            weights[place : place + side] = np.maximum(values, 0.0)
+            vectors[goal : goal + side * side] = np.ascontiguousarray(states).reshape(side * side)
         first += m * n
         place += side
         goal += side * side

@@ -20,6 +20,7 @@ import argparse  # noqa: E402
 import contextlib  # noqa: E402
 import sys  # noqa: E402
 import time  # noqa: E402
+from collections.abc import Callable  # noqa: E402
 from dataclasses import dataclass  # noqa: E402
 from pathlib import Path  # noqa: E402
 
@@ -211,100 +212,183 @@ def dgemm_peak() -> float:
     a = np.random.default_rng(0).standard_normal((1000, 1000))
     best = 0.0
     for _ in range(5):
-        begin = time.perf_counter()
+        begin = time.process_time()
         a @ a
-        best = max(best, 2e9 / (time.perf_counter() - begin) / 1e9)
+        best = max(best, 2e9 / (time.process_time() - begin) / 1e9)
     return best
 
 
+@dataclass
+class Products:
+    """Processor time of the matrix products of a run: after every compiled step products of the same shapes are done
+    again, alone, and timed; `replayed` is to be subtracted from the time of the run."""
+
+    multiply: Callable
+    source: np.ndarray
+    target: np.ndarray
+    counting: bool = False
+    seconds: float = 0.0
+    flops: float = 0.0
+    replayed: float = 0.0
+    solves: int = 0
+    steps: float = 0.0
+
+    def after(self, function: Callable, shapes: Callable) -> Callable:
+        """The function, followed by products of the shapes that shapes(arguments, outcome) lists: (rows, inner,
+        columns) and how often."""
+
+        def replaced(*arguments):
+            outcome = function(*arguments)
+            if self.counting:
+                begin = time.process_time()
+                self.repeat(*shapes(arguments, outcome))
+                self.replayed += time.process_time() - begin
+            return outcome
+
+        return replaced
+
+    def repeat(self, shapes, times: int) -> None:
+        shapes = np.asarray(shapes, np.int64).reshape(-1, 3)
+        shapes = np.ascontiguousarray(shapes[shapes.min(axis=1, initial=1) > 0])
+        begin = time.process_time()
+        self.multiply(shapes, times, self.source, self.target)
+        self.seconds += time.process_time() - begin
+        self.flops += 2.0 * times * float(shapes.prod(axis=1).sum())
+
+
+def cut_shapes(shapes, kept) -> list[tuple[int, int, int]]:
+    """Products (rows, inner, columns) of split.spectra and split.parts."""
+    result = []
+    for (m, n), k in zip(shapes.tolist(), kept.tolist(), strict=True):
+        side = min(m, n)
+        result.append((side, max(m, n), side))
+        result += [(k, m, n)] if m <= n else [(m, n, k), (k, m, k), (m, k, k), (k, k, n)]
+    return result
+
+
+def direction_shapes(groups, turned_groups, dims, probes, added) -> list[tuple[int, int, int]]:
+    """Products of expansion.directions."""
+    result = []
+    columns = (groups[:, 0], groups[:, 1], turned_groups[:, 0], dims, probes, added)
+    for m, n, r, d, k, a in zip(*(column.tolist() for column in columns), strict=True):
+        result += [(k, m, n), (r, n, k), (k, r, k), (r, k, k), (d, r, a), (r, d, a)]
+        result += 2 * [(d, r, k), (r, d, k)]
+    return result
+
+
 def profile() -> None:
-    """Every Lanczos solve, environment and residual is followed by its matrix products alone, timed apart from the
-    run."""
-    from manybody.quantum import contraction, lanczos
+    """Share of matrix products in the steps of sweeps at the full bond dimension, and the other work of a step."""
+    from manybody.quantum import blocks, contraction, expansion, lanczos, split, variance
     from manybody.quantum.compiled import compiled
     from manybody.quantum.schedule import Run
 
     @compiled
-    def products(tensor, environment, right, steps, times, both):
-        sizes = steps[6]
-        middle = np.empty(sizes[1], tensor.dtype)
-        stacked = np.zeros(sizes[2], tensor.dtype)
-        grouped = np.empty(sizes[3], tensor.dtype)
+    def multiply(shapes, times, source, target):
+        place = 0
         for _ in range(times):
-            contraction.multiply(tensor, environment, middle, steps[0])
-            if both:
-                for g in range(steps[3].shape[0]):
-                    m, k, n, u, r, o = steps[3][g]
-                    np.dot(
-                        stacked[u : u + m * k].reshape(m, k),
-                        right[r : r + k * n].reshape(k, n),
-                        grouped[o : o + m * n].reshape(m, n),
-                    )
+            for g in range(shapes.shape[0]):
+                m, k, n = shapes[g]
+                if place + (m + n) * k > source.size:
+                    place = 0
+                middle, end = place + m * k, place + (m + n) * k
+                np.dot(
+                    source[place:middle].reshape(m, k),
+                    source[middle:end].reshape(k, n),
+                    target[: m * n].reshape(m, n),
+                )
+                place = end
 
-    def flops(steps, both: bool) -> float:
-        tables = (steps[0], steps[3]) if both else (steps[0],)
-        return float(sum(2.0 * table[:, :3].prod(axis=1).sum() for table in tables))
+    clock = Products(multiply, np.random.default_rng(0).standard_normal(8_000_000), np.empty(4_000_000))
 
-    clock = {"products": 0.0, "flops": 0.0, "replay": 0.0, "solves": 0, "steps": 0.0}
-    real_lowest, real_half, real_close = lanczos.lowest, contraction.half, contraction.close
+    def lowest(arguments, outcome):
+        _, _, _, left, right, local, operator, *_ = arguments
+        clock.solves += 1
+        steps = contraction.plan(left, right, local, operator, operator[3], -1, right)
+        return np.concatenate([steps[0][:, :3], steps[3][:, :3]]), outcome[3]
 
-    def replay(seconds: float, count: float) -> None:
-        clock["products"] += seconds
-        clock["replay"] += seconds
-        clock["flops"] += count
+    def environment(arguments, outcome):
+        _, _, left, right, local, operator, _ = arguments
+        steps = contraction.plan(left, right, local, operator, -1, operator[2], right)
+        second = np.stack([steps[5][:, 1], steps[5][:, 0], right[1]], axis=1)
+        return np.concatenate([steps[0][:, :3], second]), 1
 
-    def lowest(tensor, left, right, steps, vectors, tolerance):
-        outcome = real_lowest(tensor, left, right, steps, vectors, tolerance)
-        begin = time.perf_counter()
-        products(tensor, left, right, steps, outcome[3], True)
-        replay(time.perf_counter() - begin, outcome[3] * flops(steps, True))
-        clock["solves"] += 1
-        return outcome
+    def halves(arguments, outcome):
+        _, _, left, bond, local, operator, _, _, turned, turned_local, turned_operator, reach, total, _ = arguments
+        near = contraction.plan(left, bond, local, operator, -1, operator[3], reach)
+        turned_bond, turned_reach = (total - bond[0], bond[1]), (total - reach[0], reach[1])
+        far = contraction.plan(turned, turned_bond, turned_local, turned_operator, -1, turned_operator[2], turned_reach)
+        return np.concatenate([near[0][:, :3], far[0][:, :3]]), 1
 
-    def half(tensor, left, steps):
-        outcome = real_half(tensor, left, steps)
-        begin = time.perf_counter()
-        products(tensor, left, left, steps, 1, False)
-        replay(time.perf_counter() - begin, flops(steps, False))
-        return outcome
+    def directions(arguments, outcome):
+        _, _, _, groups, turned_groups, dims, probes, *_ = arguments
+        return direction_shapes(groups, turned_groups, dims, probes, outcome[1]), 1
 
-    def close(stacked, grouped, steps, dims):
-        begin = time.perf_counter()
-        outcome = real_close(stacked, grouped, steps, dims)
-        # Nothing but one product per charge.
-        clock["products"] += time.perf_counter() - begin
-        clock["flops"] += float(2.0 * (steps[5][:, 0] * steps[5][:, 1] * dims).sum())
-        return outcome
+    def cut(arguments, outcome):
+        _, left, left_dims, right, right_dims, local, *_ = arguments
+        height = blocks.by_right(left, left_dims, right, local)[1]
+        return cut_shapes(np.stack([height, right_dims], axis=1), outcome[2]), 1
 
+    def cut_pair(arguments, outcome):
+        outer = arguments[1:7]
+        middle = blocks.reachable(outer[0], outer[2], *outer[4:])
+        kept = np.zeros_like(middle)
+        kept[np.searchsorted(middle, outcome[2])] = outcome[3]
+        return cut_shapes(blocks.pair_shapes(middle, *outer), kept), 1
+
+    def join_pair(arguments, outcome):
+        _, _, left, left_dims, middle, middle_dims, right, right_dims, first, second = arguments
+        height = blocks.by_right(left, left_dims, middle, first)[1]
+        width = blocks.by_left(middle, middle_dims, right, right_dims, second)[2]
+        return np.stack([height, middle_dims, width], axis=1), 1
+
+    def pass_on(arguments, outcome):
+        _, _, kept, _, _, _, right, right_dims, after, after_dims, _, local = arguments
+        width = blocks.by_left(right, right_dims, after, after_dims, local)[2]
+        return np.stack([kept, right_dims, width], axis=1), 1
+
+    shapes = {
+        lanczos: (lowest,), contraction: (environment,), variance: (halves,), expansion: (directions,),
+        split: (cut, cut_pair, join_pair, pass_on),
+    }  # fmt: skip
+    real = [(module, f.__name__, getattr(module, f.__name__), f) for module, fs in shapes.items() for f in fs]
     real_sweep = Run._half_sweep
+    full = 0
 
     def half_sweep(run):
-        begin, replayed = time.perf_counter(), clock["replay"]
+        # More Lanczos vectors than usual are no cost of the bond: they are spent where sweeps crawl.
+        clock.counting = run.chain.bond_dimension >= full and run.vectors == run.limits.vectors
+        begin, replayed = time.process_time(), clock.replayed
         outcome = real_sweep(run)
-        clock["steps"] += time.perf_counter() - begin - (clock["replay"] - replayed)
+        if clock.counting:
+            clock.steps += time.process_time() - begin - (clock.replayed - replayed)
+        clock.counting = False
         return outcome
 
-    lanczos.lowest, contraction.half, contraction.close = lowest, half, close
+    for module, name, function, listing in real:
+        setattr(module, name, clock.after(function, listing))
     Run._half_sweep = half_sweep
-    print(f"dgemm peak {dgemm_peak():.1f} GFLOP/s")
-    for name, case in cases().items():
-        sizes = (40, 80) if name in ("half", "one") else (40, 500)
-        for bond in sizes:
-            ours(case, QuantumSettings(max_bond=bond, accuracy=1e-12))
-            clock.update(products=0.0, flops=0.0, replay=0.0, solves=0, steps=0.0)
-            _, _, whole, result = ours(case, QuantumSettings(max_bond=bond, accuracy=1e-12))
-            spent = whole - clock["replay"]
-            share = clock["products"] / clock["steps"]
-            other = 1e3 * (clock["steps"] - clock["products"]) / max(clock["solves"], 1)
-            print(
-                f"profile {name} D <= {bond}: reached {result.bond_dimension}, {spent:.2f} s, "
-                f"products {100 * share:.0f} % "
-                f"at {clock['flops'] / clock['products'] / 1e9:.1f} GFLOP/s, "
-                f"other work {other:.2f} ms per step of a sweep",
-                flush=True,
-            )
-    lanczos.lowest, contraction.half, contraction.close = real_lowest, real_half, real_close
-    Run._half_sweep = real_sweep
+    clock.repeat([(1, 1, 1)], 1)
+    try:
+        print(f"dgemm peak {dgemm_peak():.1f} GFLOP/s")
+        for name, case in cases().items():
+            for bond in (40, 80) if name in ("half", "one") else (40, 500):
+                full = bond
+                clock.seconds = clock.flops = clock.steps = 0.0
+                clock.solves = 0
+                ours(case, QuantumSettings(max_bond=bond, accuracy=1e-12))
+                if not clock.solves:
+                    print(f"profile {name} D = {bond}: the sweeps stopped at a smaller bond dimension", flush=True)
+                    continue
+                print(
+                    f"profile {name} D = {bond}: {clock.solves} steps of {1e3 * clock.steps / clock.solves:.2f} ms, "
+                    f"products {100 * clock.seconds / clock.steps:.0f} % at {clock.flops / clock.seconds / 1e9:.1f} "
+                    f"GFLOP/s, other work {1e3 * (clock.steps - clock.seconds) / clock.solves:.2f} ms a step",
+                    flush=True,
+                )
+    finally:
+        for module, name, function, _ in real:
+            setattr(module, name, function)
+        Run._half_sweep = real_sweep
 
 
 def main() -> int:
