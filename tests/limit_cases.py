@@ -13,7 +13,17 @@ from pathlib import Path
 import numpy as np
 from reference import reference
 from scipy.integrate import quad
-from solvable import _bethe_phases, ising_chain, ising_limit, ising_ring, xxz_ring
+from solvable import (
+    _bethe_phases,
+    chain_pairs,
+    heisenberg,
+    ising_chain,
+    ising_limit,
+    ising_ring,
+    ring_pairs,
+    xx_chain,
+    xxz_ring,
+)
 
 TABLE = Path(__file__).parent.parent / "data" / "open_chain_energies.csv"
 WINDOWS = (
@@ -188,6 +198,27 @@ def held_cases(windows=HELD_WINDOWS):
         ((0.6, 0.4), (0.3, 1.1), (0.4, 0.97)),
     )
     return [*_chain_cases(models, windows), *engine_cases(windows)]
+
+
+MIXED_WINDOWS = (
+    *((3, 4, 5), (3, 5, 6), (4, 5, 6), (5, 6, 8), (2, 3, 4, 5), (3, 4, 5, 6), (4, 5, 6, 7), (4, 6, 7, 8)),
+    *((4, 6, 8, 9), (3, 4, 5, 6, 7), tuple(range(3, 9)), tuple(range(3, 11))),
+)
+
+
+def mixed_cases(windows=MIXED_WINDOWS):
+    """Few even and odd sizes together: rings of half-integer spin and fermions on open chains alternate, others not."""
+    models = [
+        ("xx, mixed", (), xx_chain, reference("B006").value, "open"),
+        ("ising, mixed", (1.0,), ising_chain, ising_limit(1.0), "open"),
+    ]
+    for spin, most, truth in ((0.5, 10, xxz_limit(1.0)), (1.0, 8, SPIN_LIMITS[1.0, 1.0][0])):
+        small = [window for window in windows if min(window) > 2 and max(window) <= most]
+        bonds = (("ring", ring_pairs, "periodic"), ("open", chain_pairs, "open"))
+        for name, pairs, boundary in bonds:
+            solve = lambda n, spin=spin, pairs=pairs: heisenberg(spin, pairs(n), n)  # noqa: E731
+            yield from _chain_cases([(f"spin {spin:g} {name}, mixed", (), solve, truth, boundary)], small)
+    yield from _chain_cases(models, windows)
 
 
 def _momenta(extent, shift=0.0):

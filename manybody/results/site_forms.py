@@ -23,9 +23,9 @@ SPANS = (0.7, 1.4, 2.8)
 """Changes of ln x over which c may vary: sizes differing by factors 2, 4 and 16. A longer one would deny the slow
 crossover of S = 3/2 chains, shorter ones only widen the errors."""
 SHORT_SPAN = 0.02
-"""c independent from size to size: clusters of different shape."""
+"""c independent from size to size: even and odd sizes together, clusters of different shape."""
 STEADY = 2.0
-"""The constant a may be this many times larger than c; for clusters of different shape, IRREGULAR times."""
+"""The constant a may be this many times larger than c; for clusters of similar shape, IRREGULAR times."""
 IRREGULAR = 60.0
 LOGARITHMS = (0.03, 0.1, 0.3)
 """The length in the logarithm, in units of the smallest size."""
@@ -136,14 +136,15 @@ def _power(power, dimension):
 def forms_for(sizes, boundary=None, dimension=None) -> tuple[Form, ...]:
     """The forms to compare for these numbers of sites; boundary "open", "periodic" or None for unknown or mixed,
     dimension 1, 2, 3 or None (all are tried)."""
-    chosen = []
+    chosen, sizes = [], np.asarray(sizes, float)
+    mixed = len(set((sizes % 2).tolist())) > 1
     for (edge, d), power in LEADING.items():
         if boundary in (None, edge) and (d == dimension or dimension is None):
-            chosen += _forms(edge, d, power, np.asarray(sizes, float) ** (1 / d))
+            chosen += _forms(edge, d, power, sizes ** (1 / d), mixed)
     return tuple(chosen)
 
 
-def _forms(edge, d, power, x):
+def _forms(edge, d, power, x, mixed):
     extra = 2 if (edge, d) == ("periodic", 1) else 1
     forms = []
     for span in SPANS:
@@ -159,6 +160,9 @@ def _forms(edge, d, power, x):
             forms.append(Form(edge, d, "growing", power, span, -1, weight=RARE))
     if d > 1:
         forms.append(Form(edge, d, "irregular", power, SHORT_SPAN, steady=IRREGULAR))
+    if mixed or d > 1:
+        # sizes of different commensurability differ by as much as the leading term itself
+        forms.append(Form(edge, d, "irregular", power, SHORT_SPAN))
     for length in np.geomspace(0.15 * np.min(np.diff(np.unique(x))), FAR * (x[-1] - x[0]), LENGTHS):
         forms += [Form(edge, d, "exponential", p, span, length=float(length)) for p in (1, 2) for span in SPANS[1:]]
     return forms

@@ -22,7 +22,7 @@ import numpy as np
 ROOT = Path(__file__).resolve().parents[2]
 sys.path[:0] = [str(ROOT), str(ROOT / "tests")]
 
-from limit_cases import TABLE, chain_cases, held_cases, lattice_cases  # noqa: E402
+from limit_cases import TABLE, chain_cases, held_cases, lattice_cases, mixed_cases  # noqa: E402
 
 from manybody.results.scaling_sites import extrapolate  # noqa: E402
 
@@ -98,6 +98,7 @@ def main():
     for title, cases in {
         "chains used to choose the constants": chain_cases(),
         "other chains, other sizes": held_cases(),
+        "even and odd sizes together": mixed_cases(),
         "lattices": lattice_cases(),
     }.items():
         table, misses = coverage(cases, not chosen.unknown)

@@ -186,3 +186,13 @@ def test_colours_can_be_told_from_paper_and_from_each_other():
     assert contrast(INK) > 7 and all(contrast(c) > 2.4 for c in COLOURS)
     assert len(set(MARKERS)) >= len(COLOURS) and len(set(DASHES)) >= len(COLOURS)
     assert figures.FORMATS[:2] == ("png", "svg")
+
+
+def test_limits_that_the_sizes_do_not_determine_are_not_drawn():
+    records = ring_records((4, 6, 8), (0.5, 1.0), rules=("wick",))
+    for record in records:
+        if record["spin"] == 0.5:
+            record.update(quantum_energy_error=3.0 * record["sites"], status="not_converged")
+    made, _ = figures_of(tree_of(records))
+    caption = next(caption for name, _, _, caption in made if name == "gap-sites")
+    assert "do not determine the limit of many sites for S = 1/2 (wick)." in caption

@@ -4,7 +4,7 @@ import itertools
 
 import numpy as np
 import pytest
-from limit_cases import SPIN_LIMITS, WINDOWS, chain_cases, computed, xxz_chain
+from limit_cases import SPIN_LIMITS, WINDOWS, chain_cases, computed, mixed_cases, xxz_chain
 from reference import reference
 from solvable import (
     chain_pairs,
@@ -18,7 +18,7 @@ from solvable import (
     xxz_ring,
 )
 
-from manybody.results.scaling_sites import extrapolate
+from manybody.results.scaling_sites import determined, extrapolate
 
 
 def limit(sites, energies, error=0.0, **geometry):
@@ -212,6 +212,18 @@ def test_even_and_odd_rings_are_not_mixed():
     judged(found, reference("B001").value, 1e-3)
 
 
+@pytest.mark.parametrize("known", [True, False])
+def test_few_even_and_odd_sizes_together_have_a_wide_error(known):
+    """No family of three: an alternating series must not be taken for a smooth one."""
+    ratios = []
+    for case in mixed_cases(((3, 4, 5), (3, 4, 5, 6), (3, 5, 6), (4, 5, 6, 7))):
+        geometry = {"boundary": case.boundary, "dimension": 1} if known else {}
+        sites = np.array(case.sites, float)
+        found = extrapolate(sites, case.energy, case.error, {}, families=case.families(), **geometry)
+        ratios.append(abs(found.values["energy"] - case.truth) / found.errors["energy"])
+    assert len(ratios) == 24 and np.max(ratios) < 2.5 and np.mean(np.array(ratios) < 1) > 0.68
+
+
 def test_errors_of_the_energies_are_propagated():
     sites = np.array([8.0, 16, 24, 32, 40])
     energies = np.array([xxz_ring(int(n)) for n in sites])
@@ -222,6 +234,11 @@ def test_errors_of_the_energies_are_propagated():
 def test_fewer_than_three_sizes_have_no_limit():
     assert extrapolate([4, 6], [-2.0, -2.8], [0, 0]) is None
     assert extrapolate([4, 6, 8], [-2.0, -2.8, np.nan], [0, 0, 0]) is None
+
+
+def test_a_limit_is_determined_if_its_error_leaves_half_of_it():
+    assert determined(-2.0, 1.0) and not determined(-2.0, 1.1) and not determined(0.0, 1e-9)
+    assert determined(0.0, 1e-9, scale=1.0) and not determined(1e-9, 1e-3, scale=1.0)
 
 
 def test_zero_energies_have_a_zero_limit():
