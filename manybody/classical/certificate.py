@@ -85,7 +85,7 @@ class Prover:
             self.bound, self.method = self.scaled.mean, "constant"
         elif self.scaled.is_quadratic:
             problem = problem_of(self.scaled, MinimizeSettings())
-            self.site_form = problem.form
+            self.problem, self.site_form = problem, problem.form
             self.bound, self.method = problem.form.constant + problem.floor * (1 + 1e-14), "unfrustrated"
         else:
             self.bound, self.method = -math.inf, "clusters"
@@ -125,8 +125,10 @@ class Prover:
         if not self.scaled.is_quadratic:
             self._by_clusters()
             return
-        plain = dual_bound(self.form, multipliers_at(self.form, configuration))
-        self._offer(plain, "multipliers")
+        if self.problem.waves is not None and self.problem.waves.exact:
+            self._offer(self.problem.waves.dual_bound(configuration), "multipliers")
+        else:
+            self._offer(dual_bound(self.form, multipliers_at(self.form, configuration)), "multipliers")
         if self._reached(configuration) or not relaxation:
             return
         if not self.relaxed and self.f.sites <= self.settings.relaxed_sites:

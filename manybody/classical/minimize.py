@@ -5,6 +5,7 @@ LONG_WAVES sites preconditioned (patches.py); functions of higher degree through
 Starts come in rounds, so that a proof of global minimality can end the search.
 """
 
+import functools
 import math
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass
@@ -15,10 +16,13 @@ from manybody.classical import polish, starts
 from manybody.classical.distinct import Comparison, coupled_sites
 from manybody.classical.site_form import SiteForm, site_form
 from manybody.classical.sphere_product import normalized, random_points
+from manybody.classical.translations import PlaneWaves, plane_waves
 from manybody.model.energy import EnergyFunction
 
+WAVES = 800  # sites from which plane waves are looked for: smaller coupling matrices are diagonalized in full
 LARGE = 300_000  # sites from which a frustrated function gets one start, from the lowest eigenvectors
-LONG_WAVES = 100_000  # sites from which Newton steps are preconditioned by rotations of patches
+LONG_WAVES = 60_000  # sites from which Newton steps are preconditioned by rotations of patches
+SLOW = 1e-6  # see MinimizeSettings.tolerance
 PATCH_PRODUCTS = 2_500_000_000  # sites x Hessian products that such a descent may spend
 
 
@@ -26,7 +30,9 @@ PATCH_PRODUCTS = 2_500_000_000  # sites x Hessian products that such a descent m
 class MinimizeSettings:
     """starts: how many starting configurations; seed: of the random ones, equal seeds give equal results.
 
-    tolerance: wanted largest tangential gradient at a site, relative to the strongest sum of couplings at a site.
+    tolerance: wanted largest tangential gradient at a site, relative to the strongest sum of couplings at a site. With
+    more than LONG_WAVES sites a descent may also end at SLOW, once the energy no longer falls beyond rounding:
+    some modes at the corners of open lattices are so soft that the rest would take longer than all before.
     max_site_starts: at most this many sites x starts are spent (but at least two starts, one beyond LARGE): on 10^6
     sites fewer starts than asked for are made, and `starts_used` says how many. sweeps: alignment sweeps of a start
     (quasi-Newton steps: five times as many), newton_steps: polishing steps, at most.
@@ -60,8 +66,8 @@ class ClassicalResult:
     """energy, configuration (N, 3): the lowest minimum found. minima: all distinct ones, lowest first.
 
     gradient_norm: largest tangential gradient at a site over the strongest sum of couplings at a site, at
-    `configuration`. converged: gradient_norm reached the tolerance. proven: a proof of global minimality ended the
-    search.
+    `configuration`. converged: the descent ended as MinimizeSettings.tolerance says. proven: a proof of global
+    minimality ended the search.
     """
 
     energy: float
@@ -121,7 +127,7 @@ def minimize(
         configuration=minima[0].configuration,
         minima=minima,
         gradient_norm=residual,
-        converged=residual <= settings.tolerance,
+        converged=residual <= problem.tolerance,
         starts_used=used,
         proven=proven,
     )
@@ -134,6 +140,7 @@ class QuadraticProblem:
         self.form = form
         self.settings = settings
         self.strength = self.form.strength()
+        self.tolerance = max(settings.tolerance, SLOW if form.sites > LONG_WAVES else 0.0)
         self.floor = starts.unfrustrated_bound(self.form)
         self.field = form.field if len(form.field) else np.zeros((form.sites, 3))
         shifted = form.diagonal if len(form.diagonal) else np.zeros((0 if form.isotropic else form.sites, 3, 3))
@@ -141,10 +148,22 @@ class QuadraticProblem:
             shifted = shifted - np.linalg.eigvalsh(shifted)[:, -1, None, None] * np.eye(3)
         self.shifted = shifted
 
+    @functools.cached_property
+    def waves(self) -> PlaneWaves | None:
+        """The plane waves of a large form that translations map onto itself, perhaps but for open boundaries."""
+        return plane_waves(self.form) if self.form.sites > WAVES else None
+
+    @functools.cached_property
+    def wave_floor(self) -> float:
+        """A lower bound of f - constant from the lowest plane wave."""
+        return -math.inf if self.waves is None else self.waves.unshifted_bound()
+
     def is_lowest(self, energy: float) -> bool:
-        """Whether the energy (constant of the form included) reaches the bound of an unfrustrated function."""
-        bound = self.floor + self.form.constant
-        return energy <= bound + 1e-13 * abs(self.floor)
+        """Whether the energy (constant of the form included) reaches the bound of an unfrustrated function or that of
+        the lowest plane wave.
+        """
+        energy -= self.form.constant
+        return energy <= self.floor + 1e-13 * abs(self.floor) or energy <= self.wave_floor + 1e-12 * abs(self.floor)
 
     def value(self, x: np.ndarray) -> float:
         """The function at one configuration (N, 3)."""
@@ -173,8 +192,8 @@ class QuadraticProblem:
                 from manybody.classical import patches
 
                 energy, gradients[k], _ = patches.newton(
-                    x[k], (*arrays, form.diagonal), self.field, goal, strength, settings.newton_steps,
-                    PATCH_PRODUCTS // form.sites,
+                    x[k], (*arrays, form.diagonal), self.shifted, self.field, goal, SLOW * strength, strength,
+                    settings.newton_steps, PATCH_PRODUCTS // form.sites,
                 )  # fmt: skip
             else:
                 energy, gradients[k], _ = compiled.newton(
@@ -206,6 +225,7 @@ class GeneralProblem:
             for slot, rank in enumerate(group.ranks):
                 strength += np.bincount(group.sites[:, slot], rank * norm, f.sites)
         self.strength = float(strength.max())
+        self.tolerance, self.waves = settings.tolerance, None
         quadratic = EnergyFunction(f.sites, 0.0, [g for g in f.groups if any(g.ranks) and sum(g.ranks) <= 2])
         self.form = site_form(*quadratic.quadratic_form(), tolerance=1e-15)
 
@@ -231,11 +251,11 @@ class GeneralProblem:
 
 
 def _rounds(problem, settings: MinimizeSettings, extra: np.ndarray | None) -> Iterator[np.ndarray]:
-    """Batches of starts: those handed in, one placed along the bonds, then growing mixtures of eigenvector and random
-    starts.
+    """Batches of starts: those handed in, one placed along the bonds or made of the lowest plane waves, then growing
+    mixtures of eigenvector and random starts.
     """
     form = problem.form
-    generator, lowest = np.random.default_rng(settings.seed), starts.LowestModes(form)
+    generator = np.random.default_rng(settings.seed)
     left = min(settings.starts, max(2, settings.max_site_starts // form.sites))
     if extra is not None and len(extra):
         extra = np.asarray(extra, dtype=float)
@@ -243,11 +263,13 @@ def _rounds(problem, settings: MinimizeSettings, extra: np.ndarray | None) -> It
             raise ValueError(f"extra_starts must have shape (r, {form.sites}, 3), got {extra.shape}")
         yield normalized(extra)
     placed = starts.placed_start(form, generator)
-    if form.sites <= LARGE or problem.is_lowest(problem.value(placed)):
-        yield placed[None]
-        left -= 1
-    else:
+    exact = problem.is_lowest(problem.value(placed))
+    lowest = starts.LowestModes(form, None if exact else problem.waves)
+    if not exact and form.sites > LARGE:
         left = 1  # frustrated: the placed state only is a poor start, and one good start takes minutes
+    if exact or form.sites <= LARGE or problem.waves is not None:
+        yield placed[None] if exact or problem.waves is None else lowest.starts(generator, 1)
+        left -= 1
     # half eigenvector starts while they are few, then mostly random ones: these reach minima that the matrix alone does
     # not know
     size, of_modes = 6, 3

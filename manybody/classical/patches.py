@@ -12,11 +12,14 @@ import scipy.sparse as sp
 from numba import njit
 from scipy.sparse.linalg import splu
 
-from manybody.classical.vector_sweeps import gradient, hessian_product, retract
+from manybody.classical.surfaces import Surface
+from manybody.classical.vector_sweeps import descend, gradient, hessian_product, retract
 
-BALL = 160  # sites around the centre of a patch that are no centres themselves
+BALL = 400  # sites around the centre of a patch that are no centres themselves
 MOST_PRODUCTS = 400  # of one Newton step
 REFRESH = 20  # Hessian products that take as long as a new preconditioner
+DAMPING = 0.1  # times the largest gradient: away from a minimum even common rotations have some negative curvature
+SWEEPS = 3  # of alignment after every step: they remove what a step along soft modes leaves in the stiff ones
 
 
 @njit(cache=True)
@@ -107,12 +110,15 @@ def _torques(x, label, v, out):
 
 @njit(cache=True)
 def _turned(x, label, turns, v, single, out):
-    """single_i v_i + turn x n_i"""
+    """single_i v_i + turn x n_i; returns its product with v."""
+    total = 0.0
     for i in range(len(x)):
         a = label[i]
         out[i, 0] = single[i] * v[i, 0] + turns[a, 1] * x[i, 2] - turns[a, 2] * x[i, 1]
         out[i, 1] = single[i] * v[i, 1] + turns[a, 2] * x[i, 0] - turns[a, 0] * x[i, 2]
         out[i, 2] = single[i] * v[i, 2] + turns[a, 0] * x[i, 1] - turns[a, 1] * x[i, 0]
+        total += out[i, 0] * v[i, 0] + out[i, 1] * v[i, 1] + out[i, 2] * v[i, 2]
+    return total
 
 
 def _positive_factors(matrix: sp.csc_array):
@@ -138,8 +144,10 @@ class Patches:
         pattern.sort_indices()
         self.rows, self.columns = pattern.indptr, pattern.indices
 
-    def preconditioner(self, x: np.ndarray, multipliers: np.ndarray, scale: float, stiffness: float = 1e-9):
-        """apply(v (N, 3), out (N, 3)), symmetric and positive."""
+    def preconditioner(self, x, multipliers, scale: float, stiffness: float = 1e-9, surface: Surface | None = None):
+        """apply(v (N, 3), out (N, 3)) -> v.out, symmetric and positive; `stiffness` times the scale is added to the
+        Hessian.
+        """
         data = np.zeros((len(self.columns), 3, 3))
         _restricted(x, self.label, *self.arrays, multipliers, self.rows, self.columns, data)
         size = 3 * self.count
@@ -156,9 +164,17 @@ class Patches:
         # a site alone feels the stiffness -multiplier
         single = 1.0 / np.maximum(-multipliers, 0.05 * scale)
 
+        add = None
+        if surface is not None and surface.size:
+            add = surface.solver(x, multipliers, stiffness * scale, _positive_factors)
+
         def apply(v, out):
             _torques(x, self.label, v, torques)
-            _turned(x, self.label, factors.solve(torques.reshape(-1)).reshape(-1, 3), v, single, out)
+            total = _turned(x, self.label, factors.solve(torques.reshape(-1)).reshape(-1, 3), v, single, out)
+            if add is not None:
+                add(v, out)
+                total = float(np.vdot(v, out))
+            return total
 
         return apply
 
@@ -170,9 +186,8 @@ def direction(x, g, multipliers, arrays, apply, goal, most, scale, d, hp):
     d[:] = 0.0
     r = -g
     z = np.empty_like(x)
-    apply(r, z)
+    rz = apply(r, z)
     p = z.copy()
-    rz = float(np.vdot(r, z))
     wanted = goal * float(np.vdot(g, g))
     for spent in range(1, most + 1):
         curvature = hessian_product(x, p, *arrays, multipliers, hp)
@@ -180,59 +195,65 @@ def direction(x, g, multipliers, arrays, apply, goal, most, scale, d, hp):
             if spent == 1:
                 d += p * (0.5 / np.abs(p).max())
             return spent, True
-        alpha = rz / curvature
-        _add(d, alpha, p)
-        _add(r, -alpha, hp)
-        if float(np.vdot(r, r)) <= wanted:
+        if _advance(d, r, rz / curvature, p, hp) <= wanted:
             return spent, False
-        apply(r, z)
-        last, rz = rz, float(np.vdot(r, z))
-        _scale_add(p, rz / last, z)
+        last, rz = rz, apply(r, z)
+        _turn(p, rz / last, z)
     return most, False
 
 
-@njit(cache=True)
-def _add(to, factor, v):
-    for i in range(len(to)):
+@njit(cache=True, fastmath={"contract", "reassoc"})
+def _advance(d, r, alpha, p, hp):
+    """d + alpha p and r - alpha hp in place; returns |r|^2."""
+    total = 0.0
+    for i in range(len(p)):
         for a in range(3):
-            to[i, a] += factor * v[i, a]
+            d[i, a] += alpha * p[i, a]
+            r[i, a] -= alpha * hp[i, a]
+            total += r[i, a] * r[i, a]
+    return total
 
 
 @njit(cache=True)
-def _scale_add(p, factor, z):
+def _turn(p, factor, z):
     for i in range(len(p)):
         for a in range(3):
             p[i, a] = z[i, a] + factor * p[i, a]
 
 
-def newton(x, arrays, field, tolerance, scale, outer, budget):
-    """Truncated Newton steps with the patches' preconditioner, in place, until the largest |gradient_i| is at most
-    `tolerance`, or `budget` products are spent; arguments and result (f - constant, largest |gradient_i|, products) as
-    those of vector_sweeps.newton.
+def newton(x, arrays, shifted, field, tolerance, slow, scale, outer, budget):
+    """Damped truncated Newton steps with the preconditioner of patches and surfaces, in place, until the largest
+    |gradient_i| is at most `tolerance`, or `budget` products are spent, or it is at most `slow`, shrinks by less than
+    ten a step, and the energy has stopped falling; other arguments and the result (f - constant, largest |gradient_i|,
+    products) as those of vector_sweeps.newton, `shifted` as that of vector_sweeps.descend.
     """
-    patch = Patches(*arrays)
-    g, d, work, trial = (np.empty_like(x) for _ in range(4))
+    patch, surface = Patches(*arrays), Surface(*arrays)
+    g, d, work = (np.empty_like(x) for _ in range(3))
     multipliers = np.empty(len(x))
     energy, worst = gradient(x, *arrays, field, g, multipliers)
     products = 0
     for _ in range(outer):
         if worst <= tolerance or products >= budget:
             break
-        apply = patch.preconditioner(x, multipliers, scale, max(1e-9, 0.1 * worst / scale))
-        goal = max(1e-8, min(0.01, worst / scale))
-        products += direction(x, g, multipliers, arrays, apply, goal, MOST_PRODUCTS, scale, d, work)[0]
+        damping = max(DAMPING * worst, 1e-12 * scale)
+        apply = patch.preconditioner(x, multipliers, scale, damping / scale, surface)
+        goal = max(1e-8, min(0.1, 10 * worst / scale))
+        products += direction(x, g, multipliers - damping, arrays, apply, goal, MOST_PRODUCTS, scale, d, work)[0]
         products += REFRESH  # what the factorization costs, roughly
         slack = 1e-13 * (abs(energy) + scale)
-        step = 1.0
+        step, trial = 1.0, work
         for _ in range(20):
             retract(x, step, d, trial)
-            new_energy, new_worst = gradient(trial, *arrays, field, work, multipliers)
+            descend(trial, *arrays[:4], shifted, field, 1.0, SWEEPS, 0.0)
+            new_energy, new_worst = gradient(trial, *arrays, field, g, multipliers)
             if new_energy < energy - slack or (new_energy <= energy + slack and new_worst < 3.0 * worst):
                 break
             step *= 0.35
         else:
             break  # rounding decides the differences by now
-        energy, worst = new_energy, new_worst
         x[:] = trial
-        g[:] = work
+        done = energy - new_energy <= 10 * slack and 0.1 * worst < new_worst <= slow
+        energy, worst = new_energy, new_worst
+        if done:
+            break
     return energy, worst, products

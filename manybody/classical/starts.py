@@ -12,6 +12,7 @@ from scipy.sparse.linalg import LinearOperator, eigsh
 
 from manybody.classical.site_form import SiteForm
 from manybody.classical.sphere_product import normalized
+from manybody.classical.translations import PlaneWaves
 
 FILTER_ROUNDS = 8
 MANY = 100_000  # sites beyond which the filter is set up by plain Lanczos steps, and half the rounds must do
@@ -25,19 +26,23 @@ class LowestModes:
     Small matrices: a random vector and its normalization are projected in turn on the lowest eigenspace, which finds a
     configuration of unit vectors in that space where there is one. Large ones: the projection is a Chebyshev polynomial
     of the matrix that keeps the lowest part of the spectrum; the normalization in between sorts out a single domain
-    where the filter alone leaves several. A little noise is added, so that no start sits on a saddle point.
+    where the filter alone leaves several; where there are plane waves, the lowest of them are combined instead. A
+    little noise is added, so that no start sits on a saddle point.
     """
 
-    def __init__(self, form: SiteForm):
-        self.form = form
+    def __init__(self, form: SiteForm, waves: PlaneWaves | None = None):
+        self.form, self.waves = form, waves
         self.small = form.sites * (1 if form.isotropic else 3) <= DENSE_EIGENVECTORS
 
     def starts(self, generator: np.random.Generator, count: int) -> np.ndarray:
         """(count, N, 3)"""
-        draw = self._projected if self.small else self._filtered
+        draw = self._projected if self.small else self._filtered if self.waves is None else self._waving
         # every third start takes a wider band: with fields or on-site terms the lowest eigenspace alone says little
         x = np.array([draw(generator, wide=k % 3 == 2) for k in range(count)]).reshape(count, self.form.sites, 3)
         return normalized(x + 0.03 * generator.standard_normal(x.shape))
+
+    def _waving(self, generator: np.random.Generator, wide: bool) -> np.ndarray:
+        return self._filtered(generator, wide) if wide else self.waves.start(generator)
 
     @functools.cached_property
     def _eigenvectors(self) -> tuple[np.ndarray, np.ndarray]:

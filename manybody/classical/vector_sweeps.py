@@ -232,8 +232,35 @@ def gradient(x, indptr, neighbours, weights, blocks, diagonal, field, g, multipl
 @njit(cache=True, fastmath=FAST)
 def hessian_product(x, v, indptr, neighbours, weights, blocks, diagonal, multipliers, out):
     """Riemannian Hessian times the tangent vector v into out; returns v.Hv."""
-    product(v, indptr, neighbours, weights, blocks, diagonal, out)
     total = 0.0
+    if len(blocks) == 0:  # one pass: memory is what takes time on large systems
+        for i in range(len(x)):
+            s0 = 0.0
+            s1 = 0.0
+            s2 = 0.0
+            for k in range(indptr[i], indptr[i + 1]):
+                j = np.uint64(neighbours[k])
+                w = weights[k]
+                s0 += w * v[j, 0]
+                s1 += w * v[j, 1]
+                s2 += w * v[j, 2]
+            x0 = x[i, 0]
+            x1 = x[i, 1]
+            x2 = x[i, 2]
+            v0 = v[i, 0]
+            v1 = v[i, 1]
+            v2 = v[i, 2]
+            along = s0 * x0 + s1 * x1 + s2 * x2
+            m = multipliers[i]
+            g0 = s0 - along * x0 - m * v0
+            g1 = s1 - along * x1 - m * v1
+            g2 = s2 - along * x2 - m * v2
+            out[i, 0] = g0
+            out[i, 1] = g1
+            out[i, 2] = g2
+            total += g0 * v0 + g1 * v1 + g2 * v2
+        return total
+    product(v, indptr, neighbours, weights, blocks, diagonal, out)
     for i in range(len(x)):
         x0 = x[i, 0]
         x1 = x[i, 1]

@@ -4,7 +4,7 @@ import numpy as np
 import pytest
 
 from manybody.classical import patches, vector_sweeps
-from manybody.classical.minimize import MinimizeSettings, minimize
+from manybody.classical.minimize import MinimizeSettings, QuadraticProblem, minimize
 from manybody.classical.site_form import site_form
 from manybody.classical.sphere_product import normalized, random_points
 from manybody.model import lattice as lattices
@@ -78,7 +78,9 @@ def test_newton_reaches_the_minimum_of_plain_newton_steps(kind):
     lowest = minimize(f, MinimizeSettings(starts=6))
     noise = np.random.default_rng(5).standard_normal((f.sites, 3))
     x = normalized(lowest.configuration + 0.1 * noise)
-    energy, worst, products = patches.newton(x, arrays, field, 1e-10 * form.strength(), form.strength(), 50, 5000)
+    shifted = QuadraticProblem(form, MinimizeSettings()).shifted
+    size = form.strength()
+    energy, worst, products = patches.newton(x, arrays, shifted, field, 1e-10 * size, 0.0, size, 50, 5000)
     assert worst <= 1e-10 * form.strength()
     assert 0 < products < 5000
     assert energy + form.constant == pytest.approx(lowest.energy, rel=1e-12)
