@@ -160,9 +160,8 @@ def _forms(edge, d, power, x, mixed):
             forms.append(Form(edge, d, "growing", power, span, -1, weight=RARE))
     if d > 1:
         forms.append(Form(edge, d, "irregular", power, SHORT_SPAN, steady=IRREGULAR))
-    if mixed or d > 1:
-        # sizes of different commensurability differ by as much as the leading term itself
-        forms.append(Form(edge, d, "irregular", power, SHORT_SPAN))
+    # sizes of different commensurability differ by as much as the leading term itself; even ones alone rarely do
+    forms.append(Form(edge, d, "irregular", power, SHORT_SPAN, weight=1.0 if mixed or d > 1 else RARE))
     for length in np.geomspace(0.15 * np.min(np.diff(np.unique(x))), FAR * (x[-1] - x[0]), LENGTHS):
         forms += [Form(edge, d, "exponential", p, span, length=float(length)) for p in (1, 2) for span in SPANS[1:]]
     return forms

