@@ -94,14 +94,12 @@ def _open_block(form: SiteForm, s: int, blocks: list[int]) -> int:
         degree = degree[fine]
         place = np.repeat(indptr[rows[fine]] - np.cumsum(degree) + degree, degree) + np.arange(degree.sum())
         there = place + np.repeat(indptr[rows[fine] + s] - indptr[rows[fine]], degree)
-        change = np.abs(couplings[place] - couplings[there]).reshape(len(place), -1).max(axis=1, initial=0.0)
-        unlike = change > SAME * np.abs(couplings[there]).reshape(len(place), -1).max(axis=1, initial=0.0)
+        unlike = _largest(couplings[place] - couplings[there]) > SAME * _largest(couplings[there])
         unlike |= form.neighbours[place].astype(np.int64) + s != form.neighbours[there]
         wrong[fine[np.repeat(np.arange(len(fine)), degree)[unlike]]] = True
         for part in (form.diagonal, form.field):
             if len(part):
-                change = np.abs(part[rows] - part[rows + s]).reshape(len(rows), -1).max(axis=1)
-                wrong |= change > SAME * np.abs(part[rows]).max(initial=0.0)
+                wrong |= _largest(part[rows] - part[rows + s]) > SAME * np.abs(part[rows]).max(initial=0.0)
         return wrong
 
     if count < 1 or differs(np.random.default_rng(0).integers(count, size=200)).mean() > 0.5:
@@ -113,6 +111,11 @@ def _open_block(form: SiteForm, s: int, blocks: list[int]) -> int:
         if block >= 4 * s and not ((place >= block // 4) & (place + s < block - block // 4)).any():
             return block
     return 0
+
+
+def _largest(values: np.ndarray) -> np.ndarray:
+    """Largest modulus of every entry along the first axis."""
+    return np.abs(values).max(axis=tuple(range(1, values.ndim)))
 
 
 class PlaneWaves:
@@ -136,7 +139,7 @@ class PlaneWaves:
         order = np.argsort(self.entries)
         self.entries, self.couplings = self.entries[order], couplings[order]
         self.degree = np.diff(form.indptr)[self.first]
-        size = np.abs(self.couplings).reshape(len(order), -1).max(axis=1, initial=0.0)
+        size = _largest(self.couplings)
         self.norm = self.rows * float(np.bincount(self._split(self.entries)[0], size, self.cell).max(initial=0.0))
         self.diagonal = form.diagonal[self.first] if len(form.diagonal) else np.zeros((self.cell, 3, 3))
         self.norm += 3 * float(np.abs(self.diagonal).max())
@@ -174,6 +177,8 @@ class PlaneWaves:
 
     def _deviation(self) -> float:
         form, worst = self.form, 0.0
+        if not len(self.entries):
+            return math.inf
         for low in range(0, form.sites, 2**18):
             sites = np.arange(low, min(low + 2**18, form.sites))
             cell = self._digits(sites)[0]
