@@ -4,8 +4,8 @@ Series with known limits: tests/limit_cases.py. For every group it prints how ma
 stated standard errors, the median of stated error / deviation (1.5 for normally distributed deviations), and the median
 error. `--unknown` withholds boundary and dimension, `--list` prints all misses beyond two errors. `--compute`
 computes energies of open chains, each bond S_i.S_j with anisotropy on z, and appends them to
-data/open_chain_energies.csv (all rows: spin 1 to 64, 3/2 to 48, 2 to 36 sites, spin 1/2 with anisotropy 1.5 to 64 and 2
-to 48 sites; half an hour).
+data/open_chain_energies.csv (all rows: spin 1 to 64, 3/2 to 48, 2 to 48 sites, spin 1/2 with anisotropy 1.5 to 64 and 2
+to 46 sites; about an hour).
 
     python tests/benchmarks/limits.py [--unknown] [--list]
     python tests/benchmarks/limits.py --compute 3/2 4,6,8,10
