@@ -2,16 +2,17 @@
 bonds.
 """
 
+import contextlib
 import functools
 
 import numpy as np
 import scipy.sparse as sp
 from scipy.linalg import eigvalsh_tridiagonal
 from scipy.sparse.csgraph import breadth_first_order, connected_components, minimum_spanning_tree
-from scipy.sparse.linalg import LinearOperator, eigsh
+from scipy.sparse.linalg import ArpackError, LinearOperator, eigsh
 
 from manybody.classical.site_form import SiteForm
-from manybody.classical.sphere_product import normalized
+from manybody.classical.sphere_product import normalized, random_points
 from manybody.classical.translations import PlaneWaves
 
 FILTER_ROUNDS = 8
@@ -36,6 +37,8 @@ class LowestModes:
 
     def starts(self, generator: np.random.Generator, count: int) -> np.ndarray:
         """(count, N, 3)"""
+        if not len(self.form.neighbours) and not len(self.form.diagonal):
+            return random_points(generator, self.form.sites, (count,))
         draw = self._projected if self.small else self._filtered if self.waves is None else self._waving
         # every third start takes a wider band: with fields or on-site terms the lowest eigenspace alone says little
         x = np.array([draw(generator, wide=k % 3 == 2) for k in range(count)]).reshape(count, self.form.sites, 3)
@@ -77,14 +80,14 @@ class LowestModes:
         # everything within (6 / degree)^2 of the lowest eigenvalue, relative to the width, is amplified by up to
         # exp(12); the filter is only as sharp as the lowest eigenvalue is known
         sharpness = (6.0 / degree) ** 2
-        if form.sites > MANY:
-            low, high = _spectrum_ends(form.matrix().dot if form.isotropic else apply, first, form, degree)
-            width = max(high - low, 1e-300)
-            return degree, low + width * sharpness, high + 0.02 * width
-        low, high = (
-            float(eigsh(operator, k=1, which=end, tol=tol, v0=first, ncv=40, return_eigenvectors=False)[0])
-            for end, tol in {"SA": 0.2 * sharpness, "LA": 1e-2}.items()
-        )
+        ends = None
+        if form.sites <= MANY:
+            with contextlib.suppress(ArpackError):  # it breaks down where few sites are coupled
+                ends = [
+                    float(eigsh(operator, k=1, which=end, tol=tol, v0=first, ncv=40, return_eigenvectors=False)[0])
+                    for end, tol in {"SA": 0.2 * sharpness, "LA": 1e-2}.items()
+                ]
+        low, high = ends or _spectrum_ends(form.matrix().dot if form.isotropic else apply, first, form, degree)
         width = max(high - low, 1e-300)
         return degree, low + width * sharpness, high + 0.02 * width
 

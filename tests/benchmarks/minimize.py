@@ -198,7 +198,8 @@ def large_case(name):
     seconds = time.perf_counter() - began
     result, peak = found.result, resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 2**20
     print(
-        f"{name}: {seconds:.0f} s ({time.process_time():.0f} s of processor, {built:.0f} s to build), peak {peak:.2f} GiB, energy per site "
+        f"{name}: {seconds:.0f} s ({time.process_time():.0f} s of processor, {built:.0f} s to build), "
+        f"peak {peak:.2f} GiB, energy per site "
         f"{result.energy / f.sites:.10f}, spiral {reference:.10f}, relative gradient {result.gradient_norm:.0e}, "
         f"converged {result.converged}, certified {found.certificate.certified}, {result.starts_used} starts",
         flush=True,

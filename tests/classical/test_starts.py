@@ -104,3 +104,13 @@ def test_clusters_turn_on_their_own_and_idle_sites_do_not_count():
     other[2:4] = n[2:4] @ Rotation.from_rotvec([1.0, 0.3, 0]).as_matrix().T
     other[4] = -n[4]
     assert Comparison(f).distance(n, other[None])[0] < 1e-6
+
+
+@pytest.mark.parametrize("pairs", [[], [[7, 300], [300, 301], [7, 301]]])
+def test_many_sites_with_few_or_no_couplings(pairs):
+    """More sites than the matrix is diagonalized for, where Lanczos steps find little or nothing to work on."""
+    bonds = np.random.default_rng(0).standard_normal((len(pairs), 3, 3))
+    form = form_of(exchange(900, np.array(pairs, dtype=int).reshape(-1, 2), bonds))
+    found = starts.LowestModes(form).starts(np.random.default_rng(0), 2)
+    assert found.shape == (2, 900, 3)
+    assert np.allclose(np.linalg.norm(found, axis=-1), 1.0)
