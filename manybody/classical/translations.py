@@ -314,17 +314,18 @@ class PlaneWaves:
         if not free.any():
             return wavevector
 
-        def level(k):
-            k = np.where(free, np.concatenate([k, np.zeros(len(free) - len(k))])[np.cumsum(free) - 1], wavevector)
-            return float(np.linalg.eigvalsh(self.matrices(k[None]))[0, 0])
+        def placed(numbers):
+            result = wavevector.astype(float)
+            result[free] = numbers
+            return result
+
+        def level(numbers):
+            return float(np.linalg.eigvalsh(self.matrices(placed(numbers)[None]))[0, 0])
 
         start = wavevector[free].astype(float)
         simplex = np.concatenate([start[None], start + 0.5 * np.eye(len(start))])
         options = {"initial_simplex": simplex, "xatol": 1e-4, "fatol": 0.0, "maxiter": 400}
-        found = minimize(level, start, method="Nelder-Mead", options=options)
-        result = wavevector.astype(float)
-        result[free] = found.x
-        return result
+        return placed(minimize(level, start, method="Nelder-Mead", options=options).x)
 
     @functools.cached_property
     def _levels(self) -> np.ndarray:
