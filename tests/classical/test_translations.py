@@ -147,14 +147,14 @@ def test_triangular_lattices_reach_the_best_spiral(name):
 
 @pytest.mark.slow
 @pytest.mark.parametrize(
-    "case", [(300, True), (301, True), (300, True, (1.0, 0.6, 0.6), 0.7), (300, False, (1.0, 0.6, 0.6), 0.7)]
+    "case", [(300, True), (301, True), (300, True, (1.0, 0.6, 0.6), 0.7), (250, False, (1.0, 0.6, 0.6), 0.7)]
 )
 def test_larger_triangular_lattices(case):
     """With the Newton steps for long waves. Beyond 60 000 sites open lattices are not proven."""
     f = triangular(*case)
     found = find_ground_state(f)
     assert found.result.converged
-    assert found.result.energy <= spiral(*case) + 1e-8
+    assert found.result.energy <= spiral(*case) + 1e-12 * abs(spiral(*case))
     assert found.certificate.certified == case[1]
     assert certify(f, found.result.configuration).bound <= found.result.energy
 
