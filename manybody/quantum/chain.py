@@ -77,6 +77,11 @@ class Chain:
     def bond_dimension(self) -> int:
         return max(bond.dimension for bond in self.bonds)
 
+    def step_bytes(self, pairs: bool) -> int:
+        """About the memory of the largest tensor that a step works on."""
+        largest = max(tensor.nbytes for tensor in self.tensors)
+        return largest * max(local.size for local in self.local) if pairs else largest
+
     def mirror(self) -> None:
         self.local.reverse()
         self.operators, self.other_operators = self.other_operators, self.operators
@@ -127,7 +132,9 @@ class Chain:
         return energy, tensor
 
     def advance(self, site: int) -> None:
-        """Left environment of the next bond from the one of this bond and the (orthonormal) tensor of the site."""
+        """Left environment of the next bond from the one of this bond and the (orthonormal) tensor of the site; the
+        right one there is out of date from now on."""
+        self.right[site + 1] = None
         self.left[site + 1] = self._environment(
             self.operators[site],
             self.left[site],
@@ -150,6 +157,11 @@ class Chain:
         )
         self.scratch.enlarge(needed)
         return environment
+
+    def rest(self) -> None:
+        """Give the environments' memory back; `prepare` makes the chain fit for sweeps again."""
+        self.left[1:] = [None] * self.length
+        self.right[:-1] = [None] * self.length
 
     def prune(self, bond: int, charges: np.ndarray) -> None:
         """Drop the states of a bond, ahead of the centre, whose charge is not among `charges`: nothing on the left
@@ -181,8 +193,29 @@ class Chain:
         self.put(site, tensor)
         self.put(site + 1, following)
 
-    def prepare(self) -> None:
-        """Normalize, centre at site 0, all right environments: from any tensors in the present view."""
+    def cut(self, site: int, limit: int, allowed: float) -> float:
+        """Cut the bond after the centre (see split.choose) and move the centre there, normalized; the relative weight
+        discarded. Environments stay as they are."""
+        left, right = self.bonds[site], self.bonds[site + 1]
+        isometry, carry, kept, discarded = split.cut(
+            self.tensor(site), *left.pair, *right.pair, self.local[site], limit, allowed
+        )
+        self.pass_on(site, isometry, carry, kept)
+        if discarded > 0:
+            centre = self.tensor(site + 1)
+            self.put(site + 1, centre / np.linalg.norm(centre))
+        return discarded
+
+    def prepare(self, limit: int | None = None, allowed: float = 0.0) -> None:
+        """Normalize, centre at site 0, all right environments: from any tensors in the present view. With a limit all
+        bonds are cut first (see split.choose)."""
+        if limit is not None:
+            self.mirror()
+            for site in range(self.length - 1):
+                self.shift(site)
+            self.mirror()
+            for site in range(self.length - 1):
+                self.cut(site, limit, allowed)
         self.mirror()
         for site in range(self.length - 1):
             self.shift(site)

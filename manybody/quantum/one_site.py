@@ -1,8 +1,5 @@
 """One step of a one-site sweep: solve for one site, cut or only orthonormalize it, move the centre on."""
 
-import numpy as np
-
-from manybody.quantum import split
 from manybody.quantum.chain import Chain
 
 
@@ -17,13 +14,6 @@ def solve(chain: Chain, site: int, vectors: int, tolerance: float) -> float:
 
 def move(chain: Chain, site: int, limit: int, allowed: float) -> float:
     """Cut the bond after the centre (see split.choose) and move the centre there; the relative weight discarded."""
-    left, right = chain.bonds[site], chain.bonds[site + 1]
-    isometry, carry, kept, discarded = split.cut(
-        chain.tensor(site), *left.pair, *right.pair, chain.local[site], limit, allowed
-    )
-    chain.pass_on(site, isometry, carry, kept)
-    if discarded > 0:
-        centre = chain.tensor(site + 1)
-        chain.put(site + 1, centre / np.linalg.norm(centre))
+    discarded = chain.cut(site, limit, allowed)
     chain.advance(site)
     return discarded

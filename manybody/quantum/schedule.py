@@ -7,14 +7,14 @@ from dataclasses import dataclass, field
 
 import numpy as np
 
-from manybody.quantum import expansion, one_site, two_site, variance
+from manybody.quantum import expansion, memory, one_site, two_site, variance
 from manybody.quantum.chain import Chain
 from manybody.quantum.extrapolation import Stage, energy_error
 
 FIRST_ALLOWED = 1e-6
 LEAST_ALLOWED = 1e-15
 SWEEPS, MOST_SWEEPS = 8, 24
-CRAWL, MOST_VECTORS = 0.8, 40
+CRAWL = 0.8
 FRACTION = 0.3
 GROWTH, FIRST_BOND = 2, 64
 
@@ -127,13 +127,14 @@ class Run:
                 continue
             gains.append(energies[-2] - energies[-1])
             grows = self.chain.bond_dimension > 1.05 * self.before
+            most = memory.most_vectors(self.chain.step_bytes(self.limits.pairs), self.limits.vectors)
             crawls = gains[-1] > CRAWL * gains[-2] and not grows
             if gains[-1] < max(0.1 * (energies[0] - energies[-1]), 0.05 * self.limits.goal):
                 break
             if crawls:
-                if len(energies) >= SWEEPS and self.vectors >= MOST_VECTORS:
+                if len(energies) >= SWEEPS and self.vectors >= most:
                     break
-                self.vectors = min(2 * self.vectors, MOST_VECTORS)
+                self.vectors = min(2 * self.vectors, most)
         energy, spread = variance.measure(self.chain)
         self.narrow = bounded and self.ceiling < self.limits.largest
         self.bounded = bounded and not self.narrow

@@ -68,8 +68,9 @@ def _blocks(tensor, left: Bond, right: Bond, local) -> dict[tuple[int, int], np.
     return result
 
 
-def parity_part(chain: Chain, sign: float) -> Chain:
-    """psi + sign F psi, normalized, centre at site 0; bonds up to twice as large."""
+def parity_part(chain: Chain, sign: float, limit: int, allowed: float) -> Chain:
+    """psi + sign F psi, normalized, centre at site 0; bonds up to twice as large before they are cut (see
+    split.choose)."""
     bonds, tensors = flipped(chain)
     length = chain.length
     summed = [_union(a, b) if 0 < k < length else a for k, (a, b) in enumerate(zip(chain.bonds, bonds, strict=True))]
@@ -97,7 +98,7 @@ def parity_part(chain: Chain, sign: float) -> Chain:
         list(chain.local), list(chain.operators), summed, new, chain.total,
         reverse=chain.reverse, other_operators=list(chain.other_operators),
     )  # fmt: skip
-    joined.prepare()
+    joined.prepare(limit, allowed)
     return joined
 
 

@@ -23,10 +23,10 @@ STAGES = {"sector": "search for the sector", "run": "main run", "parity": "other
 MIXED = 1e-3
 """A state of S^z = 0 whose overlap with its turned-over self misses 1 by more than this is a mixture of both
 parities."""
+ROOM = 1.4
+"""A part of one parity may take so many times the states of the mixture."""
 NOTABLE = 0.05
 """A mixture is undone if that lowers the energy by this share of its error."""
-WIDE = 12
-"""From this many operator channels on one-site steps are cheaper than pairs."""
 
 
 def matrix_product_ground_state(
@@ -80,7 +80,6 @@ class _Solver:
         self.vectors = products_per_step(self.problem)
         norm = self.problem.norm
         largest = memory.largest_bond(self.problem, settings.memory, self.vectors)
-        pairs = int(self.problem.levels.max()) <= 3 and self.problem.width < WIDE
         scale = scale if scale > 0 else norm
         self.limits = Limits(
             goal=settings.accuracy * scale,
@@ -89,7 +88,7 @@ class _Solver:
             floor=1e-14 * (norm + abs(self.problem.constant)) + 1e-300,
             norm=max(norm, 1e-300),
             vectors=self.vectors,
-            pairs=pairs,
+            pairs=memory.pairs(self.problem),
         )
 
     def solve(self) -> GroundState:
@@ -227,6 +226,7 @@ class _Solver:
         other = self._taken_up("parity")
         if other is None:
             self._finish(run)
+            run.chain.rest()
             chain = spin_flip.other_parity(run.chain) if self._has_parity(run.chain) else None
             if chain is None:
                 return run
@@ -244,11 +244,20 @@ class _Solver:
             return False
         if abs(spin_flip.overlap(chain)) > 1 - MIXED:
             return False
-        parts = [spin_flip.parity_part(chain, sign) for sign in (1.0, -1.0)]
-        energies = [variance.at_centre(part)[0] for part in parts]
+        # What is cut here weighs little beside the error of the run, and its bonds hardly grow.
+        limit, allowed = int(ROOM * chain.bond_dimension) + 8, 0.01 * run.allowed
+        chain.rest()
+        parts, energies = [], []
+        for sign in (1.0, -1.0):
+            parts.append(spin_flip.parity_part(chain, sign, limit, allowed))
+            energies.append(variance.at_centre(parts[-1])[0])
+            parts[-1].rest()
         if min(energies) > run.energy - max(self.limits.floor, NOTABLE * run.error):
+            chain.prepare()
             return False
         run.chain = parts[int(np.argmin(energies))]
+        del chain, parts
+        run.chain.prepare()
         run.unmixings += 1
         run.repeat()
         return True
@@ -261,6 +270,7 @@ class _Solver:
             random /= np.linalg.norm(random, axis=1, keepdims=True)
             chain = start_chain(self.problem, self.problem.directions(random), run.chain.total)
             other = self._kept("guard", self._run(chain))
+        run.chain.rest()
         other.pursue(lambda: 2 * other.chain.bond_dimension <= run.chain.bond_dimension)
         return other
 

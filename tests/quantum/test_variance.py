@@ -133,7 +133,7 @@ def test_spin_flip_parts_against_the_dense_operation():
     turned = psi.reshape([3] * 6)[(slice(None, None, -1),) * 6].reshape(-1)
     assert abs(spin_flip.overlap(chain_) - np.vdot(psi, turned).real) < 1e-12
     for sign in (1.0, -1.0):
-        part = spin_flip.parity_part(chain_, sign)
+        part = spin_flip.parity_part(chain_, sign, 100, 0.0)
         ours = dense_state(problem, part)
         wanted = psi + sign * turned
         assert abs(abs(np.vdot(ours, wanted)) - np.linalg.norm(wanted)) < 1e-10
