@@ -98,22 +98,29 @@ def _exact(kind: _AsKind, memory: int, observables: bool) -> tuple[float, float]
 
 @functools.lru_cache(maxsize=4096)
 def _sweeps(kind: _AsKind, max_bond: int, memory: int) -> tuple[float, float]:
-    """(seconds, bytes) of matrix-product sweeps: bytes at the largest bond dimension allowed, seconds at the one that
-    the usual accuracy takes on gapless chains, growing with spin and with the width of the cluster.
+    """(seconds, bytes) of matrix-product sweeps: bytes at the largest bond dimension allowed, as the quantum branch
+    predicts them, seconds at the one that the usual accuracy takes on gapless chains, growing with spin and with the
+    width of the cluster.
 
     A conserved charge splits a bond into about `share` equal blocks; work falls with its square.
     """
+    from manybody.model.quantization import quantize
+    from manybody.quantum.result import QuantumSettings
+    from manybody.quantum.sweeps import predict
+
     point = kind.point
+    energy = point.cluster.build().energy
+    settings = QuantumSettings(max_bond=max_bond, memory=memory)
+    size = predict(quantize(energy, point.spin, point.rule), settings).bytes
     n, levels = point.cluster.sites, 2 * point.spin + 1
     bond = min(float(max_bond), 10 ** min(0.5 * point.log10_dimension, 15.0))
     cut = _bonds_cut(point.cluster)
     width, usual = 2 + 3 * cut, min(bond, 80 * (1 + point.spin) * cut)
-    conserved = len(point.cluster.build().energy.symmetry_axes()) > 0
+    conserved = len(energy.symmetry_axes()) > 0
     share = 2.0 * math.sqrt(point.spin + 0.5) if conserved else 1.0
     vectors = min(3 + point.spin, 12)
     half_sweep = 5e-4 * n + 4 * (vectors + 3) * n * levels * width * usual**3 / share**2 / 1.5e10
-    size = 8 * bond**2 / share * (n * (width + levels) + 1.5 * levels * (2 * width + vectors + 6))
-    return HALF_SWEEPS * half_sweep, LIBRARIES + min(size, float(memory))
+    return HALF_SWEEPS * half_sweep, LIBRARIES + size
 
 
 def _bonds_cut(cluster: Cluster) -> float:
