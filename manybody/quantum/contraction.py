@@ -71,7 +71,7 @@ def plan(left_bond, right_bond, local, operator, end, skip, bra_bond):
     for i in range(left.size):
         begun = count
         for entry in range(weights.size):
-            a, b, out, into = entries[entry]
+            a, b, out, into = entries[entry, 0], entries[entry, 1], entries[entry, 2], entries[entry, 3]
             j = target[i, into]
             if j < 0 or b == skip:
                 continue
@@ -97,7 +97,10 @@ def plan(left_bond, right_bond, local, operator, end, skip, bra_bond):
                 if not written[b, k, out]:
                     flags += ASSIGN
                     written[b, k, out] = True
-            moves[count] = (flags, source, width[i], goal, goal_stride, left_dims[k], right_dims[j])
+            # One by one: assigning a tuple to a row costs several times as much.
+            move = moves[count]
+            move[0], move[1], move[2] = flags, source, width[i]
+            move[3], move[4], move[5], move[6] = goal, goal_stride, left_dims[k], right_dims[j]
             factors[count] = weights[entry]
             count += 1
         first[i] = (l_height[i], left_dims[i], width[i], l_start[i], a_start[i], t_size, begun, count)
@@ -113,7 +116,8 @@ def plan(left_bond, right_bond, local, operator, end, skip, bra_bond):
                 if j >= 0 and u_column[b, j] >= 0 and not written[b, k, s]:
                     columns = right_dims[find(ket_table, ket_low, bra[j] - delta_right[b])]
                     goal = groups[j, 2] + u_row[k, s] * groups[j, 1] + u_column[b, j]
-                    holes[used] = (goal, groups[j, 1], left_dims[k], columns)
+                    hole = holes[used]
+                    hole[0], hole[1], hole[2], hole[3] = goal, groups[j, 1], left_dims[k], columns
                     used += 1
     holes = holes[:used]
 
@@ -129,7 +133,9 @@ def plan(left_bond, right_bond, local, operator, end, skip, bra_bond):
             j = find(bra_table, bra_low, left[i] + local[s])
             if j >= 0 and target[i, s] >= 0:
                 source = groups[j, 3] + u_row[i, s] * bra_dims[j]
-                back[used] = (source, bra_dims[j], a_start[i] + column[i, s], width[i], left_dims[i], bra_dims[j])
+                piece = back[used]
+                piece[0], piece[1], piece[2] = source, bra_dims[j], a_start[i] + column[i, s]
+                piece[3], piece[4], piece[5] = width[i], left_dims[i], bra_dims[j]
                 used += 1
     sizes = np.array([a_size, t_size, u_size, o_size, t_largest])
     return first, moves[:count], factors[:count], second, back[:used], groups, sizes, holes

@@ -115,8 +115,7 @@ def directions(near, far, own, groups, turned_groups, dims, probes, noise, wante
             scale += np.sum((z * np.conj(z)).real)
             if d > 0:
                 b = own[o_place : o_place + r * d].reshape(r, d)
-                for _ in range(2):
-                    z -= np.dot(b, np.dot(conjugate(b).T, z))
+                z -= np.dot(b, np.dot(conjugate(b).T, z))
             gram = np.dot(conjugate(z).T, z)
             values, states = np.linalg.eigh(gram)
             z[:] = np.dot(z, np.ascontiguousarray(states))

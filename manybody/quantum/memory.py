@@ -65,9 +65,13 @@ def estimate(problem: Problem, bond: int, vectors: int) -> Estimate:
     working = float((steps * channels).max()) + largest * (6 + most_vectors(largest, vectors))
     if problem.conserved:
         working = max(working, 4 * float(sites.sum()))
-    flops = 4 * float(
-        (levels * np.sqrt(squares[:-1] * squares[1:] * bonds[:-1] * bonds[1:]) * (widths[:-1] + widths[1:])).sum()
-    ) / (2 * max(share, 1.0))
+    flops = (
+        4
+        * float(
+            (levels * np.sqrt(squares[:-1] * squares[1:] * bonds[:-1] * bonds[1:]) * (widths[:-1] + widths[1:])).sum()
+        )
+        / (2 * max(share, 1.0))
+    )
     seconds = (vectors + 3) * flops * (1 if problem.real else 4) / 1e10 + 1e-3 * len(levels)
     return Estimate(environments + 4 * float(sites.sum()) + 1.2 * working, seconds, int(bonds.max()))
 

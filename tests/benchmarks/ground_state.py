@@ -271,8 +271,8 @@ def direction_shapes(groups, turned_groups, dims, probes, added) -> list[tuple[i
     result = []
     columns = (groups[:, 0], groups[:, 1], turned_groups[:, 0], dims, probes, added)
     for m, n, r, d, k, a in zip(*(column.tolist() for column in columns), strict=True):
-        result += [(k, m, n), (r, n, k), (k, r, k), (r, k, k), (d, r, a), (r, d, a)]
-        result += 2 * [(d, r, k), (r, d, k)]
+        result += [(k, m, n), (r, n, k), (d, r, k), (r, d, k), (k, r, k), (r, k, k), (d, r, a), (r, d, a)]
+        result += [(a, r, a), (r, a, a)]
     return result
 
 
