@@ -31,7 +31,8 @@ _VECTORS = 20  # Lanczos vectors kept between restarts
 _TOLERANCE = 1e-12  # residual relative to the norm bound
 _COARSE = 1e-4  # the same, for a first look at a sector
 _LONG = 150_000_000  # entries from which an iteration takes minutes: it then goes in stages whose vectors can be saved,
-_STAGES = (1e-4, 1e-8, _TOLERANCE)  # which costs a third more products
+_STAGES = 3  # so many, which costs a third more products,
+_LONGER = 300_000_000  # and one more for each of these
 _SCAN_ALL = 200_000  # total dimension up to which every sector is solved outright
 _SCAN_COARSE = 4_000_000  # and up to which every sector gets at least a coarse look
 _SCAN_COUNT = 100  # if there are no more sectors than these
@@ -190,9 +191,9 @@ class _Problem:
             self.saved.put(name, solved.to_arrays)
             return solved
         basis = self._basis(sector)
-        matrix, long = self._matrix(basis)
-        stages = self.saved.within(f"iteration/{sector}/{tolerance}") if long else None
-        energy, residual, vector = lowest_state(matrix, self.settings.seed, tolerance, stages)
+        matrix, work = self._matrix(basis)
+        saved = self.saved.within(f"iteration/{sector}/{tolerance}") if work >= _LONG else None
+        energy, residual, vector = lowest_state(matrix, self.settings.seed, tolerance, saved, stages_of(work))
         if self.progress:
             self.progress({"stage": "exact", "sector": sector, "dimension": basis.dimension, "residual": residual})
         solved = _Solved(sector, energy, residual, vector, basis)
@@ -210,27 +211,33 @@ class _Problem:
         return basis
 
     def _matrix(self, basis: Basis):
-        """The matrix or what multiplies by it, and whether an iteration with it is long."""
+        """The matrix or what multiplies by it, and its entries, complex ones counted twice."""
         item = 8 if self.parts.real else 16
         vectors = (_VECTORS + 6) * item * basis.dimension
         if vectors > self.settings.memory:
             raise TooLarge(f"Lanczos vectors of {vectors / 2**30:.1f} GiB do not fit the memory allowed")
         if basis.dimension <= _ALWAYS_FITS:
-            return assemble(self.parts, basis), False
+            return assemble(self.parts, basis), 0
         entries = basis.dimension + entry_count(self.parts, basis.sector)
-        long = entries >= _LONG
+        work = entries * item // 8
         if entries * (item + 4) + vectors + 2**26 <= self.settings.memory:
-            return assemble(self.parts, basis), long
-        return SplitOperator(self.parts, basis), long
+            return assemble(self.parts, basis), work
+        return SplitOperator(self.parts, basis), work
+
+
+def stages_of(work: int) -> np.ndarray:
+    """Residuals at which the vector of a long iteration is kept, so that some minutes lie between them."""
+    return np.geomspace(_COARSE, _TOLERANCE, min(_STAGES + work // _LONGER, 9))
 
 
 def lowest_state(
-    matrix, seed: int, tolerance: float = _TOLERANCE, saved: SavedStates | None = None
+    matrix, seed: int, tolerance: float = _TOLERANCE, saved: SavedStates | None = None, stages: Iterable[float] = ()
 ) -> tuple[float, float, np.ndarray]:
     """Lowest eigenvalue, residual norm and normalized vector of a Hermitian matrix (scipy CSR or LinearOperator).
 
     The matrix is expected to have its lowest eigenvalue near -1 ... -2 in size, since the tolerance is relative to it.
-    Repeatable: the start vector is drawn from `seed`. saved: keeps what the iteration has reached, in stages.
+    Repeatable: the start vector is drawn from `seed`. saved: keeps what the iteration has reached at the
+    residuals `stages`.
     """
     dimension = matrix.shape[0]
     if dimension == 1:
@@ -253,17 +260,16 @@ def lowest_state(
         start += 1j * random.standard_normal(dimension)
     if saved is None or not saved.kept:
         return _measured(matrix, _iterated(matrix, start, tolerance))
-    stages = [*(stage for stage in _STAGES if stage > tolerance), tolerance]
+    stages = [*(float(stage) for stage in stages if stage > tolerance), tolerance]
     if found := saved.get("stage"):
         start = found["vector"]
-        stages = stages[int(found["done"][0]) :]
+        stages = [stage for stage in stages if stage < found["reached"][0]]
     watched = LinearOperator(
         matrix.shape, dtype=matrix.dtype, matvec=lambda vector: (saved.pause(), matrix @ vector)[1]
     )  # fmt: skip
     for stage in stages:
         start = _iterated(watched, start, stage)
-        done = sum(other >= stage for other in _STAGES)
-        saved.put("stage", lambda start=start, done=done: {"vector": start, "done": np.array([done])})
+        saved.put("stage", lambda start=start, stage=stage: {"vector": start, "reached": np.array([stage])})
     return _measured(matrix, start)
 
 

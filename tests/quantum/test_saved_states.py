@@ -251,7 +251,12 @@ def test_sectors_and_stages_of_exact_diagonalization_are_not_repeated(monkeypatc
     found, seen = broken_off(lambda kept: ground_state(op, checkpoint=kept), 70)
     same(found, alone)
     assert abs(found.energy - alone.energy) < 1e-12 and found.state is not None and {"exact"} in seen
-    assert sectors == 5 and done == list(exact._STAGES) * sectors and len(seen) >= sectors
+    assert sectors == 5 and done == list(exact.stages_of(0)) * sectors and len(seen) >= sectors
+
+
+def test_longer_iterations_have_more_stages():
+    few, many = exact.stages_of(2 * 10**8), exact.stages_of(9 * 10**8)
+    assert len(few) < len(many) and few[0] == many[0] and few[-1] == many[-1] == exact._TOLERANCE
 
 
 def test_nothing_is_kept_without_a_checkpoint():
