@@ -73,21 +73,26 @@ def _restricted(x, label, indptr, neighbours, weights, blocks, diagonal, multipl
     for i in range(len(x)):
         a = label[i]
         for k in range(indptr[i] - 1, indptr[i + 1]):
-            middle[:] = 0.0
-            if k < indptr[i]:  # the site itself
-                j = i
-                for c in range(3):
-                    middle[c, c] = -multipliers[i]
-                if len(diagonal):
-                    middle += diagonal[i]
-            else:
-                j = np.int64(neighbours[k])
-                if len(blocks):
-                    middle[:] = blocks[k]
+            own = k < indptr[i]  # the site itself
+            j = i if own else np.int64(neighbours[k])
+            # number by number: whole arrays take numba ten times as long to compile
+            for c in range(3):
+                for d in range(3):
+                    if own:
+                        middle[c, d] = diagonal[i, c, d] if len(diagonal) else 0.0
+                    else:
+                        middle[c, d] = blocks[k, c, d] if len(blocks) else 0.0
+                if own:
+                    middle[c, c] -= multipliers[i]
+                elif not len(blocks):
+                    middle[c, c] = weights[k]
+            place, end = np.int64(rows[a]), np.int64(rows[a + 1])
+            while end - place > 1:
+                half = (place + end) // 2
+                if columns[half] <= label[j]:
+                    place = half
                 else:
-                    for c in range(3):
-                        middle[c, c] = weights[k]
-            place = rows[a] + np.searchsorted(columns[rows[a] : rows[a + 1]], label[j])
+                    end = half
             for s in range(3):
                 u, v = (s + 1) % 3, (s + 2) % 3
                 for t in range(3):

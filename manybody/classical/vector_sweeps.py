@@ -233,7 +233,7 @@ def gradient(x, indptr, neighbours, weights, blocks, diagonal, field, g, multipl
 def hessian_product(x, v, indptr, neighbours, weights, blocks, diagonal, multipliers, out):
     """Riemannian Hessian times the tangent vector v into out; returns v.Hv."""
     total = 0.0
-    if len(blocks) == 0:  # one pass: memory is what takes time on large systems
+    if len(blocks) == 0 and len(diagonal) == 0:  # one pass: memory is what takes time on large systems
         for i in range(len(x)):
             s0 = 0.0
             s1 = 0.0

@@ -7,6 +7,7 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from reference import reference, table
+from scipy.optimize import brentq
 from scipy.spatial.transform import Rotation
 
 from manybody.classical.clusters import cluster_sum
@@ -175,6 +176,15 @@ def test_incommensurate_spiral(key):
     pitch = math.acos(-1 / (4 * second)) / (2 * math.pi)
     sites = min(range(60, 121), key=lambda n: abs(n * pitch - round(n * pitch)) / n)
     energy = minimize(two_shells(lattices.ring(sites), second), MinimizeSettings(starts=16)).energy / sites
+    # in the frame that turns with the spiral every ring fits its pitch, and all digits of the row are reached
+    turned = EnergyFunction(12)
+    for strength, step in ((1.0, 1), (second, 2)):
+        c, s = math.cos(2 * math.pi * step * pitch), math.sin(2 * math.pi * step * pitch)
+        turn = strength * np.array([[c, -s, 0], [s, c, 0], [0, 0, 1.0]])
+        turned = turned + exchange(12, [[k, (k + step) % 12] for k in range(12)], turn)
+    exact = find_ground_state(turned)
+    assert exact.result.energy / 12 == pytest.approx(row.value, abs=2e-12)
+    assert exact.certificate.certified
     # a wave number of the ring next to the pitch, and the curvature of the energy there
     mismatch = 2 * math.pi * abs(pitch - round(sites * pitch) / sites)
     assert row.value - 1e-12 <= energy <= row.value + 2 * second * mismatch**2 + 1e-12
@@ -280,6 +290,35 @@ def test_minimum_does_not_change_under_site_rotations(seed):
     f = exchange(4, pairs, generator.standard_normal((5, 3, 3))) + field(4, range(4), generator.standard_normal((4, 3)))
     turned = f.rotated(Rotation.random(4, generator).as_matrix())
     assert minimize(turned).energy == pytest.approx(minimize(f).energy, rel=1e-10)
+
+
+@settings(max_examples=10, deadline=None)
+@given(st.integers(0, 2**32 - 1))
+def test_sites_in_fields_and_anisotropies_alone(seed):
+    """Quadratic, not isotropic and without a single pair: each site solves (A - mu) n = h with mu below all eigenvalues
+    of A (secular equation, its root found by scipy).
+    """
+    generator = np.random.default_rng(seed)
+    axes, strengths, fields = (
+        generator.standard_normal((2, 3)),
+        generator.standard_normal(2),
+        [[0.3, 0, 1], [0, 1, 0.2]],
+    )
+    f = field(2, [0, 1], fields)
+    f = sum((anisotropy(2, [k], axes[k], strengths[k]) for k in range(2)), start=f)
+    expected = 0.0
+    for axis, strength, h in zip(axes, strengths, np.array(fields)):
+        matrix = 2 * strength * np.outer(axis, axis) / (axis @ axis)
+        values, vectors = np.linalg.eigh(matrix)
+        part = vectors.T @ h
+        low = values[0] - np.linalg.norm(h) - 1.0
+        mu = brentq(lambda m, p=part, v=values: 1 - 1 / np.linalg.norm(p / (v - m)), low, values[0] - 1e-9, xtol=1e-15)
+        n = vectors @ (part / (values - mu))
+        expected += 0.5 * n @ matrix @ n - h @ n
+    found = find_ground_state(f)
+    assert found.result.converged
+    assert found.result.energy == pytest.approx(expected, rel=1e-10)
+    assert found.certificate.certified
 
 
 @settings(max_examples=8, deadline=None)

@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from reference import reference
+from reference import reference, table
 from scipy.optimize import minimize
 from spin_models import chain, complete, cubic, heisenberg, honeycomb, kagome, pyrochlore, ring, torus
 
@@ -26,13 +26,31 @@ STARS = {
     "cubic": (27, cubic(3)),
     "honeycomb": (18, honeycomb(3, 3)),
 }
+STAR_ROWS = ["F001", "F002", "F004", "F005", "F007", "F010", "F011", "F012", "F013", "F014", "F015"]
+CHAIN_ROWS = {"F017": 3, "F018": 4, "F020": 7, "F021": 9, "F023": 16, "F024": 4, "F026": 8}
+COMPLETE_ROWS = {
+    "F027": ("triangles", 16, torus(4, 4, TRIANGULAR)),
+    "F033": ("triangles", 16, torus(4, 4, TRIANGULAR)),
+    "F028": ("triangles", 27, kagome(3, 3)),
+    "F034": ("triangles", 27, kagome(3, 3)),
+    "F029": ("tetrahedra", 32, pyrochlore(2)),
+    "F035": ("tetrahedra", 32, pyrochlore(2)),
+    "F036": ("triangles", 4, complete(4)),
+    "F037": ("triangles", 5, complete(5)),
+    "F039": ("triangles", 8, complete(8)),
+}
+SLOW = ("F011", "F012", "F023")
 
 
-@pytest.mark.parametrize(
-    "identifier",
-    ["F001", "F002", "F004", "F005", "F007", "F010", "F013", "F014", "F015"]
-    + [pytest.param(row, marks=pytest.mark.slow) for row in ("F011", "F012")],
-)
+def quick_and_slow(rows):
+    return [pytest.param(row, marks=pytest.mark.slow if row in SLOW else ()) for row in rows]
+
+
+def test_every_row_is_covered():
+    assert {key for key in table() if key.startswith("F")} == {*STAR_ROWS, *CHAIN_ROWS, *COMPLETE_ROWS, "F040"}
+
+
+@pytest.mark.parametrize("identifier", quick_and_slow(STAR_ROWS))
 def test_star_bounds_of_anderson(identifier):
     # Anderson 1951, Phys. Rev. 83, 1260.
     row = reference(identifier)
@@ -44,20 +62,9 @@ def test_star_bounds_of_anderson(identifier):
     assert row.digits(bound.value / sites) > 11
 
 
-@pytest.mark.parametrize(
-    ("identifier", "size"),
-    [
-        ("F017", 3),
-        ("F018", 4),
-        ("F020", 7),
-        ("F021", 9),
-        pytest.param("F023", 16, marks=pytest.mark.slow),
-        ("F024", 4),
-        ("F026", 8),
-    ],
-)
-def test_chains_from_open_pieces(identifier, size):
-    row = reference(identifier)
+@pytest.mark.parametrize("identifier", quick_and_slow(CHAIN_ROWS))
+def test_chains_from_open_pieces(identifier):
+    row, size = reference(identifier), CHAIN_ROWS[identifier]
     sites = size + 2
     op = heisenberg(sites, ring(sites), row.spin)
     bound = cluster_bound(op, max_sites=16, max_dimension=20_000, kinds=(f"pieces of {size}",))
@@ -67,22 +74,9 @@ def test_chains_from_open_pieces(identifier, size):
     assert row.digits(bound.value / sites) > 10.5
 
 
-@pytest.mark.parametrize(
-    ("identifier", "kind", "sites", "bonds"),
-    [
-        ("F027", "triangles", 16, torus(4, 4, TRIANGULAR)),
-        ("F033", "triangles", 16, torus(4, 4, TRIANGULAR)),
-        ("F028", "triangles", 27, kagome(3, 3)),
-        ("F034", "triangles", 27, kagome(3, 3)),
-        ("F029", "tetrahedra", 32, pyrochlore(2)),
-        ("F035", "tetrahedra", 32, pyrochlore(2)),
-        ("F036", "triangles", 4, complete(4)),
-        ("F037", "triangles", 5, complete(5)),
-        ("F039", "triangles", 8, complete(8)),
-    ],
-)
-def test_triangles_and_tetrahedra(identifier, kind, sites, bonds):
-    row = reference(identifier)
+@pytest.mark.parametrize("identifier", COMPLETE_ROWS)
+def test_triangles_and_tetrahedra(identifier):
+    row, (kind, sites, bonds) = reference(identifier), COMPLETE_ROWS[identifier]
     bound = cluster_bound(heisenberg(sites, bonds, row.spin), kinds=(kind,))
     value = bound.value if row.N != "any" else bound.value / sites
     assert abs(value - row.value) < 1e-11
