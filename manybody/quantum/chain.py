@@ -15,10 +15,11 @@ from manybody.quantum.matrix_product_operator import OperatorSite, composite
 
 @dataclass(slots=True)
 class Bond:
-    """charges (n,) distinct integers and dims (n,) states of each."""
+    """charges (n,) distinct integers and dims (n,) states of each; not to be changed in place."""
 
     charges: np.ndarray
     dims: np.ndarray
+    image: tuple[int, "Bond"] | None = field(default=None, init=False, repr=False, compare=False)
 
     @property
     def dimension(self) -> int:
@@ -29,7 +30,11 @@ class Bond:
         return self.charges, self.dims
 
     def mirrored(self, total: int) -> "Bond":
-        return Bond(total - self.charges, self.dims)
+        """The bond as seen from the other end of a chain of this total charge."""
+        if self.image is None or self.image[0] != total:
+            other = Bond(total - self.charges, self.dims)
+            self.image, other.image = (total, other), (total, self)
+        return self.image[1]
 
 
 @dataclass
