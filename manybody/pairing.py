@@ -75,7 +75,7 @@ def harmonic_part(f: EnergyFunction, rule: str, classical: dict) -> dict:
     """Coefficient e_1 of the first quantum correction, least over tied minima, and the minimum that has it.
 
     Beside dataset variables: `selected` (N, 3). Where e_1 cannot be had: `harmonic_message` alone, and the classical
-    minimum as `selected`.
+    minimum as `selected`. A search among ties that was cut short is told in `harmonic_message`, too.
     """
     from manybody.classical.harmonic import HarmonicTrouble, harmonic_correction
 
@@ -91,6 +91,10 @@ def harmonic_part(f: EnergyFunction, rule: str, classical: dict) -> dict:
             "harmonic_zero_modes": correction.zero_modes,
             "selected": correction.configuration,
         }
+        if not correction.exhausted:
+            part["harmonic_message"] = (
+                f"only {correction.evaluations} of the configurations that tie were compared: one may have a lower e_1"
+            )
     return part | {"harmonic_seconds": time.perf_counter() - began}
 
 

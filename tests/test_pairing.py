@@ -144,6 +144,19 @@ def test_small_and_awkward_systems_are_finite(f):
     )
 
 
+def test_a_search_among_ties_cut_short_is_told(monkeypatch):
+    from manybody.classical import harmonic
+
+    f = exchange(4, [(i, j) for i in range(4) for j in range(i)], 1.0)
+    classical = pairing.classical_part(f, QUICK)
+    assert "harmonic_message" not in pairing.harmonic_part(f, "wick", classical)
+    short = harmonic.SelectionSettings(evaluations=1)
+    monkeypatch.setattr(harmonic, "SelectionSettings", lambda: short)
+    part = pairing.harmonic_part(f, "wick", classical)
+    assert part["harmonic_coefficient"] == pytest.approx(-2.0, abs=1e-9)
+    assert part["harmonic_message"].startswith("only 1 of the configurations")
+
+
 def test_undefined_and_unstable():
     f = exchange(2, [(0, 1)], 1.0) + anisotropy(2, [0], [0, 0, 1], 1.0)
     classical = pairing.classical_part(f, QUICK)

@@ -30,8 +30,8 @@ __all__ = ["HarmonicCorrection", "HarmonicTrouble", "SelectionSettings", "Unstab
 class SelectionSettings:
     """evaluations: how many configurations may be compared, reduced for large systems: evaluations x sites^3 <= work.
 
-    ties: starts of a search for further minima that tie (0: none). tie: energies within this distance, relative to |f -
-    f_mean|, tie. seed: of the random steps along the manifold. step: the smallest one.
+    ties: starts of a search for further minima that tie (0: none; none is made beyond 400 sites). tie: energies within
+    this distance, relative to |f - f_mean|, tie. seed: of the random steps along the manifold. step: the smallest one.
     """
 
     evaluations: int = 300
@@ -48,7 +48,8 @@ class HarmonicCorrection:
 
     frequencies (N,) ascending and trace = tr A at it; zero_modes of the frequencies. spread: largest minus smallest e1
     met among the configurations that tie (0 where there is one). evaluations: how many were compared. exhausted: the
-    search along a manifold ended because e1 no longer fell, not because the allowed evaluations were spent.
+    search ended because all candidates were compared and e1 no longer fell along the manifold, not because the allowed
+    evaluations were spent.
     """
 
     e1: float
@@ -89,6 +90,8 @@ def harmonic_correction(
                 search.visit(candidate)
             search.follow()
             search.flatten()
+    elif len(candidates) > 1 or len(search.flexible(search.best)):
+        search.exhausted = False
     best = search.best
     return HarmonicCorrection(
         e1=best.e1,

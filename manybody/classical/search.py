@@ -54,6 +54,11 @@ def _message(result: ClassicalResult, certificate: Certificate | None, settings:
             f"the classical minimum is not converged: relative gradient {result.gradient_norm:.1e}, "
             f"wanted {settings.tolerance:.0e}"
         )
+    elif result.gradient_norm > settings.tolerance:
+        messages.append(
+            f"the classical descent ended at a relative gradient of {result.gradient_norm:.1e}, wanted "
+            f"{settings.tolerance:.0e}: the energy no longer fell beyond rounding, the softest modes are not settled"
+        )
     if not result.proven and 0 < result.starts_used < settings.starts:
         messages.append(f"only {result.starts_used} of {settings.starts} starts were made on this many sites")
     if certificate is not None and not certificate.rigorous:

@@ -96,8 +96,9 @@ _CLUSTER = (
     ),
     Variable(
         "classical_energy_bound",
-        "rigorous lower bound on the classical ground energy",
+        "lower bound on the classical ground energy",
         units="energy",
+        meaning="rigorous unless classical_bound_method says otherwise",
     ),
     Variable(
         "classical_certified",
@@ -119,8 +120,9 @@ _CLUSTER = (
     Variable("classical_starts", "starts that were used", units="1", dtype="count"),
     Variable(
         "classical_gradient_norm",
-        "norm of the gradient at the classical minimum",
-        units="energy",
+        "relative gradient at the classical minimum",
+        units="1",
+        meaning="largest gradient at a site over the strongest sum of couplings at a site",
     ),
     Variable("classical_converged", "the minimizer converged", dtype="flag", flags=_NO_YES),
     Variable("classical_seconds", "time spent in the classical branch", units="s"),

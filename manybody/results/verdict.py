@@ -45,6 +45,7 @@ def cautions(view, tolerance=0.05) -> list[str]:
             f"the gap must not be used ({_list(root, root['ladder'].values == 1)})."
         )
     found += _unproved(root)
+    found += _remarks(root)
     found += _extrapolated(view, tolerance)
     found += _harmonic(view)
     spread = rule_spread(root)
@@ -195,11 +196,24 @@ def _unproved(root):
         return []
     text = f"{int(missing.sum())} of {int(have.sum())} classical minima are not proved global"
     distance = root["classical_energy"] - root["classical_energy_bound"]
-    share = (distance / abs(root["classical_energy"])).values[missing]
+    rigorous = flag_words(root["classical_bound_method"]) != "clusters_searched"
+    share = (distance / abs(root["classical_energy"])).values[missing & rigorous]
     share = share[np.isfinite(share)]
     if len(share):
         text += f"; the rigorous bound is up to {wording.percent(float(share.max()))} of the energy lower"
     return [text + ". A lower minimum would make the gap larger by the difference."]
+
+
+def _remarks(root):
+    """What the classical branch itself says: not converged, fewer starts than asked for, a bound that is no proof."""
+    said = root["classical_message"].values
+    remarked = np.array([bool(m) for m in said.ravel()]).reshape(said.shape)
+    if not remarked.any():
+        return []
+    have = int(np.isfinite(root["classical_energy"].values).sum())
+    return [
+        f"{int(remarked.sum())} of {have} classical minima need a remark.{_why(root, remarked, 'classical_message')}"
+    ]
 
 
 def _extrapolated(view, tolerance):
@@ -235,9 +249,9 @@ def _harmonic(view):
     ]
 
 
-def _why(root, mask):
+def _why(root, mask, name="message"):
     """The most frequent message among the points, if there is one."""
-    messages = [m for m in np.broadcast_to(root["message"].values, mask.shape)[mask].tolist() if m]
+    messages = [m for m in np.broadcast_to(root[name].values, mask.shape)[mask].tolist() if m]
     if not messages:
         return ""
     common = max(set(messages), key=messages.count)

@@ -404,6 +404,8 @@ def test_flat_manifold_has_no_spread():
     assert found.e1 == pytest.approx(-2.0, abs=1e-12)
     assert 0 <= found.spread < 1e-9
     assert found.exhausted
+    # one evaluation compares nothing, and the result does not claim so
+    assert not harmonic_correction(f, minimize(f), "wick", SelectionSettings(evaluations=1)).exhausted
 
 
 def test_separate_minima_are_compared():

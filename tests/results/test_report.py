@@ -126,13 +126,19 @@ def test_cautions_name_what_is_wrong():
     records[2].update(coherent_energy=-20.0)
     for record in records[:2]:
         record.update(classical_certified=False, classical_energy_bound=-4.2)
+        record.update(classical_message="the classical minimum is not converged")
     _, found = sentences(records)
     text = " ".join(found)
     assert "1 of 6 points failed" in text and "worker lost" in text
     assert "did not converge" in text and "raise max_bond" in text
     assert "ladder is violated at 1 point" in text and "sites 6" in text
     assert "1 of 3 classical minima are not proved global" in text and "5" in text
+    assert "1 of 3 classical minima need a remark. The program said: the classical minimum is not conv" in text
+    assert "rigorous bound" in text
     assert "beyond the largest spin computed" in text and found[-1] == JUDGE
+    for record in records[:2]:
+        record.update(classical_bound_method="clusters_searched")
+    assert "rigorous bound" not in " ".join(sentences(records)[1])
 
 
 def test_no_false_caution_on_a_clean_study():
