@@ -1,9 +1,9 @@
 """Imports run only downwards, the two branches never meet but in pairing, and importing the package is light."""
 
 import ast
+import os
 import subprocess
 import sys
-import time
 from pathlib import Path
 
 import pytest
@@ -75,10 +75,8 @@ def test_the_command_and_the_model_load_no_heavy_library():
 
 
 def test_help_answers_at_once():
-    # 0.4 s is what a user feels; the least of a few runs, and twice that here, since test machines are busy
-    took = []
-    for _ in range(3):
-        start = time.perf_counter()
-        subprocess.run([sys.executable, "-m", "manybody.command", "--help"], check=True, capture_output=True)
-        took.append(time.perf_counter() - start)
-    assert min(took) < 0.8
+    # 0.4 s is what a user feels; twice that of processor time here, since other machines are slower
+    before = os.times()
+    subprocess.run([sys.executable, "-m", "manybody.command", "--help"], check=True, capture_output=True)
+    after = os.times()
+    assert after.children_user + after.children_system - before.children_user - before.children_system < 0.8

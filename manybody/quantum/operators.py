@@ -92,15 +92,6 @@ def entry_count(parts: Shifts, sector: float | None) -> int:
     return round(total)
 
 
-def matrix_bytes(parts: Shifts, sector: float | None) -> int:
-    """Memory of the assembled matrix."""
-    dims = (
-        math.prod(parts.dims) if sector is None else sector_dimensions(parts.spins)[sector_index(parts.spins, sector)]
-    )
-    entries = int(dims) + entry_count(parts, sector)
-    return entries * ((8 if parts.real else 16) + (4 if entries < 2**31 else 8)) + 4 * int(dims)
-
-
 def diagonal_of(parts: Shifts, basis: Basis) -> np.ndarray:
     """The diagonal of the matrix, (dimension,) real."""
     terms = [term for term in parts.terms if term.diagonal]
