@@ -131,8 +131,20 @@ def test_observables_stand_beside_their_classical_values():
         exchange(4, [(0, 1), (2, 3)], 1.0) + field(4, [0, 1], [[0, 0, 1], [0, 0, -1]]),
         1e-300 * exchange(3, [(0, 1), (1, 2)], 1.0),
         1e300 * exchange(2, [(0, 1)], 1.0),
+        1e300 * (field(2, [0, 1], [0.3, 0, 0.2]) + anisotropy(2, [0], [1, 1, 0], 0.8) + exchange(2, [(0, 1)], 1.0)),
+        exchange(2, [(0, 1)], 1e-300) + anisotropy(2, [0], [0, 0, 1], 1e300),
     ],
-    ids=["one site", "constant", "one spin in a field", "lonely sites", "two clusters", "tiny", "huge"],
+    ids=[
+        "one site",
+        "constant",
+        "one spin in a field",
+        "lonely sites",
+        "two clusters",
+        "tiny",
+        "huge",
+        "all huge",
+        "mixed",
+    ],
 )
 def test_small_and_awkward_systems_are_finite(f):
     record = solve(f, 1.0, "toeplitz")

@@ -81,7 +81,7 @@ class Prover:
         self.starts, self.rank, self.rigorous, self.calls = self.none, 0, True, 0
         self.relaxed = self.clustered = False
         self.scaled, self.exponent = f.rescaled()
-        if not coupled_sites(f).any():
+        if not coupled_sites(self.scaled).any():
             self.bound, self.method = self.scaled.mean, "constant"
         elif self.scaled.is_quadratic:
             problem = problem_of(self.scaled, MinimizeSettings())

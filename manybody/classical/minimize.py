@@ -95,11 +95,11 @@ def minimize(
     Couplings of any size are scaled internally; the results are in the units of f.
     """
     settings = settings or MinimizeSettings()
-    if not coupled_sites(f).any():
+    scaled, exponent = f.rescaled()
+    if not coupled_sites(scaled).any():  # couplings 1e-320 of a constant vanish with the scaling, too
         up = np.tile([0.0, 0.0, 1.0], (f.sites, 1))
         energy = float(f.value(up))
         return ClassicalResult(energy, up, (Minimum(energy, up, 1),), 0.0, True, 0, True)
-    scaled, exponent = f.rescaled()
     problem = problem_of(scaled, settings)
     pool = _Pool(scaled, problem.strength)
     used, proven = 0, False

@@ -121,7 +121,7 @@ def _mirrors(op: SpinOperator):
     """
     random = np.random.default_rng(0)
     total = np.zeros((3, 3))
-    for group in op.symbol.groups:
+    for group in op.symbol.rescaled()[0].groups:  # products of two huge coefficients would overflow
         if group.ranks == (1,):
             for vector in group.coefficients[:, np.argsort(CARTESIAN)]:
                 total += random.normal() * np.outer(vector, vector)

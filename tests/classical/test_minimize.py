@@ -17,6 +17,7 @@ from manybody.classical.sphere_product import random_points
 from manybody.model import lattice as lattices
 from manybody.model.couplings import anisotropy, antisymmetric, biquadratic, exchange, field
 from manybody.model.energy import EnergyFunction
+from manybody.model.quantization import quantize
 
 
 def heisenberg(lattice, coupling=1.0, shell="nearest"):
@@ -273,6 +274,14 @@ def test_constant_functions_and_uncoupled_sites():
     assert found.certificate.certified
     assert len(found.result.minima) == 1
     assert np.array_equal(found.result.configuration[[0, 2, 5]], np.tile([0.0, 0.0, 1.0], (3, 1)))
+
+
+def test_couplings_that_vanish_beside_a_constant():
+    """The lower symbol of an anisotropy at S = 1/2 is a constant, here 10^600 times the exchange."""
+    f = exchange(3, [[0, 1]], 1e-300) + anisotropy(3, [0], [0, 0, 1], 1e300)
+    found = find_ground_state(quantize(f, 0.5, "toeplitz").lower_symbol())
+    assert found.result.energy == pytest.approx(1e300 / 3, rel=1e-12)
+    assert found.certificate.certified
 
 
 def test_contradictory_fields():
