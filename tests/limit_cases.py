@@ -3,7 +3,8 @@
 Chains by closed forms, free fermions and Bethe ansatz; open chains of the matrix-product engine from
 data/open_chain_energies.csv, computed by tests/benchmarks/limits.py; lattices of free modes in two and three
 dimensions. Energies are totals. Windows of sizes were fixed before any result was looked at; held_cases was not used to
-choose forms or constants of results/scaling_sites.py and site_forms.py.
+choose forms or constants of results/scaling_sites.py and site_forms.py, but for the form of open chains below their
+correlation length, which was chosen on the spin-2 chain of both.
 """
 
 import csv

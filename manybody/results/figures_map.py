@@ -38,11 +38,8 @@ def relative_gap_map(view):
         axis.set_title(f"rule: {rule}", loc="left")
     axes[0, 0].set_ylabel(swept[1])
     figure.colorbar(mesh, ax=list(axes[0]), label="gap / |f_min \N{MINUS SIGN} f_mean|")
-    caption = (
-        f"Relative gap over {swept[0]} and {swept[1]}, {size} sites, S = {spin_text(spin)} (the smallest spin). "
-        "Hatched: not known."
-    )
-    return figure, caption
+    caption = f"Relative gap over {swept[0]} and {swept[1]}, {size} sites, S = {spin_text(spin)} (the smallest spin)."
+    return figure, caption + _hatched(values)
 
 
 def trusted_spin_map(view, tolerance=0.05):
@@ -77,9 +74,13 @@ def trusted_spin_map(view, tolerance=0.05):
     log_ticks(bar.ax.yaxis, spin_text)
     caption = (
         f"Smallest spin from which on the classical energy is within {tolerance:.0%} of the energy scale, {size} "
-        "sites. Numbers in brackets are extrapolated beyond the largest spin computed. Hatched: not known."
+        "sites. Numbers in brackets are extrapolated beyond the largest spin computed."
     )
-    return figure, caption
+    return figure, caption + _hatched(values)
+
+
+def _hatched(values):
+    return "" if bool(np.isfinite(values).all()) else " Hatched: not known."
 
 
 def _swept(view):
@@ -141,7 +142,7 @@ def _trusted_lines(view, name, verdict, size, tolerance):
     axis.legend()
     caption = (
         f"Smallest spin from which on the classical energy is within {tolerance:.0%} of the energy scale, {size} "
-        "sites; open symbols are extrapolated beyond the largest spin computed."
+        "sites; open symbols are extrapolated beyond the largest spin computed. Bars: what the errors allow."
     )
     return figure, caption
 

@@ -28,9 +28,11 @@ INDEPENDENT = 5.0
 SPREAD = 0.8
 """The mixture overstates the error. With this factor 9 of 10 limits lie within one standard error and 97 to 99 of 100
 within two; a smaller one would put limits of S = 3/2 chains outside."""
+FEW = 4
+"""Up to this many sizes the error of the mixture is left as it is: after the limit, one amplitude and the next term
+nothing is left by which the data could rule out a form, so how the forms differ is the only measure of the error."""
 AMPLITUDES = 10.0 ** np.arange(-10.5, 0.51, 0.25)
 """Of the rest, in units of the energy scaled back to a linear size of one: up to three times the energy."""
-RARE = {("periodic", "growing"): 0.1}
 NEGLIGIBLE = 1e-6
 LUCK = 3.0
 """A family of sizes must have an error this many times smaller than all sizes together to be preferred."""
@@ -131,10 +133,11 @@ def _one_family(name, sites, energy, error, others, boundary, dimension):
     kept /= kept.sum()
     limits, noise, spread = (np.concatenate(a) for a in (limits, noise, spread))
     values, errors = {}, {}
+    factor = SPREAD if len(sites) > FEW else 1.0
     for k, key in enumerate(names):
         values[key] = float(kept @ limits[:, k])
         deviation = np.sqrt(noise * noisy[k] + spread[:, k])
-        errors[key] = SPREAD * _standard_error(kept, limits[:, k] - values[key], deviation)
+        errors[key] = factor * _standard_error(kept, limits[:, k] - values[key], deviation)
     form = max(share, key=share.get)
     _, part, place = heaviest[form]
     curve = part.curve(place, names)

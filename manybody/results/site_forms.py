@@ -10,12 +10,17 @@ chains 1/N^2 after the boundary's 1/N. In d > 1 with linearly dispersing modes i
 1989; Hasenfratz, Niedermayer 1993); gapped systems approach exponentially. Marginal operators multiply the leading term
 by functions of ln N (Affleck, Gepner, Schulz, Ziman 1989), 1/ln^3 N for rings. In chains of larger half-integer spin
 their size is not small, and the crossover to the asymptotic law is slow (S = 3/2: Hallberg, Wang, Horsch, Moreo 1996);
-the same holds for chains shorter than a long correlation length. Neither is known beforehand, so c is not a power or a
-logarithm but any function that changes little while ln x changes by `span`: a Gaussian random function with rational
-quadratic covariance (Rasmussen, Williams 2006, section 4.2). Citations from memory."""
+the same holds for chains shorter than a long correlation length, whose coefficient grows with the size (r < 0). Neither
+is known beforehand, so c is not a power or a logarithm but any function that changes little while ln x changes by
+`span`: a Gaussian random function with rational quadratic covariance (Rasmussen, Williams 2006, section 4.2).
+
+Tori and patches of different shape, as 10, 16 and 20 sites of the square lattice, have amplitudes that depend on the
+shape (Hasenfratz, Niedermayer 1993), and no smooth law in N alone: there a may be large and c jumps from size to size.
+Citations from memory."""
 
 import functools
 from dataclasses import dataclass
+from fractions import Fraction
 
 import numpy as np
 
@@ -33,7 +38,13 @@ LENGTHS = 14
 FAR = 4.0
 """Correlation lengths: LENGTHS of them, up to this many times the range of sizes."""
 RARE = 0.2
-"""Weight of rings far below their correlation length before any data."""
+"""Weight before any data of rings far below their correlation length, of even sizes that do not follow one smooth law,
+and of clusters of different shape that do."""
+CROSSOVER = -0.75
+"""Extra power r of open chains below a correlation length, where the coefficient of 1/N^2 grows with the size: between
+0, that of a critical chain with slowly varying coefficients, and -1, where the energy of the ends itself varies."""
+UNCOMMON = 0.5
+"""Weight of that form beside the others of its kind: a larger one widens limits of chains that are long enough."""
 LEADING = {
     ("open", 1): 2,
     ("periodic", 1): 2,
@@ -67,7 +78,7 @@ class Form:
     def name(self) -> str:
         """For people, in powers of N."""
         one, leading, next_one = (_power(p, self.dimension) for p in (1, self.power, self.power + self.extra))
-        if self.boundary == "open" and self.kind == "growing":
+        if self.boundary == "open" and self.kind == "growing" and self.power == 1:
             return f"slowly varying {one}"
         return (f"{one} + " if self.boundary == "open" else "") + {
             "slow": f"slowly varying {leading}",
@@ -127,29 +138,44 @@ def _root(logs, span):
 
 @functools.cache
 def _power(power, dimension):
-    if power == dimension:
-        return "1/N"
-    whole = power / dimension
-    return f"1/N^{whole:g}" if whole == int(whole) else f"1/N^({power:g}/{dimension})"
+    exponent = Fraction(power).limit_denominator(100) / dimension
+    return "1/N" if exponent == 1 else f"1/N^{exponent}" if exponent.denominator == 1 else f"1/N^({exponent})"
 
 
 def forms_for(sizes, boundary=None, dimension=None) -> tuple[Form, ...]:
     """The forms to compare for these numbers of sites; boundary "open", "periodic" or None for unknown or mixed,
     dimension 1, 2, 3 or None (all are tried)."""
     chosen, sizes = [], np.asarray(sizes, float)
-    mixed = len(set((sizes % 2).tolist())) > 1
+    parities = len(set((sizes % 2).tolist())) > 1
     for (edge, d), power in LEADING.items():
         if boundary in (None, edge) and (d == dimension or dimension is None):
+            mixed = parities if d == 1 else not similar_shapes(sizes, d)
             chosen += _forms(edge, d, power, sizes ** (1 / d), mixed)
     return tuple(chosen)
 
 
+def similar_shapes(sizes, dimension):
+    """Whether clusters of these numbers of sites can have one shape in d > 1: N = c L^d with whole L and one c."""
+    return len({_without_powers(int(n), dimension) for n in np.asarray(sizes).tolist()}) == 1
+
+
+def _without_powers(number, power):
+    k = 2
+    while k**power <= number:
+        while number % k**power == 0:
+            number //= k**power
+        k += 1
+    return number
+
+
 def _forms(edge, d, power, x, mixed):
+    """mixed: even and odd chains, or clusters of different shape, need not follow one smooth law."""
+    smooth = RARE if d > 1 and mixed else 1.0
     extra = 2 if (edge, d) == ("periodic", 1) else 1
     forms = []
     for span in SPANS:
-        forms.append(Form(edge, d, "slow", power, span))
-        forms.append(Form(edge, d, "next", power, span, extra))
+        forms.append(Form(edge, d, "slow", power, span, weight=smooth))
+        forms.append(Form(edge, d, "next", power, span, extra, weight=smooth))
         if d == 1:
             forms += [Form(edge, d, "logarithm", power, span, extra, logarithm=scale) for scale in LOGARITHMS]
         if (edge, d) == ("open", 1):
@@ -158,10 +184,16 @@ def _forms(edge, d, power, x, mixed):
         if (edge, d) == ("periodic", 1):
             # a relevant coupling grows, all sizes are below the correlation length
             forms.append(Form(edge, d, "growing", power, span, -1, weight=RARE))
+    if (edge, d) == ("open", 1):
+        forms.append(Form(edge, d, "growing", power, SPANS[-1], CROSSOVER, weight=UNCOMMON))
     if d > 1:
         forms.append(Form(edge, d, "irregular", power, SHORT_SPAN, steady=IRREGULAR))
     # sizes of different commensurability differ by as much as the leading term itself; even ones alone rarely do
     forms.append(Form(edge, d, "irregular", power, SHORT_SPAN, weight=1.0 if mixed or d > 1 else RARE))
     for length in np.geomspace(0.15 * np.min(np.diff(np.unique(x))), FAR * (x[-1] - x[0]), LENGTHS):
-        forms += [Form(edge, d, "exponential", p, span, length=float(length)) for p in (1, 2) for span in SPANS[1:]]
+        forms += [
+            Form(edge, d, "exponential", p, span, length=float(length), weight=smooth)
+            for p in (1, 2)
+            for span in SPANS[1:]
+        ]
     return forms

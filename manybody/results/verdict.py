@@ -161,7 +161,7 @@ def _trusted_limit(view, tolerance):
             parts.append(
                 f"it is not determined by these sizes under {rule}"
                 if bool(vague.any())
-                else f"from {_spin_range(one['trust_spin'].values)}{between and f' ({between})'} under {rule}"
+                else f"it is {_spin_range(one['trust_spin'].values)}{between and f' ({between})'} under {rule}"
             )
     return f"; with many sites, extrapolated, {wording.several(parts)}" if parts else ""
 
@@ -170,14 +170,14 @@ def _how(view, one):
     state = {STATES[k] for k in one["trust_state"].values.ravel().tolist() if k >= 0}
     largest = wording.spin(float(view.spins[-1]))
     text = {
-        "extrapolated": f"extrapolated beyond the largest spin computed, {largest}",
+        "extrapolated": f"extrapolated beyond S = {largest}, the largest spin computed",
         "at_most": "at most: smaller spins were not computed",
         "interpolated": "between computed spins",
         "measured": "measured",
     }
     words = [text[name] for name in STATES if name in state]
     between = _between(one)
-    return f", {' or '.join(words)}{between and f', {between}'}"
+    return f"; {' or '.join(words)}{between and f'; {between}'}"
 
 
 def _between(one):

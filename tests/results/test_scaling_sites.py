@@ -73,22 +73,24 @@ def test_transverse_field_ising_chain(field, row):
 
 
 def test_square_lattice_from_small_tori():
-    """-0.669437(5) (row B023, from memory), from tori of 8 to 20 sites: a wide error, but not a wrong one. With three
-    sizes it is 1.2 standard errors off."""
+    """-0.669437(5) (row B023, from memory), from tori of 8 to 20 sites, any three and more of them: a wide error, but
+    not a wrong one. Most have different shapes, so their energies do not follow a smooth law."""
     energies = {8: -6.0, 10: reference("A234").value, 16: reference("A230").value, 20: reference("A236").value}
     sites, pairs = tilted_square((3, 3), (-3, 3))
     energies[sites] = heisenberg(0.5, pairs, sites)
     truth = reference("B023").value
-    for chosen in ((8, 10, 16, 18, 20), (10, 16, 18, 20), (10, 16, 20)):
+    subsets = [chosen for count in (3, 4, 5) for chosen in itertools.combinations(sorted(energies), count)]
+    assert len(subsets) == 16
+    for chosen in subsets:
         found = limit(chosen, [energies[n] for n in chosen], boundary="periodic", dimension=2)
-        judged(found, truth, 0.05, within=2.0 if len(chosen) == 3 else 1.0)
+        judged(found, truth, 0.02 if len(chosen) > 3 else 0.05)
 
 
-def test_spin_one_chain_from_rings():
-    """-1.401484039 (row B002, from memory), from rings of 4 to 10 sites by exact diagonalization: 1.3 errors off."""
-    sites = (4, 6, 8, 10)
+@pytest.mark.parametrize("sites", [(4, 6, 8, 10), (4, 6, 8), (6, 8, 10)])
+def test_spin_one_chain_from_rings(sites):
+    """-1.401484039 (row B002, from memory), from rings of 4 to 10 sites by exact diagonalization."""
     energies = [heisenberg(1, ring_pairs(n), n) for n in sites]
-    judged(limit(sites, energies, boundary="periodic", dimension=1), reference("B002").value, 0.05, within=2.0)
+    judged(limit(sites, energies, boundary="periodic", dimension=1), reference("B002").value, 0.01)
 
 
 @pytest.mark.parametrize("sizes", [(12, 16, 20, 24, 28, 32, 40, 48, 56, 64), range(24, 66, 8), range(16, 66, 4)])
@@ -118,12 +120,12 @@ def test_spin_three_halves_chain_from_open_chains(sizes):
 
 def test_spin_two_chain_is_a_known_weakness():
     """-4.761248(1) (row B005): open chains up to 36 sites are shorter than the correlation length, about 50 sites,
-    which nothing in them shows; the limit is up to three stated errors off."""
+    which little in them shows; the limit is one to two stated errors off."""
     table, (truth, _) = computed(2.0), SPIN_LIMITS[2.0, 1.0]
     for sizes in (range(8, 34, 4), range(12, 38, 4), range(6, 37, 2)):
         found = limit(sizes, *np.transpose([table[n] for n in sizes]), boundary="open", dimension=1)
-        judged(found, truth, 1e-4, within=3.0)
-        assert abs(found.values["energy"] - truth) < 2e-4
+        judged(found, truth, 1e-4, within=2.0)
+        assert abs(found.values["energy"] - truth) < 1.5e-4
 
 
 @pytest.mark.parametrize(("spin", "anisotropy", "sites"), [(1.0, 1.0, 8), (1.5, 1.0, 6), (2.0, 1.0, 4)])
@@ -150,7 +152,7 @@ def test_table_of_open_chains_is_what_the_engine_computes(spin, anisotropy, site
     assert found.energy * spin**2 == pytest.approx(energy, abs=error + found.error * spin**2)
 
 
-@pytest.mark.parametrize(("known", "windows"), [(True, WINDOWS[::5]), (False, (WINDOWS[0], WINDOWS[9]))])
+@pytest.mark.parametrize(("known", "windows"), [(True, WINDOWS[::5]), (False, WINDOWS[::9])])
 def test_stated_errors_are_honest_and_useful(known, windows):
     """Chains with known limits, critical, near-critical and gapped: a part of tests/benchmarks/limits.py. A standard
     error holds two limits of three at least, two of them 95 of 100, and it is not padded."""

@@ -1,7 +1,7 @@
 import numpy as np
 import pytest
 
-from manybody.results.site_forms import forms_for
+from manybody.results.site_forms import forms_for, similar_shapes
 
 SIZES = (4, 6, 8, 12)
 
@@ -52,3 +52,20 @@ def test_names_say_what_is_fitted():
     names = {form.name for form in forms_for(SIZES, "open", 1)}
     assert {"1/N + slowly varying 1/N^2", "1/N + 1/N^2 + varying 1/N^3", "1/N + exponential"} < names
     assert "1/N^(3/2) + varying 1/N^2" in {form.name for form in forms_for(SIZES, "periodic", 2)}
+    assert "1/N + 1/N^2 + varying 1/N^(5/4)" in names
+
+
+def test_clusters_of_one_shape_have_the_same_multiple_of_a_power():
+    """Squares L^2, the tilted ones 2 L^2, kagome rhombi 3 L^2, cubes; 10, 16 and 20 are tori of three shapes."""
+    for sizes, dimension in (((4, 16, 36), 2), ((8, 18, 32), 2), ((12, 27, 48), 2), ((8, 27, 64), 3)):
+        assert similar_shapes(sizes, dimension)
+    for sizes, dimension in (((10, 16, 20), 2), ((4, 6, 12), 2), ((8, 16, 27), 3)):
+        assert not similar_shapes(sizes, dimension)
+
+
+def test_smooth_laws_are_rare_for_clusters_of_different_shape():
+    def share(sizes):
+        forms = {form.kind: form.weight for form in forms_for(sizes, "periodic", 2)}
+        return forms["slow"] / forms["irregular"]
+
+    assert share((10, 16, 20)) < 0.5 * share((4, 16, 36))
