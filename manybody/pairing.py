@@ -166,7 +166,7 @@ def bounds_part(f: EnergyFunction, spin: float, rule: str, settings, classical: 
     rigorous = classical["classical_bound_method"] != "clusters_searched"
     if rigorous and (multiple := _multiple(f, upper)) is not None:
         factor, shift, slack = multiple
-        part["upper_symbol_energy"] = factor * classical["classical_energy_bound"] + shift - slack
+        part["upper_symbol_energy"] = float(factor * classical["classical_energy_bound"] + shift - slack)
         part["upper_symbol_certified"] = classical["classical_certified"]
     elif rigorous:
         proof = find_ground_state(upper, starts=8, extra_starts=starts).certificate
