@@ -39,18 +39,13 @@ COMPLETE_ROWS = {
     "F037": ("triangles", 5, complete(5)),
     "F039": ("triangles", 8, complete(8)),
 }
-SLOW = ("F011", "F012", "F023")
-
-
-def quick_and_slow(rows):
-    return [pytest.param(row, marks=pytest.mark.slow if row in SLOW else ()) for row in rows]
 
 
 def test_every_row_is_covered():
     assert {key for key in table() if key.startswith("F")} == {*STAR_ROWS, *CHAIN_ROWS, *COMPLETE_ROWS, "F040"}
 
 
-@pytest.mark.parametrize("identifier", quick_and_slow(STAR_ROWS))
+@pytest.mark.parametrize("identifier", STAR_ROWS)
 def test_star_bounds_of_anderson(identifier):
     # Anderson 1951, Phys. Rev. 83, 1260.
     row = reference(identifier)
@@ -62,7 +57,7 @@ def test_star_bounds_of_anderson(identifier):
     assert row.digits(bound.value / sites) > 11
 
 
-@pytest.mark.parametrize("identifier", quick_and_slow(CHAIN_ROWS))
+@pytest.mark.parametrize("identifier", CHAIN_ROWS)
 def test_chains_from_open_pieces(identifier):
     row, size = reference(identifier), CHAIN_ROWS[identifier]
     sites = size + 2
