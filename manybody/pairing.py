@@ -146,6 +146,7 @@ def bounds_part(f: EnergyFunction, spin: float, rule: str, settings, classical: 
 
     Raises UndefinedQuantization where the rule has no operator.
     """
+    from manybody.classical.clusters import norm_bound
     from manybody.classical.search import find_ground_state
     from manybody.quantum.bounds import cluster_bound
     from manybody.quantum.product_state import product_energy
@@ -175,7 +176,9 @@ def bounds_part(f: EnergyFunction, spin: float, rule: str, settings, classical: 
             part["upper_symbol_certified"] = proof.certified
     # Where the bound of f itself rests on searched clusters, that of a symbol with the same terms would, too.
     if "upper_symbol_energy" not in part:
-        messages.append("no rigorous bound of the upper symbol is known")
+        part["upper_symbol_energy"] = norm_bound(upper)
+        part["upper_symbol_certified"] = False
+        messages.append("the upper symbol is bounded by the norms of its terms only")
     product = product_energy(op, np.concatenate([coherent[None], starts]))
     part["product_energy"] = product.energy
     if not product.converged:

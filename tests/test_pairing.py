@@ -48,8 +48,7 @@ def test_ladder_of_random_models(seed, sites, spin, rule):
     slack = 1e-9 * (1 + abs(exact) + f.largest_coefficient)
     assert record["quantum_energy"] == pytest.approx(exact, abs=slack)
     assert record["cluster_bound"] <= exact + slack
-    if "upper_symbol_energy" in record:
-        assert record["upper_symbol_energy"] <= exact + slack
+    assert record["upper_symbol_energy"] <= exact + slack
     assert exact <= record["product_energy"] + slack
     assert record["product_energy"] <= record["coherent_energy"] + slack
     assert record["classical_energy_bound"] <= record["classical_energy"] + slack
@@ -154,6 +153,17 @@ def test_small_and_awkward_systems_are_finite(f):
     assert record["upper_symbol_energy"] <= record["quantum_energy"] * (1 + 1e-9) + 1e-300 or np.isclose(
         record["upper_symbol_energy"], record["quantum_energy"]
     )
+
+
+def test_an_upper_symbol_without_exact_clusters_is_bounded_all_the_same():
+    # three-site terms without symmetry: nothing minimizes them rigorously but their norms
+    z, x = {(0, 0, 1): 1.0}, {(1, 0, 0): 1.0, (0, 1, 0): 0.5}
+    f = product(4, [[0, 1, 2], [1, 2, 3]], [z, x, z]) + product(4, [[0, 1, 2, 3]], [x] * 4) + field(4, [0], [0, 0.3, 1])
+    record = solve(f, 1.0, "substitution")
+    assert record["classical_bound_method"] == "clusters_searched"
+    assert record["upper_symbol_energy"] <= record["quantum_energy"]
+    assert not record["upper_symbol_certified"]
+    assert "norms of its terms" in record["bounds_message"]
 
 
 def test_a_search_among_ties_cut_short_is_told(monkeypatch):

@@ -55,6 +55,21 @@ def cluster_sum(f: EnergyFunction, seed: int = 1, most: int | None = None) -> Cl
     return max(sums, key=lambda s: (s.rigorous, s.bound), default=None)
 
 
+def norm_bound(f: EnergyFunction) -> float:
+    """A weak lower bound that every function has: each term at minus its norm, since sum_q C_kq(n)^2 = 1. Rigorous,
+    rounding included.
+    """
+    scaled, exponent = f.rescaled()
+    norms = [
+        np.linalg.norm(group.coefficients.reshape(group.terms, -1), axis=1).sum()
+        for group in scaled.groups
+        if any(group.ranks)
+    ]
+    total = math.fsum(norms)
+    bound = scaled.mean - total - 2.0**-40 * (total + abs(scaled.mean))
+    return math.ldexp(bound, exponent) + f.constant - 2.0**-50 * abs(f.constant)
+
+
 def _coverings(f: EnergyFunction) -> list[tuple[str, list[tuple[int, ...]]]]:
     bonds = {tuple(term) for g in f.groups for term in np.sort(g.sites, axis=1).tolist()}
     # a bond inside a larger one, and single sites inside bonds, go with those

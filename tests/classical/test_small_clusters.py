@@ -6,7 +6,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from manybody.classical import small_clusters
-from manybody.classical.clusters import cluster_sum
+from manybody.classical.clusters import cluster_sum, norm_bound
 from manybody.classical.minimize import minimize
 from manybody.classical.small_clusters import can_be_bounded, lower_bound
 from manybody.classical.sphere_product import random_points
@@ -34,6 +34,18 @@ EXACT = {
     # every bond at 120 degrees
     "triangle": (exchange(3, TRIANGLE, 1.0) + biquadratic(3, TRIANGLE, 0.05), 3 * (-0.5 + 0.05 / 4)),
 }
+
+
+@settings(max_examples=15, deadline=None)
+@given(st.integers(0, 2**32 - 1))
+def test_norms_of_the_terms_bound_from_below(seed):
+    generator = np.random.default_rng(seed)
+    powers = [{(1, 0, 0): generator.normal(), (0, 0, 2): generator.normal()} for _ in range(3)]
+    f = product(3, [[0, 1, 2]], powers) + anisotropy(3, [1], [0, 0, 1], generator.normal()) + generator.normal()
+    assert norm_bound(f) <= minimize(f).energy
+    # one term alone at its own minimum, in any unit
+    for size in (1e-300, 1.0, 1e300):
+        assert norm_bound(field(1, [0], [0, 0.6 * size, 0.8 * size])) == pytest.approx(-size, rel=1e-11)
 
 
 @pytest.mark.parametrize("name", EXACT)
