@@ -385,8 +385,10 @@ def _cluster_dims(root):
 
 
 def _usable(root):
-    """Points with an energy and an error to fit: converged ones, and unconverged ones with the error they state."""
-    return np.isfinite(root["quantum_energy"]) & np.isfinite(root["quantum_energy_error"]) & (root["status"] <= 1)
+    """Points with an energy and an error to fit: converged ones, and unconverged ones with the error they state; none
+    that violates the ladder, since its error is wrong."""
+    usable = np.isfinite(root["quantum_energy"]) & np.isfinite(root["quantum_energy_error"]) & (root["status"] <= 1)
+    return usable & (root["ladder"] != 1) if "ladder" in root else usable
 
 
 def _coords(root, dims):

@@ -125,6 +125,21 @@ def test_failed_and_unconverged_points():
     assert float(fits["limit_gap_error"].sel(spin=1.5).item()) > 2 * float(fine["limit_gap_error"].item())
 
 
+def test_points_that_violate_the_ladder_are_not_fitted():
+    records = ring_records((4, 6, 8), (0.5, 1.0, 1.5))
+    whole = scaling.site_limits(records_to_tree(records, ATTRS))
+    for record in records:
+        if record["sites"] == 8 and record["spin"] == 1.0:
+            record["quantum_energy"] += 5.0
+            record["upper_symbol_energy"] = record["quantum_energy"] + 1.0
+    broken = records_to_tree(records, ATTRS)
+    assert (flag_words(broken["ladder"].sel(sites=8, spin=1.0)) == "violated").all()
+    rest = scaling.site_limits(broken)
+    xr.testing.assert_equal(rest["limit_energy"].sel(spin=0.5), whole["limit_energy"].sel(spin=0.5))
+    # two sizes are left
+    assert not np.isfinite(rest["limit_energy"].sel(spin=1.0)).any()
+
+
 def test_energies_without_an_error_are_not_fitted():
     records = ring_records((4, 6, 8), (0.5, 1.0), rules=("wick",))
     for record in records:
