@@ -93,7 +93,8 @@ def orthogonalize(basis, used, diagonal, before, overlaps):
 @compiled
 def lowest_of_tridiagonal(diagonal, beside):
     """Lowest eigenvalue of a small symmetric tridiagonal matrix by bisection (Givens 1954), its eigenvector from the
-    twisted factorization (Dhillon, Parlett 2004, Linear Algebra Appl. 387, 1; both from memory)."""
+    twisted factorization (Dhillon, Parlett 2004, Linear Algebra Appl. 387, 1; both from memory). Compiled code reaches
+    no tridiagonal solver of a library, and the dense one costs more here than a product with a small tensor."""
     n = diagonal.size
     low = diagonal[0]
     high = diagonal[0]
@@ -105,7 +106,7 @@ def lowest_of_tridiagonal(diagonal, beside):
     forward, backward = np.empty(n), np.empty(n)
     while True:
         middle = 0.5 * (low + high)
-        if middle <= low or middle >= high:
+        if not low < middle < high:  # also where numbers overflowed
             break
         pivot = 1.0
         below = False

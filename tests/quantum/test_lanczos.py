@@ -52,3 +52,10 @@ def test_lowest_state_of_a_tridiagonal_matrix(size):
         scale = np.abs(matrix).max()
         assert abs(value - np.linalg.eigvalsh(matrix)[0]) < 1e-14 * size * scale
         assert np.linalg.norm(matrix @ vector - value * vector) < 1e-13 * size * scale
+
+
+@pytest.mark.parametrize("wrong", [np.nan, np.inf, -np.inf])
+def test_numbers_that_overflowed_end_too(wrong):
+    for diagonal in ([1.0, wrong, 2.0], [wrong, 1.0, 2.0]):
+        value, vector = lanczos.lowest_of_tridiagonal(np.array(diagonal), np.array([0.5, wrong]))
+        assert not (np.isfinite(value) and np.isfinite(vector).all())
