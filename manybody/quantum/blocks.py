@@ -20,7 +20,27 @@ direction only.
 
 import numpy as np
 
-from manybody.quantum.compiled import compiled
+from manybody.quantum.compiled import compiled, inlined
+
+
+@inlined
+def copy(target, goal, goal_stride, origin, source, source_stride, rows, columns):
+    """Copy a block. Slices of whole rows let the compiler use the processor's vectors, which offsets that might be
+    negative forbid; a call would cost more than the copy."""
+    for x in range(rows):
+        u = origin[source + x * source_stride : source + x * source_stride + columns]
+        v = target[goal + x * goal_stride : goal + x * goal_stride + columns]
+        for y in range(columns):
+            v[y] = u[y]
+
+
+@inlined
+def copy_transposed(target, goal, goal_stride, origin, source, source_stride, rows, columns):
+    """Copy the transpose of a block of these rows and columns."""
+    for y in range(columns):
+        v = target[goal + y * goal_stride : goal + y * goal_stride + rows]
+        for x in range(rows):
+            v[x] = origin[np.uint64(source + x * source_stride + y)]
 
 
 @compiled
@@ -115,9 +135,7 @@ def to_ket(environment, charges, dims, delta, skip, result):
             if j >= 0:
                 source = bra_start[j] + bra_row[a, j] * dims[j]
                 target = ket_start[k] + ket_row[a, k] * dims[k]
-                for x in range(dims[j]):
-                    for y in range(dims[k]):
-                        result[target + x * dims[k] + y] = environment[source + y * dims[j] + x]
+                copy_transposed(result, target, dims[k], environment, source, dims[j], dims[k], dims[j])
 
 
 @compiled
@@ -132,9 +150,7 @@ def mirror_tensor(tensor, left, left_dims, right, right_dims, local, total):
             if j >= 0:
                 source = start[i] + column[i, s]
                 goal = other_start[j] + other_column[j, s]
-                for x in range(left_dims[i]):
-                    for y in range(right_dims[j]):
-                        result[goal + y * other_width[j] + x] = tensor[source + x * width[i] + y]
+                copy_transposed(result, goal, other_width[j], tensor, source, width[i], left_dims[i], right_dims[j])
     return result
 
 
@@ -157,9 +173,7 @@ def gather_into(result, tensor, left, left_dims, right, right_dims, local):
             if j >= 0:
                 source = start[i] + column[i, s]
                 goal = first[j] + row[i, s] * right_dims[j]
-                for x in range(left_dims[i]):
-                    for y in range(right_dims[j]):
-                        result[goal + x * right_dims[j] + y] = tensor[source + x * width[i] + y]
+                copy(result, goal, right_dims[j], tensor, source, width[i], left_dims[i], right_dims[j])
 
 
 @compiled
@@ -175,9 +189,7 @@ def scatter_left(grouped, left, left_dims, right, right_dims, local):
             if j >= 0:
                 goal = start[i] + column[i, s]
                 source = first[j] + row[i, s] * right_dims[j]
-                for x in range(left_dims[i]):
-                    for y in range(right_dims[j]):
-                        result[goal + x * width[i] + y] = grouped[source + x * right_dims[j] + y]
+                copy(result, goal, width[i], grouped, source, right_dims[j], left_dims[i], right_dims[j])
     return result
 
 
@@ -279,11 +291,8 @@ def _regroup(source, middle, left, left_dims, right, right_dims, first_local, se
                     continue
                 pair = start[i] + column[i, s * second_local.size + t]
                 group = first[m] + row[i, s] * mid_width[m] + mid_column[m, t]
-                for x in range(left_dims[i]):
-                    if joining:
-                        for y in range(right_dims[j]):
-                            result[pair + x * width[i] + y] = source[group + x * mid_width[m] + y]
-                    else:
-                        for y in range(right_dims[j]):
-                            result[group + x * mid_width[m] + y] = source[pair + x * width[i] + y]
+                if joining:
+                    copy(result, pair, width[i], source, group, mid_width[m], left_dims[i], right_dims[j])
+                else:
+                    copy(result, group, mid_width[m], source, pair, width[i], left_dims[i], right_dims[j])
     return result

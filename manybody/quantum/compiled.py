@@ -8,6 +8,7 @@ import numpy as np
 from numba.extending import overload
 
 compiled = numba.njit(cache=True, nogil=True, error_model="numpy")
+inlined = numba.njit(inline="always", nogil=True, error_model="numpy")
 
 
 def conjugate(x):

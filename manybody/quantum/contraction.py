@@ -29,8 +29,9 @@ def plan(left_bond, right_bond, local, operator, end, skip, bra_bond):
     bond itself except where new charges are probed (then `end` must be -1).
 
     Returns first (n, 8): rows, inner, columns, offsets in L, A, T of the product of every left charge and its first and
-    last move; moves (n, 7): flags (sum of FROM_T, TO_O, ASSIGN), offset and stride of the source, in A or in the T of
-    this charge, and of the target, in U or in the result by left, rows, columns; factors (n,); second (n, 6): rows,
+    last move; moves (n, 8): flags (sum of FROM_T, TO_O, ASSIGN), offset and stride of the source, in A or in the T of
+    this charge, and of the target, in U or in the result by left, rows, columns, place in the factors; factors (n,):
+    one for a block that goes to U, one for every column of those that go to the result; second (n, 6): rows,
     inner, columns, offsets in U, R, O; back (n, 6): offset and stride in O, the same in the result, rows, columns;
     groups (n, 4): rows, columns, offset in U and in O per bra charge; sizes (5,): elements of A, T, U, O and of the
     largest T of one charge; holes (n, 4): offset, stride, rows, columns of the blocks of U that no move reaches.
@@ -61,15 +62,24 @@ def plan(left_bond, right_bond, local, operator, end, skip, bra_bond):
         u_size += u_height[j] * columns
         o_size += u_height[j] * bra_dims[j]
 
-    moves = np.empty((weights.size * left.size, 7), np.int64)
-    factors = np.empty(weights.size * left.size, weights.dtype)
+    reached = np.full((left.size, local.size), -1, np.int64)
+    for i in range(left.size):
+        for s in range(local.size):
+            reached[i, s] = find(bra_table, bra_low, left[i] + local[s])
+    finishing = 0
+    for entry in range(weights.size):
+        finishing += entries[entry, 1] == end
+    moves = np.empty((weights.size * left.size, 8), np.int64)
+    factors = np.empty((weights.size - finishing) * left.size + finishing * right_dims.sum(), weights.dtype)
     written = np.zeros((delta_right.size, left.size, local.size), np.bool_)
     first = np.empty((left.size, 8), np.int64)
     t_size = 0
     t_largest = 0
     count = 0
+    place = 0
     for i in range(left.size):
         begun = count
+        last_bra, last_source, last_goal = -1, -1, -1
         for entry in range(weights.size):
             a, b, out, into = entries[entry, 0], entries[entry, 1], entries[entry, 2], entries[entry, 3]
             j = target[i, into]
@@ -78,30 +88,45 @@ def plan(left_bond, right_bond, local, operator, end, skip, bra_bond):
             k = i if a == start else bra_of[a, i]
             if k < 0:
                 continue
-            jb = find(bra_table, bra_low, left[k] + local[out])
+            jb = reached[k, out]
             if jb < 0:
                 continue
-            flags = 0
+            columns = right_dims[j]
             if a == start:
+                flags = 0
                 source = a_start[i] + column[i, into]
             else:
-                flags += FROM_T
+                flags = FROM_T
                 source = l_row[a, i] * width[i] + column[i, into]
             if b == end:
+                # A letter that finishes an operator moves one local state after the other to the same rows: such
+                # neighbours are copied together.
                 flags += TO_O
                 goal = a_start[k] + column[k, out]
                 goal_stride = width[k]
+                first_factor = place
+                place += columns
+                factors[first_factor:place] = weights[entry]
+                if k == last_bra and source == last_source and goal == last_goal:
+                    moves[count - 1, 6] += columns
+                    last_source += columns
+                    last_goal += columns
+                    continue
+                last_bra, last_source, last_goal = k, source + columns, goal + columns
             else:
                 goal = groups[jb, 2] + u_row[k, out] * groups[jb, 1] + u_column[b, jb]
                 goal_stride = groups[jb, 1]
                 if not written[b, k, out]:
                     flags += ASSIGN
                     written[b, k, out] = True
+                first_factor = place
+                factors[place] = weights[entry]
+                place += 1
+                last_bra = -1
             # One by one: assigning a tuple to a row costs several times as much.
             move = moves[count]
-            move[0], move[1], move[2] = flags, source, width[i]
-            move[3], move[4], move[5], move[6] = goal, goal_stride, left_dims[k], right_dims[j]
-            factors[count] = weights[entry]
+            move[0], move[1], move[2], move[3] = flags, source, width[i], goal
+            move[4], move[5], move[6], move[7] = goal_stride, left_dims[k], columns, first_factor
             count += 1
         first[i] = (l_height[i], left_dims[i], width[i], l_start[i], a_start[i], t_size, begun, count)
         t_size += l_height[i] * width[i]
@@ -111,7 +136,7 @@ def plan(left_bond, right_bond, local, operator, end, skip, bra_bond):
     used = 0
     for k in range(left.size):
         for s in range(local.size):
-            j = find(bra_table, bra_low, left[k] + local[s])
+            j = reached[k, s]
             for b in range(delta_right.size):
                 if j >= 0 and u_column[b, j] >= 0 and not written[b, k, s]:
                     columns = right_dims[find(ket_table, ket_low, bra[j] - delta_right[b])]
@@ -130,7 +155,7 @@ def plan(left_bond, right_bond, local, operator, end, skip, bra_bond):
     used = 0
     for i in range(left.size):
         for s in range(local.size):
-            j = find(bra_table, bra_low, left[i] + local[s])
+            j = reached[i, s]
             if j >= 0 and target[i, s] >= 0:
                 source = groups[j, 3] + u_row[i, s] * bra_dims[j]
                 piece = back[used]
@@ -138,7 +163,7 @@ def plan(left_bond, right_bond, local, operator, end, skip, bra_bond):
                 piece[3], piece[4], piece[5] = width[i], left_dims[i], bra_dims[j]
                 used += 1
     sizes = np.array([a_size, t_size, u_size, o_size, t_largest])
-    return first, moves[:count], factors[:count], second, back[:used], groups, sizes, holes
+    return first, moves[:count], factors[:place], second, back[:used], groups, sizes, holes
 
 
 @compiled
@@ -198,20 +223,27 @@ def half(tensor, result, left, steps, buffers):
     for i in range(first.shape[0]):
         _product(tensor, left, part, first[i], 0)
         for index in range(first[i, 6], first[i, 7]):
-            flags, source, source_stride, goal, goal_stride, rows, columns = moves[index]
+            flags, source, source_stride, goal, goal_stride, rows, columns, place = moves[index]
             origin = part if flags & FROM_T else tensor
-            target = result if flags & TO_O else stacked
-            factor = factors[index]
+            if flags & TO_O:
+                scales = factors[place : place + columns]
+                for x in range(rows):
+                    u = origin[source + x * source_stride : source + x * source_stride + columns]
+                    v = result[goal + x * goal_stride : goal + x * goal_stride + columns]
+                    for y in range(columns):
+                        v[y] += scales[y] * u[y]
+                continue
+            factor = factors[place]
             if flags & ASSIGN:
                 for x in range(rows):
                     u = origin[source + x * source_stride : source + x * source_stride + columns]
-                    v = target[goal + x * goal_stride : goal + x * goal_stride + columns]
+                    v = stacked[goal + x * goal_stride : goal + x * goal_stride + columns]
                     for y in range(columns):
                         v[y] = factor * u[y]
             else:
                 for x in range(rows):
                     u = origin[source + x * source_stride : source + x * source_stride + columns]
-                    v = target[goal + x * goal_stride : goal + x * goal_stride + columns]
+                    v = stacked[goal + x * goal_stride : goal + x * goal_stride + columns]
                     for y in range(columns):
                         v[y] += factor * u[y]
 

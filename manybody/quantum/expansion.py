@@ -6,71 +6,82 @@ over its left index: no object of the cost of a two-site step appears. Controlle
 citations from memory.
 """
 
-import math
-
 import numpy as np
 
 from manybody.quantum import blocks
 from manybody.quantum.chain import Bond, Chain
 from manybody.quantum.compiled import compiled, conjugate
+from manybody.quantum.contraction import environment
+from manybody.quantum.eigenproblem import eigenvectors
 from manybody.quantum.split import orthonormal_columns
-from manybody.quantum.variance import residual_halves
+from manybody.quantum.variance import halves, two_site_residual
 
 NEGLIGIBLE = 1e-14
 """Share of the residual's squared norm, relative to the operator's scale, below which a direction is rounding."""
 
 
-def expand(chain: Chain, site: int, fraction: float, limit: int, rng: np.random.Generator) -> None:
+def expand(chain: Chain, site: int, fraction: float, limit: int, seed: int) -> None:
     """Add about `fraction` of its dimension (at least 4 states) to the bond after the centre, at most up to `limit`.
-    The state itself is unchanged: the centre gets zeros."""
-    present = chain.bonds[site + 1].dimension
-    wanted = min(max(4, math.ceil(fraction * present)), limit - present)
-    if wanted <= 0:
-        return
-    near, far, own, groups, turned_groups, dims, reach = residual_halves(chain, site)
-    probes, size = sampling(fraction, groups[:, 0], turned_groups[:, 0], dims)
-    noise = (rng.random(size) - 0.5).astype(chain.dtype, copy=False)
-    found, added = directions(near, far, own, groups, turned_groups, dims, probes, noise, wanted, NEGLIGIBLE)
-    if added.any():
-        left, after, local = chain.bonds[site], chain.bonds[site + 2], chain.local[site : site + 2]
-        centre, turned, charges, larger = with_directions(
-            chain.tensor(site), own, found, left.pair, after.mirrored(chain.total).pair, (reach, dims), added,
-            *local, chain.total,
-        )  # fmt: skip
-        chain.bonds[site + 1] = Bond(charges, larger)
+    The state itself is unchanged: the centre gets zeros. seed: of the random vectors, any integer."""
+    if limit > chain.bonds[site + 1].dimension:
+        residual = two_site_residual(chain, site)
+        chain.right[site + 1] = None  # of no use to the residual, and the new one should not lie beside it
+        centre, turned, charges, dims, environment, needed = enlarge(residual, fraction, limit, seed % 2**63)
+        chain.scratch.enlarge(needed)
+        chain.bonds[site + 1] = Bond(charges, dims)
         chain.put(site, centre)
         chain.tensors[site + 1] = turned
         chain.turned[site + 1] = True
-        chain.right[site + 1] = None
-    if chain.right[site + 1] is None:
+        chain.right[site + 1] = environment
+    elif chain.right[site + 1] is None:
         chain.retreat(site + 1)
 
 
 @compiled
-def sampling(fraction, rows, turned_rows, dims):
-    """Random vectors per charge and how many random numbers they hold."""
-    probes = np.empty(dims.size, np.int64)
-    size = 0
-    for g in range(dims.size):
-        wanted = int(np.ceil(1.2 * fraction * dims[g])) + 2
-        probes[g] = max(min(wanted, rows[g], turned_rows[g] - dims[g]), 0)
-        size += probes[g] * rows[g]
-    return probes, size
+def enlarge(residual, fraction, limit, seed):
+    """The centre with zeros and the next tensor, as seen from the far end, with its new states; charges and dims of the
+    bond between them and its right environment; scratch elements needed. residual: arguments of variance.halves."""
+    tensor, _, left, _, local, _, _, after, turned, turned_local, turned_operator, reach, total, scratch = residual
+    charges, dims = reach
+    near, far, own, groups, turned_groups, needed = halves(*residual)
+    probes = samples(fraction, groups[:, 0], turned_groups[:, 0], dims)
+    numbers = noise(seed, (probes * groups[:, 0]).sum(), tensor)
+    present = dims.sum()
+    wanted = min(max(4, int(np.ceil(fraction * present))), limit - present)
+    found, added = directions(near, far, own, groups, turned_groups, dims, probes, numbers, wanted, NEGLIGIBLE)
+    stay = dims + added > 0
+    bond = charges[stay], (dims + added)[stay]
+    turned_bond = total - bond[0], bond[1]
+    centre = padded(tensor, left, reach, local, bond[0], bond[1])
+    further = joined(own, found, turned, total - charges, dims, added, turned_bond, turned_local)
+    result, more = environment(further, after, turned, turned_bond, turned_local, turned_operator, scratch)
+    return centre, further, bond[0], bond[1], result, max(needed, more)
 
 
 @compiled
-def with_directions(tensor, own, found, left, turned, reach, added, local, turned_local, total):
-    """The centre with zeros and the next tensor, as seen from the far end, with its new states; charges and dims of the
-    bond between them."""
-    charges, dims = reach
-    larger = dims + added
-    stay = larger > 0
-    bond, bond_dims = charges[stay], larger[stay]
-    centre = padded(tensor, left, reach, local, bond, bond_dims)
-    _, turned_rows = blocks.by_right(turned[0], turned[1], total - charges, turned_local)
-    further = append(own, found, turned_rows, dims, added)
-    further = blocks.scatter_left(further, turned[0], turned[1], total - bond, bond_dims, turned_local)
-    return centre, further, bond, bond_dims
+def samples(fraction, rows, turned_rows, dims):
+    """How many random vectors per charge."""
+    result = np.empty(dims.size, np.int64)
+    for g in range(dims.size):
+        wanted = int(np.ceil(1.2 * fraction * dims[g])) + 2
+        result[g] = max(min(wanted, rows[g], turned_rows[g] - dims[g]), 0)
+    return result
+
+
+@compiled
+def noise(seed, size, like):
+    """Random numbers between -1/2 and 1/2, in the number type of `like` (SplitMix64: Steele, Lea, Flood 2014, from
+    memory)."""
+    result = np.empty(size, like.dtype)
+    state = np.uint64(seed)
+    for index in range(size):
+        state += np.uint64(0x9E3779B97F4A7C15)
+        z = state
+        z = (z ^ (z >> np.uint64(30))) * np.uint64(0xBF58476D1CE4E5B9)
+        z = (z ^ (z >> np.uint64(27))) * np.uint64(0x94D049BB133111EB)
+        z ^= z >> np.uint64(31)
+        result[index] = (z >> np.uint64(11)) * 2.0**-53 - 0.5
+    return result
 
 
 @compiled
@@ -84,9 +95,7 @@ def padded(tensor, left, right, local, bond, bond_dims):
             if target[i, s] >= 0:
                 columns = right[1][target[i, s]]
                 source, goal = start[i] + column[i, s], new_start[i] + new_column[i, s]
-                for x in range(left[1][i]):
-                    for y in range(columns):
-                        result[goal + x * new_width[i] + y] = tensor[source + x * width[i] + y]
+                blocks.copy(result, goal, new_width[i], tensor, source, width[i], left[1][i], columns)
     return result
 
 
@@ -116,10 +125,10 @@ def directions(near, far, own, groups, turned_groups, dims, probes, noise, wante
             if d > 0:
                 b = own[o_place : o_place + r * d].reshape(r, d)
                 z -= np.dot(b, np.dot(conjugate(b).T, z))
-            gram = np.dot(conjugate(z).T, z)
-            values, states = np.linalg.eigh(gram)
-            z[:] = np.dot(z, np.ascontiguousarray(states))
-            weights[w_place : w_place + k] = values / k
+            states = np.empty((k, k), z.dtype)
+            eigenvectors(np.dot(conjugate(z).T, z), weights[w_place : w_place + k], states)
+            z[:] = np.dot(z, states.T)
+            weights[w_place : w_place + k] /= k
         n_place += k * m
         o_place += r * d
         s_place += r * k
@@ -158,16 +167,20 @@ def directions(near, far, own, groups, turned_groups, dims, probes, noise, wante
 
 
 @compiled
-def append(old, new, rows, dims, added):
-    """Columns `new` after columns `old`, group by group."""
-    result = np.empty(old.size + new.size, old.dtype)
-    o, n, goal = 0, 0, 0
-    for g in range(rows.size):
-        r, d, a = rows[g], dims[g], added[g]
-        for x in range(r):
-            result[goal : goal + d] = old[o + x * d : o + (x + 1) * d]
-            result[goal + d : goal + d + a] = new[n + x * a : n + (x + 1) * a]
-            goal += d + a
-        o += r * d
-        n += r * a
+def joined(own, found, left, charges, dims, added, bond, local):
+    """Site tensor by left from two by right, with dims and added states of each charge; charges without any are not on
+    its right bond."""
+    row, height = blocks.by_right(left[0], left[1], charges, local)
+    first, further = blocks.offsets(height * dims), blocks.offsets(height * added)
+    target, column, width, start, size = blocks.by_left(left[0], left[1], bond[0], bond[1], local)
+    place = np.nonzero(dims + added)[0]
+    result = np.empty(size, own.dtype)
+    for i in range(left[0].size):
+        for s in range(local.size):
+            if target[i, s] >= 0:
+                j = place[target[i, s]]
+                goal = start[i] + column[i, s]
+                d, a, rows = dims[j], added[j], left[1][i]
+                blocks.copy(result, goal, width[i], own, first[j] + row[i, s] * d, d, rows, d)
+                blocks.copy(result, goal + d, width[i], found, further[j] + row[i, s] * a, a, rows, a)
     return result

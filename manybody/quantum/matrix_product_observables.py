@@ -129,7 +129,7 @@ def _split(tensor, left: Bond, right: Bond, local):
     matrices = blocks.gather_right(tensor, *left.pair, *right.pair, local)
     _, height = blocks.by_right(*left.pair, right.charges, local)
     shapes = np.stack((height, right.dims), axis=1)
-    weights, _ = split.spectra(matrices, shapes)
+    weights = split.spectra(matrices, shapes, 0, 0.0)[0]
     isometry, carry, kept = split.orthonormal(matrices, shapes)
     return isometry, carry, weights / weights.sum(), kept
 

@@ -52,7 +52,7 @@ class Run:
 
     chain: Chain
     limits: Limits
-    rng: np.random.Generator
+    seed: int
     report: Callable[[dict], None] | None = None
     stages: list[Stage] = field(default_factory=list)
     allowed: float = FIRST_ALLOWED
@@ -156,7 +156,9 @@ class Run:
                 energy, lost = two_site.step(chain, site, self.ceiling, self.allowed, self.vectors, tolerance)
             else:
                 ceiling = self.ceiling + max(4, int(FRACTION * self.ceiling))
-                expansion.expand(chain, site, FRACTION, ceiling, self.rng)
+                # Not a stream of numbers: a run that is taken up again meets the same ones.
+                seed = (self.seed + self.sweeps) * chain.length + site
+                expansion.expand(chain, site, FRACTION, ceiling, seed)
                 energy = one_site.solve(chain, site, self.vectors, tolerance)
                 lost = one_site.move(chain, site, self.ceiling, self.allowed)
             self.lost += lost

@@ -5,57 +5,18 @@ import numpy as np
 
 from manybody.quantum import blocks
 from manybody.quantum.compiled import compiled, conjugate
+from manybody.quantum.spectra import spectra
 
 
 @compiled
-def spectra(matrices, shapes):
-    """Squared singular values, ascending per group and one group after the other, and the eigenvectors behind them.
-
-    matrices: row-major matrices one after the other, shapes (n, 2). The Gram matrix of the smaller side is
-    diagonalized: weights below about 1e-16 of the largest are rounding.
-    """
-    total = 0
-    room = 0
-    for g in range(shapes.shape[0]):
-        side = min(shapes[g, 0], shapes[g, 1])
-        total += side
-        room += side * side
-    weights = np.empty(total)
-    vectors = np.empty(room, matrices.dtype)
-    first = 0
-    place = 0
-    goal = 0
-    for g in range(shapes.shape[0]):
-        m, n = shapes[g]
-        x = matrices[first : first + m * n].reshape(m, n)
-        side = min(m, n)
-        gram = np.empty((side, side), matrices.dtype)
-        if m <= n:
-            np.dot(x, conjugate(x).T, gram)
-        else:
-            np.dot(conjugate(x).T, x, gram)
-        if side == 1:
-            weights[place] = gram[0, 0].real
-            vectors[goal] = 1.0
-        else:
-            values, states = np.linalg.eigh(gram)
-            weights[place : place + side] = np.maximum(values, 0.0)
-            vectors[goal : goal + side * side] = np.ascontiguousarray(states).reshape(side * side)
-        first += m * n
-        place += side
-        goal += side * side
-    return weights, vectors
-
-
-@compiled
-def choose(weights, shapes, limit, allowed):
+def choose(weights, ranks, missing, limit, allowed):
     """How many states to keep per group, and the relative weight discarded: the smallest go first while at most `limit`
-    states stay or the discarded share stays below `allowed`. At least one stays; weights at rounding level never
-    stay."""
+    states stay or the discarded share stays below `allowed`. At least one stays; weights at rounding level never stay.
+    For the first three arguments see spectra."""
     order = np.argsort(weights)
-    total = weights.sum()
+    total = weights.sum() + missing
     least = 1e-16 * total
-    discarded = 0.0
+    discarded = missing
     dropped = 0
     while dropped < weights.size - 1:
         weight = weights[order[dropped]]
@@ -63,19 +24,18 @@ def choose(weights, shapes, limit, allowed):
             break
         discarded += weight
         dropped += 1
-    kept = np.zeros(shapes.shape[0], np.int64)
+    kept = np.zeros(ranks.size, np.int64)
     cut = np.ones(weights.size, np.bool_)
     cut[order[:dropped]] = False
     place = 0
-    for g in range(shapes.shape[0]):
-        side = min(shapes[g, 0], shapes[g, 1])
-        kept[g] = cut[place : place + side].sum()
-        place += side
+    for g in range(ranks.size):
+        kept[g] = cut[place : place + ranks[g]].sum()
+        place += ranks[g]
     return kept, discarded / total
 
 
 @compiled
-def parts(matrices, shapes, vectors, kept):
+def parts(matrices, shapes, vectors, ranks, kept):
     """Orthonormal parts Q (rows x kept) and carries C (kept x columns), group after group, matrix = Q C up to what was
     cut."""
     q_size = 0
@@ -91,14 +51,17 @@ def parts(matrices, shapes, vectors, kept):
     c_place = 0
     for g in range(shapes.shape[0]):
         m, n = shapes[g]
-        side = min(m, n)
+        side, rank = min(m, n), ranks[g]
         k = kept[g]
         if k > 0:
             x = matrices[first : first + m * n].reshape(m, n)
-            states = vectors[goal : goal + side * side].reshape(side, side)
+            states = vectors[goal : goal + rank * side].reshape(rank, side)
             chosen = np.empty((side, k), matrices.dtype)
             for c in range(k):
-                chosen[:, c] = states[:, side - 1 - c]
+                chosen[:, c] = states[rank - 1 - c]
+            if rank < side:
+                raw = chosen.copy()
+                orthonormal_columns(raw, chosen)
             q_out = isometry[q_place : q_place + m * k].reshape(m, k)
             c_out = carry[c_place : c_place + k * n].reshape(k, n)
             if m <= n:
@@ -108,7 +71,7 @@ def parts(matrices, shapes, vectors, kept):
                 r = orthonormal_columns(np.dot(x, chosen), q_out)
                 np.dot(r, conjugate(chosen).T, c_out)
         first += m * n
-        goal += side * side
+        goal += side * rank
         q_place += m * k
         c_place += k * n
     return isometry, carry
@@ -123,25 +86,43 @@ def orthonormal_columns(x, q):
     where the smallest columns are too far off.
     """
     k = x.shape[1]
-    lengths = np.zeros(k)
-    for row in range(x.shape[0]):
-        for c in range(k):
-            lengths[c] += abs(x[row, c]) ** 2
-    lengths = np.sqrt(lengths)
+    overlap = np.dot(conjugate(x).T, x)
+    lengths = np.empty(k)
+    for c in range(k):
+        lengths[c] = np.sqrt(overlap[c, c].real)
     if lengths.min() > 0:
-        unit = x / lengths
-        overlap = np.dot(conjugate(unit).T, unit)
         off = 0.0
         for c in range(k):
             for d in range(k):
+                overlap[c, d] /= lengths[c] * lengths[d]
                 off += abs(overlap[c, d] - (c == d)) ** 2
         if off < 0.01:
             factor = np.linalg.cholesky(overlap)
-            np.dot(unit, conjugate(np.ascontiguousarray(np.linalg.inv(factor))).T, q)
+            inverse = inverse_of_lower(factor)
+            for c in range(k):
+                for d in range(c + 1):
+                    inverse[c, d] /= lengths[d]
+            np.dot(x, conjugate(inverse).T, q)
             return np.ascontiguousarray(conjugate(factor).T) * lengths
     full, r = np.linalg.qr(x)
     q[:] = full
     return np.ascontiguousarray(r)
+
+
+@compiled
+def inverse_of_lower(factor):
+    """Inverse of a lower triangular matrix, row by row: a few rows cost less than a call of a library."""
+    k = factor.shape[0]
+    inverse = np.zeros_like(factor)
+    for i in range(k):
+        for j in range(i):
+            share = factor[i, j]
+            for x in range(j + 1):
+                inverse[i, x] -= share * inverse[j, x]
+        for x in range(i):
+            inverse[i, x] /= factor[i, i]
+        inverse[i, i] = 1 / factor[i, i]
+    return inverse
 
 
 @compiled
@@ -203,9 +184,9 @@ def cut(tensor, left, left_dims, right, right_dims, local, limit, allowed):
     matrices = blocks.gather_right(tensor, left, left_dims, right, right_dims, local)
     _, height = blocks.by_right(left, left_dims, right, local)
     shapes = np.stack((height, right_dims), axis=1)
-    weights, states = spectra(matrices, shapes)
-    kept, discarded = choose(weights, shapes, limit, allowed)
-    isometry, carry = parts(matrices, shapes, states, kept)
+    weights, states, ranks, missing = spectra(matrices, shapes, 0, 0.0)
+    kept, discarded = choose(weights, ranks, missing, limit, allowed)
+    isometry, carry = parts(matrices, shapes, states, ranks, kept)
     return isometry, carry, kept, discarded
 
 
@@ -216,9 +197,9 @@ def cut_pair(pair, left, left_dims, right, right_dims, first_local, second_local
     middle = blocks.reachable(left, right, first_local, second_local)
     matrices = blocks.cut_pair(pair, middle, left, left_dims, right, right_dims, first_local, second_local)
     shapes = blocks.pair_shapes(middle, left, left_dims, right, right_dims, first_local, second_local)
-    weights, states = spectra(matrices, shapes)
-    kept, discarded = choose(weights, shapes, limit, allowed)
-    isometry, carry = parts(matrices, shapes, states, kept)
+    weights, states, ranks, missing = spectra(matrices, shapes, limit, allowed)
+    kept, discarded = choose(weights, ranks, missing, limit, allowed)
+    isometry, carry = parts(matrices, shapes, states, ranks, kept)
     stay = kept > 0
     charges, dims = middle[stay], kept[stay]
     first = blocks.scatter_left(isometry, left, left_dims, charges, dims, first_local)

@@ -66,8 +66,9 @@ def predict(op: SpinOperator, settings: QuantumSettings | None = None) -> memory
 
 
 def products_per_step(problem: Problem) -> int:
-    """Lanczos products of one step: the spread of energies over their spacing grows with the spin."""
-    return int(np.clip(3 + round(float(problem.spins.max())), 3, 12))
+    """Lanczos products of one step: the spread of energies over their spacing grows with the spin, but more than six
+    never paid, nor more than three where sites are solved in pairs."""
+    return 3 if memory.pairs(problem) else int(np.clip(3 + round(float(problem.spins.max())), 3, 6))
 
 
 class _Solver:
@@ -128,7 +129,7 @@ class _Solver:
         )
 
     def _run(self, chain: Chain) -> Run:
-        return Run(chain, self.limits, self.rng, pause=self.saved.pause)
+        return Run(chain, self.limits, self.settings.seed, pause=self.saved.pause)
 
     def _kept(self, name: str, run: Run) -> Run:
         """The run, which from now on is saved under a name and reports as what it is."""

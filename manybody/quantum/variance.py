@@ -58,14 +58,14 @@ def _image(tensor, before, after, left, right, local, operator):
 
 def leaving(chain: Chain, site: int) -> float:
     """Squared norm of the part of H psi outside the right space of the bond after `site`, where the centre is."""
-    near, far, own, groups, turned_groups, dims, _ = residual_halves(chain, site)
-    return float(_outside(near, far, own, groups, turned_groups, dims))
+    residual = two_site_residual(chain, site)
+    near, far, own, groups, turned_groups, needed = halves(*residual)
+    chain.scratch.enlarge(needed)
+    return float(_outside(near, far, own, groups, turned_groups, residual[11][1]))
 
 
-def residual_halves(chain: Chain, site: int):
-    """The two-site residual on (site, site + 1) in two halves, near and far, to be multiplied per middle charge; the
-    right space `own` by right as seen from the far end; (rows, columns, offset) of both; dims of the bond over all
-    charges the two sites reach; these."""
+def two_site_residual(chain: Chain, site: int) -> tuple:
+    """Arguments of `halves` for the sites (site, site + 1) with the centre on the first."""
     left, bond, after = chain.bonds[site : site + 3]
     local = chain.local[site : site + 2]
     reach, dims, complete = blocks.reach(*left.pair, *bond.pair, *after.pair, *local)
@@ -73,15 +73,11 @@ def residual_halves(chain: Chain, site: int):
         chain.prune(site + 1, reach)
         bond = chain.bonds[site + 1]
     here, there = chain.operators[site], chain.other_operators[chain.length - 2 - site]
-    # An operator finished on the left leaves the right space alone; the channel of those not yet begun completes the
-    # residual.
-    near, far, own, groups, turned_groups, needed = halves(
+    return (
         chain.tensor(site), chain.left[site], left.pair, bond.pair, local[0], chain.arrays(here),
         chain.turned_tensor(site + 1), chain.right[site + 2], after.mirrored(chain.total).pair, local[1],
         chain.arrays(there), (reach, dims), chain.total, chain.scratch.array,
     )  # fmt: skip
-    chain.scratch.enlarge(needed)
-    return near, far, own, groups, turned_groups, dims, reach
 
 
 @compiled
@@ -89,8 +85,14 @@ def halves(
     tensor, before, left, bond, local, operator, turned_tensor, after, turned, turned_local, turned_operator, reach,
     total, scratch,
 ):  # fmt: skip
-    """near, far, own and the groups of both as in residual_halves, scratch elements needed; near and far lie in the
-    scratch memory. turned: the bond after both sites as seen from the far end; reach: charges and dims there."""
+    """The two-site residual in two halves, near and far, to be multiplied per middle charge; the right space `own` by
+    right as seen from the far end; (rows, columns, offset) of near and far; scratch elements needed. near and far lie
+    in the scratch memory. turned: the bond after both sites as seen from the far end; reach: the charges between them
+    that both sites reach, and the states present.
+
+    An operator finished on the left leaves the right space alone; the channel of those not yet begun completes the
+    residual.
+    """
     turned_bond, turned_reach = (total - bond[0], bond[1]), (total - reach[0], reach[1])
     steps = contraction.plan(left, bond, local, operator, -1, operator[3], reach)
     turned_steps = contraction.plan(

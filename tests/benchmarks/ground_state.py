@@ -1,9 +1,10 @@
 """Time to a wanted relative energy error against quimb's two-site sweeps, one BLAS thread each, alternately in one
 process.
 
-    python tests/benchmarks/ground_state.py [case ...]      half one two five cylinder; one line a case, ending with
-    `ratio R` python tests/benchmarks/ground_state.py --profile       share of time in matrix products, GFLOP/s, other
-    work per bond
+    python tests/benchmarks/ground_state.py [case ...]
+        half one two five cylinder; one line a case, ending with `ratio R`
+    python tests/benchmarks/ground_state.py --profile [case ...]
+        share of time in matrix products, GFLOP/s, other work per bond
 
 Both sides report the energy after every half sweep (ours) or sweep (quimb); the clock stops when it first is within the
 wanted relative error of the reference. Ours runs with default settings before and after quimb and counts with the mean;
@@ -255,7 +256,8 @@ class Products:
 
 
 def cut_shapes(shapes, kept) -> list[tuple[int, int, int]]:
-    """Products (rows, inner, columns) of split.spectra and split.parts."""
+    """Products (rows, inner, columns) of spectra.spectra and split.parts, but for the small ones of reduced
+    matrices."""
     result = []
     for (m, n), k in zip(shapes.tolist(), kept.tolist(), strict=True):
         side = min(m, n)
@@ -274,9 +276,9 @@ def direction_shapes(groups, turned_groups, dims, probes, added) -> list[tuple[i
     return result
 
 
-def profile() -> None:
+def profile(names) -> None:
     """Share of matrix products in the steps of sweeps at the full bond dimension, and the other work of a step."""
-    from manybody.quantum import blocks, contraction, expansion, lanczos, split, variance
+    from manybody.quantum import blocks, contraction, expansion, lanczos, split
     from manybody.quantum.compiled import compiled
     from manybody.quantum.schedule import Run
 
@@ -309,16 +311,25 @@ def profile() -> None:
         second = np.stack([steps[5][:, 1], steps[5][:, 0], right[1]], axis=1)
         return np.concatenate([steps[0][:, :3], second]), 1
 
-    def halves(arguments, outcome):
-        _, _, left, bond, local, operator, _, _, turned, turned_local, turned_operator, reach, total, _ = arguments
+    def enlarge(arguments, outcome):
+        _, _, left, bond, local, operator, _, after, turned, turned_local, turned_operator, reach, total, _ = arguments[
+            0
+        ]
         near = contraction.plan(left, bond, local, operator, -1, operator[3], reach)
         turned_bond, turned_reach = (total - bond[0], bond[1]), (total - reach[0], reach[1])
         far = contraction.plan(turned, turned_bond, turned_local, turned_operator, -1, turned_operator[2], turned_reach)
-        return np.concatenate([near[0][:, :3], far[0][:, :3]]), 1
-
-    def directions(arguments, outcome):
-        _, _, _, groups, turned_groups, dims, probes, *_ = arguments
-        return direction_shapes(groups, turned_groups, dims, probes, outcome[1]), 1
+        charges, dims = reach
+        added = -dims
+        added[np.searchsorted(charges, outcome[2])] += outcome[3]
+        added[added < 0] = 0
+        probes = expansion.samples(arguments[1], near[5][:, 0], far[5][:, 0], dims)
+        new = (None, after, turned, (total - outcome[2], outcome[3]), turned_local, turned_operator, None)
+        return np.concatenate(
+            [
+                near[0][:, :3], far[0][:, :3], direction_shapes(near[5], far[5], dims, probes, added),
+                environment(new, None)[0],
+            ]
+        ), 1  # fmt: skip
 
     def cut(arguments, outcome):
         _, left, left_dims, right, right_dims, local, *_ = arguments
@@ -344,7 +355,7 @@ def profile() -> None:
         return np.stack([kept, right_dims, width], axis=1), 1
 
     shapes = {
-        lanczos: (lowest,), contraction: (environment,), variance: (halves,), expansion: (directions,),
+        lanczos: (lowest,), contraction: (environment,), expansion: (enlarge,),
         split: (cut, cut_pair, join_pair, pass_on),
     }  # fmt: skip
     real = [(module, f.__name__, getattr(module, f.__name__), f) for module, fs in shapes.items() for f in fs]
@@ -370,6 +381,8 @@ def profile() -> None:
     try:
         print(f"dgemm peak {dgemm_peak():.1f} GFLOP/s")
         for name, case in cases().items():
+            if names and name not in names:
+                continue
             for bond in (40, 80) if name in ("half", "one") else (40, 500):
                 full = bond
                 clock.seconds = clock.flops = clock.steps = 0.0
@@ -403,7 +416,7 @@ def main() -> int:
         raise SystemExit("the Bethe-ansatz solution misses its check value")
     warm_up(not (options.profile or options.reference))
     if options.profile:
-        profile()
+        profile(options.names)
         return 0
     for name, case in cases().items():
         if options.names and name not in options.names:

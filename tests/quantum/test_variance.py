@@ -81,19 +81,19 @@ def test_variance_is_a_lower_estimate_for_longer_range():
 
 def test_expansion_leaves_the_state_and_helps_the_energy():
     op = heisenberg(10, chain(10), 1.0)
-    problem, chain_, rng = started(op, 2, sweeps=2, bond=5)
+    problem, chain_, _ = started(op, 2, sweeps=2, bond=5)
     before = dense_state(problem, chain_)
-    problem, chain_, rng = started(op, 2, sweeps=2, bond=5)
+    problem, chain_, _ = started(op, 2, sweeps=2, bond=5)
     bond = chain_.bonds[1].dimension
-    expansion.expand(chain_, 0, 0.5, 100, rng)
+    expansion.expand(chain_, 0, 0.5, 100, 3)
     assert chain_.bonds[1].dimension >= bond
     after = dense_state(problem, chain_)
     assert abs(abs(np.vdot(before, after)) - 1) < 1e-12
     # One-site sweeps cannot leave the bonds they were given; with expansion they reach the ground state.
-    problem, chain_, rng = started(op, 2, sweeps=2, bond=5)
-    for _ in range(10):
+    problem, chain_, _ = started(op, 2, sweeps=2, bond=5)
+    for sweep in range(10):
         for site in range(chain_.length - 1):
-            expansion.expand(chain_, site, 0.5, 200, rng)
+            expansion.expand(chain_, site, 0.5, 200, 10 * sweep + site)
             energy = one_site.solve(chain_, site, 4, 1e-12)
             one_site.move(chain_, site, 150, 1e-14)
         chain_.mirror()
@@ -109,13 +109,12 @@ def test_a_neel_state_is_left_by_both_kinds_of_step():
         problem = prepare(op, up)
         chain_ = start_chain(problem, up, round(problem.spins.sum()), sharp=True)
         assert chain_.bond_dimension == 1
-        rng = np.random.default_rng(0)
-        for _ in range(12):
+        for sweep in range(12):
             for site in range(n - 1):
                 if pairs:
                     energy, _ = two_site.step(chain_, site, 60, 1e-12, 6, 1e-12)
                 else:
-                    expansion.expand(chain_, site, 0.5, 80, rng)
+                    expansion.expand(chain_, site, 0.5, 80, n * sweep + site)
                     energy = one_site.solve(chain_, site, 6, 1e-12)
                     one_site.move(chain_, site, 60, 1e-12)
             chain_.mirror()

@@ -1,0 +1,135 @@
+"""Weights and directions of many matrices at once, one per charge: eigenvalues of the Gram matrix of the smaller side.
+
+Where only the largest weights of all matrices will be kept, a Gram matrix G is first replaced by the product of a few
+columns, G = F^T conj(F) + E, by Cholesky's method with the largest remaining diagonal element of all matrices as the
+next pivot (Higham 1990, in Reliable Numerical Computation, 161, from memory). E is positive, so no weight changes by
+more than its trace, and what a cut discards exceeds the least possible by no more than that.
+"""
+
+import numpy as np
+
+from manybody.quantum.compiled import compiled, conjugate
+from manybody.quantum.eigenproblem import eigenvectors
+
+WORTHWHILE = 12
+"""Sides from which on the columns of a Gram matrix are reduced; smaller eigenproblems are not worth it."""
+MOST = 0.7
+"""Share of the columns that makes an eigenproblem of all of them the cheaper way."""
+MISSED = 0.1
+"""Trace of E over the weight that may be discarded, or over the trace left by as many pivots as states may stay."""
+
+
+@compiled
+def spectra(matrices, shapes, limit, allowed):
+    """Squared singular values (ascending per group and one group after the other, `ranks` of each), the vectors behind
+    them, ranks (n,), the weight missing from them.
+
+    matrices: row-major matrices one after the other, shapes (n, 2). vectors: per group one in each row, rank x side,
+    orthogonal only up to rounding over weight where rank < side = min(shape). All weights where allowed =
+    0; otherwise those that matter to split.choose with the same limit and share. Weights below about 1e-16 of the
+    largest are rounding.
+    """
+    count = shapes.shape[0]
+    sides = np.minimum(shapes[:, 0], shapes[:, 1])
+    grams = np.empty((sides * sides).sum(), matrices.dtype)
+    first, place = 0, 0
+    for g in range(count):
+        m, n = shapes[g]
+        side = sides[g]
+        x = matrices[first : first + m * n].reshape(m, n)
+        gram = grams[place : place + side * side].reshape(side, side)
+        if m <= n:
+            np.dot(x, conjugate(x).T, gram)
+        else:
+            np.dot(conjugate(x).T, x, gram)
+        first += m * n
+        place += side * side
+    if allowed > 0 and sides.max() >= WORTHWHILE:
+        ranks, missing, factors = columns(grams, sides, limit, allowed)
+    else:
+        ranks, missing, factors = sides.copy(), 0.0, grams
+    weights = np.empty(ranks.sum())
+    vectors = np.empty((sides * ranks).sum(), matrices.dtype)
+    place, first, goal = 0, 0, 0
+    for g in range(count):
+        side, rank = sides[g], ranks[g]
+        states = vectors[goal : goal + rank * side].reshape(rank, side)
+        found = weights[first : first + rank]
+        if 0 < rank == side:
+            eigenvectors(grams[place : place + side * side].reshape(side, side), found, states)
+        elif rank > 0:
+            factor = factors[place : place + rank * side].reshape(rank, side)
+            turn = np.empty((rank, rank), grams.dtype)
+            eigenvectors(np.dot(conjugate(factor), factor.T), found, turn)
+            np.dot(turn, factor, states)
+            for r in range(rank):
+                if found[r] > 0:
+                    states[r] /= np.sqrt(found[r])
+        found[:] = np.maximum(found, 0.0)
+        place += side * side
+        first += rank
+        goal += side * rank
+    return weights, vectors, ranks, missing
+
+
+@compiled
+def columns(grams, sides, limit, allowed):
+    """Ranks per group, trace of E over all groups, and the rows of F per group, side * side elements apart."""
+    count = sides.size
+    start = np.zeros(count, np.int64)
+    first = np.zeros(count, np.int64)
+    for g in range(1, count):
+        start[g] = start[g - 1] + sides[g - 1] ** 2
+        first[g] = first[g - 1] + sides[g - 1]
+    factors = np.empty_like(grams)
+    rest = np.empty(sides.sum())
+    pivot = np.zeros(count, np.int64)
+    largest = np.zeros(count)
+    ranks = np.zeros(count, np.int64)
+    total = 0.0
+    for g in range(count):
+        for x in range(sides[g]):
+            rest[first[g] + x] = grams[start[g] + x * (sides[g] + 1)].real
+            total += rest[first[g] + x]
+            if rest[first[g] + x] > largest[g]:
+                largest[g] = rest[first[g] + x]
+                pivot[g] = x
+    missing = total
+    enough = MISSED * allowed * total
+    states = 0
+    while missing > enough:
+        g = np.argmax(largest)
+        if largest[g] <= 1e-17 * total:
+            break
+        side, rank = sides[g], ranks[g]
+        own = rest[first[g] : first[g] + side]
+        states += 1
+        i = pivot[g]
+        factor = factors[start[g] : start[g] + side * side].reshape(side, side)
+        row = factor[rank]
+        row[:] = conjugate(grams[start[g] + i * side : start[g] + (i + 1) * side])
+        for r in range(rank):
+            share = np.conj(factor[r, i])
+            for x in range(side):
+                row[x] -= share * factor[r, x]
+        scale = 1 / np.sqrt(largest[g])
+        largest[g] = 0.0
+        for x in range(side):
+            row[x] *= scale
+            gone = row[x].real ** 2 + row[x].imag ** 2
+            own[x] -= gone
+            missing -= gone
+            if own[x] > largest[g]:
+                largest[g] = own[x]
+                pivot[g] = x
+        ranks[g] = rank + 1
+        if states == limit:
+            enough = max(enough, MISSED * missing)
+    missing = 0.0
+    for g in range(count):
+        side = sides[g]
+        if ranks[g] > 0 and (side < WORTHWHILE or ranks[g] > MOST * side):
+            ranks[g] = side
+        else:
+            missing += max(rest[first[g] : first[g] + side].sum(), 0.0)
+    return ranks, missing, factors
