@@ -206,9 +206,6 @@ class Chain:
             self.tensor(site), *left.pair, *right.pair, self.local[site], limit, allowed
         )
         self.pass_on(site, isometry, carry, kept)
-        if discarded > 0:
-            centre = self.tensor(site + 1)
-            self.put(site + 1, centre / np.linalg.norm(centre))
         return discarded
 
     def prepare(self, limit: int | None = None, allowed: float = 0.0) -> None:

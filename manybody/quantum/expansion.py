@@ -119,9 +119,10 @@ def directions(near, far, own, groups, turned_groups, dims, probes, noise, wante
             sketch = np.dot(
                 noise[n_place : n_place + k * m].reshape(k, m), near[u : u + m * columns].reshape(m, columns)
             )
-            z = samples[s_place : s_place + r * k].reshape(r, k)
+            flat = samples[s_place : s_place + r * k]
+            z = flat.reshape(r, k)
             np.dot(far[v : v + r * columns].reshape(r, columns), np.ascontiguousarray(sketch.T), z)
-            scale += np.sum((z * np.conj(z)).real)
+            scale += np.vdot(flat, flat).real
             if d > 0:
                 b = own[o_place : o_place + r * d].reshape(r, d)
                 z -= np.dot(b, np.dot(conjugate(b).T, z))

@@ -103,6 +103,10 @@ def columns(grams, sides, limit, allowed):
             break
         side, rank = sides[g], ranks[g]
         own = rest[first[g] : first[g] + side]
+        if rank == side:  # the rest is rounding
+            missing -= own.sum()
+            largest[g] = 0.0
+            continue
         states += 1
         i = pivot[g]
         factor = factors[start[g] : start[g] + side * side].reshape(side, side)

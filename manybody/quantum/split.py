@@ -179,14 +179,15 @@ def carry_over(carry, kept, dims, tensor, widths):
 
 @compiled
 def cut(tensor, left, left_dims, right, right_dims, local, limit, allowed):
-    """Isometry by right, carry, states kept per right charge and relative weight discarded for a site tensor by left
-    that is cut at its right bond (see choose, parts)."""
+    """Isometry by right, normalized carry, states kept per right charge and relative weight discarded for a site tensor
+    by left that is cut at its right bond (see choose, parts)."""
     matrices = blocks.gather_right(tensor, left, left_dims, right, right_dims, local)
     _, height = blocks.by_right(left, left_dims, right, local)
     shapes = np.stack((height, right_dims), axis=1)
     weights, states, ranks, missing = spectra(matrices, shapes, 0, 0.0)
     kept, discarded = choose(weights, ranks, missing, limit, allowed)
     isometry, carry = parts(matrices, shapes, states, ranks, kept)
+    carry /= np.sqrt(np.vdot(carry, carry).real)
     return isometry, carry, kept, discarded
 
 
