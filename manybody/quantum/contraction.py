@@ -18,6 +18,7 @@ from manybody.quantum.blocks import by_bra, by_ket, by_left, by_right, find, gat
 from manybody.quantum.compiled import compiled, conjugate, room
 
 FROM_T, TO_O, ASSIGN = 1, 2, 4
+NO_CHANNEL = np.int64(-1)  # typed: for a literal number, functions would be compiled once more
 
 
 @compiled
@@ -190,7 +191,7 @@ def apply(tensor, result, left, right, steps, buffers):
     second, back = steps[3], steps[4]
     _, stacked, grouped = buffers
     result[:] = 0
-    half(tensor, result, left, steps, buffers)
+    half(tensor, result, left, steps, buffers[:2])
     for g in range(second.shape[0]):
         m, k, n, u, r, o = second[g]
         if k > 0:
@@ -275,7 +276,7 @@ def environment(tensor, before, left, right, local, operator, scratch):
     """Environment by bra on the right bond from the one on the left, also by bra, and a site orthonormal towards the
     right; elements of scratch memory needed."""
     delta_left, start = operator[0], operator[2]
-    steps = plan(left, right, local, operator, -1, start, right)
+    steps = plan(left, right, local, operator, NO_CHANNEL, start, right)
     sizes = steps[6]
     a, b, c = before.size, before.size + sizes[4], before.size + sizes[4] + sizes[2]
     needed = c + tensor.size

@@ -5,8 +5,6 @@ import numba
 import numpy as np
 from numba.extending import overload
 
-from manybody.quantum.compiled import compiled
-
 SMALL = 50
 """Rows up to which the solver below was measured to be faster than LAPACK (twice at 4 to 16 rows, by a third at 50)."""
 
@@ -14,43 +12,36 @@ reordering = numba.njit(cache=True, nogil=True, error_model="numpy", fastmath={"
 """Sums may be taken in any order, which is what makes short dot products fast."""
 
 
-@compiled
 def eigenvectors(matrix, values, rows):
     """Eigenvalues, ascending, and eigenvectors, one in each row, of a symmetric or Hermitian matrix, written in place.
-    The matrix may be overwritten."""
-    _eigenvectors(matrix, values, rows)
+    The matrix may be overwritten. For compiled functions."""
+    raise NotImplementedError
 
 
-def _eigenvectors(matrix, values, rows):
-    raise NotImplementedError("for compiled functions")
-
-
-@overload(_eigenvectors)
-def _choose(matrix, values, rows):
-    if isinstance(matrix.dtype, numba.types.Complex):
-        return lambda matrix, values, rows: by_library(matrix, values, rows)
-    return lambda matrix, values, rows: by_size(matrix, values, rows)
-
-
-@compiled
-def by_library(matrix, values, rows):
+def _by_library(matrix, values, rows):
     found, vectors = np.linalg.eigh(matrix)
     values[:] = found
     rows[:] = vectors.T
 
 
-@compiled
-def by_size(matrix, values, rows):
-    if matrix.shape[0] <= SMALL:
-        largest = np.abs(matrix).max()
-        scale = largest if 0 < largest < np.inf else 1.0  # squares of elements must neither overflow nor vanish
-        matrix /= scale
-        beside = np.empty(values.size)
-        tridiagonal(matrix, values, beside, rows)
-        diagonalize(values, beside, rows)
-        values *= scale
-    else:
-        by_library(matrix, values, rows)
+def _by_size(matrix, values, rows):
+    if matrix.shape[0] > SMALL:
+        found, vectors = np.linalg.eigh(matrix)
+        values[:] = found
+        rows[:] = vectors.T
+        return
+    largest = np.abs(matrix).max()
+    scale = largest if 0 < largest < np.inf else 1.0  # squares of elements must neither overflow nor vanish
+    matrix /= scale
+    beside = np.empty(values.size)
+    tridiagonal(matrix, values, beside, rows)
+    diagonalize(values, beside, rows)
+    values *= scale
+
+
+@overload(eigenvectors)
+def _choose(matrix, values, rows):
+    return _by_library if isinstance(matrix.dtype, numba.types.Complex) else _by_size
 
 
 @reordering

@@ -4,7 +4,7 @@ import numpy as np
 
 from manybody.quantum.blocks import to_ket
 from manybody.quantum.compiled import compiled, room
-from manybody.quantum.contraction import apply, plan
+from manybody.quantum.contraction import NO_CHANNEL, apply, plan
 
 CHUNK = 2048
 """Elements of every vector that are worked on together: they stay in the innermost cache."""
@@ -21,7 +21,7 @@ def lowest(tensor, before, after, left, right, local, operator, vectors, toleran
     contraction.plan. At most `vectors` products with the operator; stops early once the residual is below `tolerance`.
     """
     delta_left, start, end = operator[0], operator[2], operator[3]
-    steps = plan(left, right, local, operator, end, -1, right)
+    steps = plan(left, right, local, operator, end, NO_CHANNEL, right)
     sizes = steps[6]
     size = tensor.size
     vectors = min(vectors, size)
@@ -35,7 +35,7 @@ def lowest(tensor, before, after, left, right, local, operator, vectors, toleran
 
     diagonal, beside = np.zeros(vectors), np.zeros(vectors)
     overlaps = np.zeros(vectors, tensor.dtype)
-    basis[0] = tensor / np.sqrt(np.vdot(tensor, tensor).real)
+    scaled(basis[0], 1 / np.sqrt(np.vdot(tensor, tensor).real), tensor)
     used = 0
     value = 0.0
     residual = 0.0
@@ -53,9 +53,9 @@ def lowest(tensor, before, after, left, right, local, operator, vectors, toleran
         if residual <= tolerance or used == vectors or norm < 1e-13 * (abs(value) + 1e-300):
             break
         beside[k] = norm
-        product /= norm
+        scaled(product, 1 / norm, product)
     result = combination(basis, ritz)
-    result /= np.sqrt(np.vdot(result, result).real)
+    scaled(result, 1 / np.sqrt(np.vdot(result, result).real), result)
     return value, result, residual, used, needed
 
 
@@ -72,9 +72,10 @@ def orthogonalize(basis, used, diagonal, before, overlaps):
     for first in range(0, size, CHUNK):
         last = min(first + CHUNK, size)
         piece = basis[used, first:last]
-        subtract(piece, diagonal, basis[used - 1, first:last])
         if used > 1:
-            subtract(piece, before, basis[used - 2, first:last])
+            subtract_both(piece, diagonal, basis[used - 1, first:last], before, basis[used - 2, first:last])
+        else:
+            subtract(piece, diagonal, basis[used - 1, first:last])
         for j in range(used):
             overlaps[j] += np.vdot(basis[j, first:last], piece)
         total += np.vdot(piece, piece).real
@@ -142,12 +143,20 @@ def lowest_of_tridiagonal(diagonal, beside):
 def combination(basis, factors):
     """Sum of factors[j] * basis[j]."""
     size = basis.shape[1]
-    result = np.zeros(size, basis.dtype)
+    result = np.empty(size, basis.dtype)
     for first in range(0, size, CHUNK):
         last = min(first + CHUNK, size)
-        for j in range(factors.size):
+        scaled(result[first:last], factors[0], basis[0, first:last])
+        for j in range(1, factors.size):
             subtract(result[first:last], -factors[j], basis[j, first:last])
     return result
+
+
+@compiled
+def scaled(target, factor, vector):
+    """target = factor * vector in place."""
+    for x in range(target.size):
+        target[x] = factor * vector[x]
 
 
 @compiled
@@ -155,3 +164,10 @@ def subtract(target, factor, vector):
     """target -= factor * vector in place."""
     for x in range(target.size):
         target[x] -= factor * vector[x]
+
+
+@compiled
+def subtract_both(target, factor, vector, second, other):
+    """target -= factor * vector + second * other in place."""
+    for x in range(target.size):
+        target[x] -= factor * vector[x] + second * other[x]

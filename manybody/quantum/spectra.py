@@ -64,7 +64,7 @@ def spectra(matrices, shapes, limit, allowed):
             np.dot(turn, factor, states)
             for r in range(rank):
                 if found[r] > 0:
-                    states[r] /= np.sqrt(found[r])
+                    states[r] *= 1 / np.sqrt(found[r])
         found[:] = np.maximum(found, 0.0)
         place += side * side
         first += rank
@@ -82,19 +82,19 @@ def columns(grams, sides, limit, allowed):
         start[g] = start[g - 1] + sides[g - 1] ** 2
         first[g] = first[g - 1] + sides[g - 1]
     factors = np.empty_like(grams)
-    rest = np.empty(sides.sum())
+    rest = np.empty(sides.sum())  # diagonal elements of E
+    traces, largest = np.zeros(count), np.zeros(count)
     pivot = np.zeros(count, np.int64)
-    largest = np.zeros(count)
     ranks = np.zeros(count, np.int64)
-    total = 0.0
     for g in range(count):
         for x in range(sides[g]):
-            rest[first[g] + x] = grams[start[g] + x * (sides[g] + 1)].real
-            total += rest[first[g] + x]
-            if rest[first[g] + x] > largest[g]:
-                largest[g] = rest[first[g] + x]
+            element = grams[start[g] + x * (sides[g] + 1)].real
+            rest[first[g] + x] = element
+            traces[g] += element
+            if element > largest[g]:
+                largest[g] = element
                 pivot[g] = x
-    missing = total
+    total = missing = traces.sum()
     enough = MISSED * allowed * total
     states = 0
     while missing > enough:
@@ -104,8 +104,7 @@ def columns(grams, sides, limit, allowed):
         side, rank = sides[g], ranks[g]
         own = rest[first[g] : first[g] + side]
         if rank == side:  # the rest is rounding
-            missing -= own.sum()
-            largest[g] = 0.0
+            traces[g], largest[g] = 0.0, 0.0
             continue
         states += 1
         i = pivot[g]
@@ -113,27 +112,25 @@ def columns(grams, sides, limit, allowed):
         row = factor[rank]
         row[:] = conjugate(grams[start[g] + i * side : start[g] + (i + 1) * side])
         for r in range(rank):
-            share = np.conj(factor[r, i])
+            share, earlier = np.conj(factor[r, i]), factor[r]
             for x in range(side):
-                row[x] -= share * factor[r, x]
+                row[x] -= share * earlier[x]
         scale = 1 / np.sqrt(largest[g])
-        largest[g] = 0.0
+        trace, most = 0.0, 0.0
         for x in range(side):
             row[x] *= scale
-            gone = row[x].real ** 2 + row[x].imag ** 2
-            own[x] -= gone
-            missing -= gone
-            if own[x] > largest[g]:
-                largest[g] = own[x]
+            own[x] -= row[x].real ** 2 + row[x].imag ** 2
+            trace += own[x]
+            if own[x] > most:
+                most = own[x]
                 pivot[g] = x
+        traces[g], largest[g] = trace, most
+        missing = traces.sum()
         ranks[g] = rank + 1
         if states == limit:
             enough = max(enough, MISSED * missing)
-    missing = 0.0
     for g in range(count):
-        side = sides[g]
-        if ranks[g] > 0 and (side < WORTHWHILE or ranks[g] > MOST * side):
-            ranks[g] = side
-        else:
-            missing += max(rest[first[g] : first[g] + side].sum(), 0.0)
-    return ranks, missing, factors
+        if ranks[g] > 0 and (sides[g] < WORTHWHILE or ranks[g] > MOST * sides[g]):
+            ranks[g] = sides[g]
+            traces[g] = 0.0
+    return ranks, np.maximum(traces, 0.0).sum(), factors

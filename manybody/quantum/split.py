@@ -184,10 +184,10 @@ def cut(tensor, left, left_dims, right, right_dims, local, limit, allowed):
     matrices = blocks.gather_right(tensor, left, left_dims, right, right_dims, local)
     _, height = blocks.by_right(left, left_dims, right, local)
     shapes = np.stack((height, right_dims), axis=1)
-    weights, states, ranks, missing = spectra(matrices, shapes, 0, 0.0)
+    weights, states, ranks, missing = spectra(matrices, shapes, np.int64(0), 0.0)
     kept, discarded = choose(weights, ranks, missing, limit, allowed)
     isometry, carry = parts(matrices, shapes, states, ranks, kept)
-    carry /= np.sqrt(np.vdot(carry, carry).real)
+    carry *= 1 / np.sqrt(np.vdot(carry, carry).real)
     return isometry, carry, kept, discarded
 
 
@@ -204,7 +204,7 @@ def cut_pair(pair, left, left_dims, right, right_dims, first_local, second_local
     stay = kept > 0
     charges, dims = middle[stay], kept[stay]
     first = blocks.scatter_left(isometry, left, left_dims, charges, dims, first_local)
-    carry /= np.sqrt(np.vdot(carry, carry).real)
+    carry *= 1 / np.sqrt(np.vdot(carry, carry).real)
     return first, carry, charges, dims, discarded
 
 

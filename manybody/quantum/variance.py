@@ -44,7 +44,7 @@ def image(chain: Chain, tensor, operator: OperatorSite, left: int, right: int, l
 @compiled
 def _image(tensor, before, after, left, right, local, operator):
     delta_left, start, end = operator[0], operator[2], operator[3]
-    steps = contraction.plan(left, right, local, operator, end, -1, right)
+    steps = contraction.plan(left, right, local, operator, end, contraction.NO_CHANNEL, right)
     sizes = steps[6]
     by_ket = np.empty_like(before)
     blocks.to_ket(before, left[0], left[1], delta_left, start, by_ket)
@@ -94,9 +94,9 @@ def halves(
     residual.
     """
     turned_bond, turned_reach = (total - bond[0], bond[1]), (total - reach[0], reach[1])
-    steps = contraction.plan(left, bond, local, operator, -1, operator[3], reach)
+    steps = contraction.plan(left, bond, local, operator, contraction.NO_CHANNEL, operator[3], reach)
     turned_steps = contraction.plan(
-        turned, turned_bond, turned_local, turned_operator, -1, turned_operator[2], turned_reach
+        turned, turned_bond, turned_local, turned_operator, contraction.NO_CHANNEL, turned_operator[2], turned_reach
     )
     sizes, turned_sizes = steps[6], turned_steps[6]
     near_size, far_size = sizes[2], turned_sizes[2]

@@ -1,5 +1,6 @@
 """Eigenproblems, cuts and random vectors of single steps against numpy.linalg."""
 
+import numba
 import numpy as np
 import pytest
 from hypothesis import given, settings
@@ -8,10 +9,15 @@ from hypothesis import strategies as st
 from manybody.quantum import eigenproblem, expansion, spectra, split
 
 
+@numba.njit
+def eigenvectors(matrix, values, rows):
+    eigenproblem.eigenvectors(matrix, values, rows)
+
+
 def solved(matrix):
     n = len(matrix)
     values, rows = np.empty(n), np.empty_like(matrix)
-    eigenproblem.eigenvectors(matrix.copy(), values, rows)
+    eigenvectors(matrix.copy(), values, rows)
     return values, rows
 
 
