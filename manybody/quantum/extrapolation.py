@@ -42,15 +42,15 @@ def energy_error(stages: list[Stage], floor: float) -> float:
         if earlier is not None:
             fall = max(earlier.energy - last.energy, 0.0)
             distances.append(fall * x1 / (getattr(earlier, measure) - x1))
-    if len(distances) == 1:
-        # No recent slope (a variance at rounding level, or one that did not fall): the steepest of all stages, else the
-        # standard
-        # deviation, which bounds the distance to some eigenvalue.
-        slopes = [
-            max(a.energy - b.energy, 0.0) / (a.variance - b.variance)
-            for a, b in itertools.pairwise(stages)
-            if a.variance > 1.5 * b.variance
-        ]
-        deviation = float(np.sqrt(last.variance))
-        distances.append(min(max(slopes) * last.variance, deviation) if slopes else deviation)
+        elif measure == "variance":
+            # No recent slope (a variance at rounding level, or one that did not fall, whatever the discarded weight
+            # did): the steepest of all stages, else the standard deviation, which bounds the distance to some
+            # eigenvalue.
+            slopes = [
+                max(a.energy - b.energy, 0.0) / (a.variance - b.variance)
+                for a, b in itertools.pairwise(stages)
+                if a.variance > 1.5 * b.variance
+            ]
+            deviation = float(np.sqrt(x1))
+            distances.append(min(max(slopes) * x1, deviation) if slopes else deviation)
     return max(SAFETY * max(distances), floor)
