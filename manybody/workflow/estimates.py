@@ -15,7 +15,8 @@ from manybody.workflow.points import Cluster, Point, TermRecipe
 
 SMALL = 3000  # dimension of the whole space below which every solve is quick and small
 HUGE = 1e11  # and above which no sector can be diagonalized
-HALF_SWEEPS = 12  # half sweeps at the final bond dimension that cost as much as a whole run with its growing bonds
+HALF_SWEEPS = 14  # half sweeps at the usual bond dimension that cost as much as a whole run with its growing bonds
+USUAL_BOND = 100  # bond dimension that the usual accuracy takes, over (1 + S) and the couplings cut
 LIBRARIES = 5e7  # bytes a first solve may add by loading compiled code
 
 
@@ -99,27 +100,18 @@ def _exact(kind: _AsKind, memory: int, observables: bool) -> tuple[float, float]
 @functools.lru_cache(maxsize=4096)
 def _sweeps(kind: _AsKind, max_bond: int, memory: int) -> tuple[float, float]:
     """(seconds, bytes) of matrix-product sweeps: bytes at the largest bond dimension allowed, as the quantum branch
-    predicts them, seconds at the one that the usual accuracy takes on gapless chains, growing with spin and with the
-    width of the cluster.
-
-    A conserved charge splits a bond into about `share` equal blocks; work falls with its square.
+    predicts them, seconds at the one that the usual accuracy takes, growing with spin and with the width of the cluster
+    (within a factor of three for chains, rings and cylinders of 16 to 200 sites and spins 1/2 to 5).
     """
     from manybody.model.quantization import quantize
     from manybody.quantum.result import QuantumSettings
     from manybody.quantum.sweeps import predict
 
     point = kind.point
-    energy = point.cluster.build().energy
-    settings = QuantumSettings(max_bond=max_bond, memory=memory)
-    size = predict(quantize(energy, point.spin, point.rule), settings).bytes
-    n, levels = point.cluster.sites, 2 * point.spin + 1
-    bond = min(float(max_bond), 10 ** min(0.5 * point.log10_dimension, 15.0))
-    cut = _bonds_cut(point.cluster)
-    width, usual = 2 + 3 * cut, min(bond, 80 * (1 + point.spin) * cut)
-    conserved = len(energy.symmetry_axes()) > 0
-    share = 2.0 * math.sqrt(point.spin + 0.5) if conserved else 1.0
-    vectors = min(3 + point.spin, 12)
-    half_sweep = 5e-4 * n + 4 * (vectors + 3) * n * levels * width * usual**3 / share**2 / 1.5e10
+    operator = quantize(point.cluster.build().energy, point.spin, point.rule)
+    size = predict(operator, QuantumSettings(max_bond=max_bond, memory=memory)).bytes
+    usual = min(max_bond, math.ceil(USUAL_BOND * (1 + point.spin) * _bonds_cut(point.cluster)))
+    half_sweep = predict(operator, QuantumSettings(max_bond=usual, memory=memory)).seconds
     return HALF_SWEEPS * half_sweep, LIBRARIES + size
 
 
