@@ -149,13 +149,6 @@ class Chain:
             self.tensor(site),
         )
 
-    def retreat(self, site: int) -> None:
-        """Right environment of the bond before a site, likewise."""
-        left, right = (self.bonds[k].mirrored(self.total) for k in (site + 1, site))
-        operator = self.other_operators[self.length - 1 - site]
-        tensor = self.turned_tensor(site)
-        self.right[site] = self._environment(operator, self.right[site + 1], left, right, self.local[site], tensor)
-
     def _environment(self, operator: OperatorSite, before: np.ndarray, left: Bond, right: Bond, local, tensor):
         environment, needed = contraction.environment(
             tensor, before, left.pair, right.pair, local, self.arrays(operator), self.scratch.array

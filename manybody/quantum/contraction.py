@@ -108,7 +108,8 @@ def plan(left_bond, right_bond, local, operator, end, skip, bra_bond):
                 first_factor = place
                 place += columns
                 factors[first_factor:place] = weights[entry]
-                if k == last_bra and source == last_source and goal == last_goal:
+                same = last_bra == k and moves[count - 1, 0] == flags
+                if same and source == last_source and goal == last_goal:
                     moves[count - 1, 6] += columns
                     last_source += columns
                     last_goal += columns

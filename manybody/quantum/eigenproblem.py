@@ -8,6 +8,9 @@ from numba.extending import overload
 SMALL = 50
 """Rows up to which the solver below was measured to be faster than LAPACK (twice at 4 to 16 rows, by a third at 50)."""
 
+LEAST_SQUARE = 1e-280
+"""Sums of squares below this, of elements of a matrix whose largest is 1, have lost their digits and count as zero."""
+
 reordering = numba.njit(cache=True, nogil=True, error_model="numpy", fastmath={"reassoc", "contract"})
 """Sums may be taken in any order, which is what makes short dot products fast."""
 
@@ -30,8 +33,12 @@ def _by_size(matrix, values, rows):
         values[:] = found
         rows[:] = vectors.T
         return
+    if matrix.size == 1:
+        values[0] = matrix[0, 0]
+        rows[0, 0] = 1.0
+        return
     largest = np.abs(matrix).max()
-    scale = largest if 0 < largest < np.inf else 1.0  # squares of elements must neither overflow nor vanish
+    scale = largest if 0 < largest < np.inf else 1.0
     matrix /= scale
     beside = np.empty(values.size)
     tridiagonal(matrix, values, beside, rows)
@@ -47,7 +54,8 @@ def _choose(matrix, values, rows):
 @reordering
 def tridiagonal(matrix, diagonal, beside, rows):
     """Householder's reduction (Martin, Reinsch, Wilkinson 1968, Numer. Math. 11, 181, from memory): matrix = rows^T T
-    rows with T of this diagonal and these elements beside it, the last of them zero. The matrix is overwritten."""
+    rows with T of this diagonal and these elements beside it, the last of them zero. The matrix, whose largest element
+    is 1 in size, is overwritten."""
     n = matrix.shape[0]
     images, factors = np.empty(n), np.zeros(n)
     for k in range(n - 2):
@@ -58,7 +66,7 @@ def tridiagonal(matrix, diagonal, beside, rows):
             rest += mirror[x] * mirror[x]
         diagonal[k] = matrix[k, k]
         beside[k] = mirror[0]
-        if rest == 0.0:
+        if rest < LEAST_SQUARE:
             continue
         beside[k] = -np.copysign(np.sqrt(mirror[0] ** 2 + rest), mirror[0])
         factor = 1 - mirror[0] / beside[k]
@@ -104,6 +112,12 @@ def tridiagonal(matrix, diagonal, beside, rows):
 
 
 @reordering
+def negligible(first, second):
+    """Size of an element beside these two of the diagonal that counts as zero."""
+    return 1.1e-16 * (abs(first) + abs(second)) + np.sqrt(LEAST_SQUARE)
+
+
+@reordering
 def diagonalize(diagonal, beside, rows):
     """Implicit QL steps (Dubrulle, Martin, Wilkinson 1968, Numer. Math. 12, 377, from memory): eigenvalues, ascending,
     in place of the diagonal, and the rows turned along."""
@@ -111,7 +125,7 @@ def diagonalize(diagonal, beside, rows):
     for l in range(n):
         for _ in range(60):  # two are usual; more than 60 only where numbers overflowed
             m = l
-            while m < n - 1 and not abs(beside[m]) <= 1.1e-16 * (abs(diagonal[m]) + abs(diagonal[m + 1])):
+            while m < n - 1 and not abs(beside[m]) <= negligible(diagonal[m], diagonal[m + 1]):
                 m += 1  # also past what is no number: it must not pass for a small one
             if m == l:
                 break

@@ -26,15 +26,14 @@ def expand(chain: Chain, site: int, fraction: float, limit: int, seed: int) -> N
     if limit > chain.bonds[site + 1].dimension:
         residual = two_site_residual(chain, site)
         chain.right[site + 1] = None  # of no use to the residual, and the new one should not lie beside it
-        centre, turned, charges, dims, environment, needed = enlarge(residual, fraction, limit, seed % 2**63)
+        centre, turned, charges, dims, outside, needed = enlarge(residual, fraction, limit, seed % 2**63)
+        del residual  # and with it the old scratch memory
         chain.scratch.enlarge(needed)
         chain.bonds[site + 1] = Bond(charges, dims)
         chain.put(site, centre)
         chain.tensors[site + 1] = turned
         chain.turned[site + 1] = True
-        chain.right[site + 1] = environment
-    elif chain.right[site + 1] is None:
-        chain.retreat(site + 1)
+        chain.right[site + 1] = outside
 
 
 @compiled
@@ -100,7 +99,7 @@ def padded(tensor, left, right, local, bond, bond_dims):
 
 
 @compiled
-def directions(near, far, own, groups, turned_groups, dims, probes, noise, wanted, negligible):
+def directions(near, far, own, groups, turned_groups, dims, probes, numbers, wanted, negligible):
     """Orthonormal new states per charge (rows x added, group after group), outside the columns of `own`; at most
     `wanted` in all."""
     count = dims.size
@@ -117,7 +116,7 @@ def directions(near, far, own, groups, turned_groups, dims, probes, noise, wante
         k, d = probes[g], dims[g]
         if k > 0:
             sketch = np.dot(
-                noise[n_place : n_place + k * m].reshape(k, m), near[u : u + m * columns].reshape(m, columns)
+                numbers[n_place : n_place + k * m].reshape(k, m), near[u : u + m * columns].reshape(m, columns)
             )
             flat = samples[s_place : s_place + r * k]
             z = flat.reshape(r, k)

@@ -13,7 +13,6 @@ from manybody.quantum.site_order import site_order
 
 NOISE = 1e-13
 FEW_LEVELS = 8
-LEAST_NORM = 1e-100
 
 
 @dataclass(frozen=True, eq=False)
@@ -64,11 +63,7 @@ class Problem:
 
 
 def prepare(operator: SpinOperator, start: np.ndarray, conserve: bool = True) -> Problem:
-    """See Problem. start (N, 3): a classical configuration, which fixes the local frames where nothing is conserved.
-
-    Raises ValueError where the sum of the coupling norms is outside LEAST_NORM ... 1 / LEAST_NORM: variances are
-    energies squared.
-    """
+    """See Problem. start (N, 3): a classical configuration, which fixes the local frames where nothing is conserved."""
     axes = operator.symmetry_axes() if conserve else np.zeros((0, 3))
     conserved = len(axes) > 0
     if conserved:
@@ -80,11 +75,6 @@ def prepare(operator: SpinOperator, start: np.ndarray, conserve: bool = True) ->
     frames, solved, real = _real_frames(operator, frames, conserved)
     order = site_order(operator.symbol)
     terms, constant, norm = _collect(solved, order, conserved, real)
-    if not (norm == 0 or LEAST_NORM < norm < 1 / LEAST_NORM):
-        raise ValueError(
-            f"the couplings add up to {norm:.3g}, whose square is beyond the numbers of a machine: choose a unit of "
-            f"energy that brings them between {LEAST_NORM:.0e} and {1 / LEAST_NORM:.0e}"
-        )
     spins = operator.spins[order]
     full = np.round(2 * spins).astype(np.int64) + 1
     levels = full if conserved else np.minimum(full, FEW_LEVELS)

@@ -10,6 +10,7 @@ import numpy as np
 from manybody.quantum import expansion, memory, one_site, two_site, variance
 from manybody.quantum.chain import Chain
 from manybody.quantum.extrapolation import Stage, energy_error
+from manybody.quantum.spectra import MISSED
 
 FIRST_ALLOWED = 1e-6
 LEAST_ALLOWED = 1e-15
@@ -17,6 +18,9 @@ SWEEPS, MOST_SWEEPS = 8, 24
 CRAWL = 0.8
 FRACTION = 0.3
 GROWTH, FIRST_BOND = 2, 64
+LIMITED = 1 + 5 * MISSED
+"""A weight discarded, over the one allowed, that only a limit of the bond explains: what a cut tells is a little more
+than it loses."""
 
 
 @dataclass(frozen=True)
@@ -47,7 +51,7 @@ class Run:
     under_way: a stage is begun but not done; energies: what its half sweeps gave so far; site, lost, cut, before: how
     far the present half sweep is, the weight it discarded, whether the ceiling was the cause, and the bond dimension it
     began with. With them a run can be broken off and taken up at any call of `pause`, made before every step and after
-    every stage. unmixings: see sweeps.
+    every stage. seed: of the random vectors of expansions. unmixings: see sweeps.
     """
 
     chain: Chain
@@ -156,13 +160,13 @@ class Run:
                 energy, lost = two_site.step(chain, site, self.ceiling, self.allowed, self.vectors, tolerance)
             else:
                 ceiling = self.ceiling + max(4, int(FRACTION * self.ceiling))
-                # Not a stream of numbers: a run that is taken up again meets the same ones.
+                # Not a stream of numbers: a run that is taken up again meets the same ones, though in another gauge.
                 seed = (self.seed + self.sweeps) * chain.length + site
                 expansion.expand(chain, site, FRACTION, ceiling, seed)
                 energy = one_site.solve(chain, site, self.vectors, tolerance)
                 lost = one_site.move(chain, site, self.ceiling, self.allowed)
             self.lost += lost
-            self.cut |= bool(lost > 1.001 * self.allowed)
+            self.cut |= bool(lost > LIMITED * self.allowed)
             self.site += 1
         chain.mirror()
         self.sweeps += 1

@@ -27,7 +27,7 @@ def spectra(matrices, shapes, limit, allowed):
     matrices: row-major matrices one after the other, shapes (n, 2). vectors: per group one in each row, rank x side,
     orthogonal only up to rounding over weight where rank < side = min(shape). All weights where allowed =
     0; otherwise those that matter to split.choose with the same limit and share. Weights below about 1e-16 of the
-    largest are rounding.
+    largest are rounding. Raises FloatingPointError where all is zero or something is no number.
     """
     count = shapes.shape[0]
     sides = np.minimum(shapes[:, 0], shapes[:, 1])
@@ -44,6 +44,9 @@ def spectra(matrices, shapes, limit, allowed):
             np.dot(conjugate(x).T, x, gram)
         first += m * n
         place += side * side
+    norm = np.vdot(matrices, matrices).real
+    if not 0 < norm < np.inf:
+        raise FloatingPointError("the tensor to cut is zero or has overflowed")
     if allowed > 0 and sides.max() >= WORTHWHILE:
         ranks, missing, factors = columns(grams, sides, limit, allowed)
     else:

@@ -25,6 +25,8 @@ MIXED = 1e-3
 parities."""
 ROOM = 1.4
 """A part of one parity may take so many times the states of the mixture."""
+LEAST_NORM = 1e-100
+"""Couplings of a smaller sum, or of one beyond its inverse, are refused: variances are energies squared."""
 NOTABLE = 0.05
 """A mixture is undone if that lowers the energy by this share of its error."""
 
@@ -43,7 +45,8 @@ def matrix_product_ground_state(
     settings.accuracy is relative; 0 takes a bound on the norm of the operator. progress: called with a dict after every
     half sweep: stage (one of STAGES), sweep, bond_dimension, energy, variance, discarded_weight, sector. checkpoint:
     where the solve keeps how far it is and takes it up again, whatever it was at, see saved_states; a path is written
-    every two minutes and removed in the end.
+    every two minutes and removed in the end. Raises ValueError for couplings whose squares are beyond the numbers of a
+    machine (LEAST_NORM).
     """
     settings = settings or QuantumSettings()
     saved = checkpoint if isinstance(checkpoint, SavedStates) else open_states(checkpoint)
@@ -80,6 +83,11 @@ class _Solver:
         self.isotropic = len(op.symmetry_axes()) == 3
         self.vectors = products_per_step(self.problem)
         norm = self.problem.norm
+        if not (norm == 0 or LEAST_NORM < norm < 1 / LEAST_NORM):
+            raise ValueError(
+                f"the couplings add up to {norm:.3g}, whose square is beyond the numbers of a machine: choose a unit "
+                f"of energy that brings them between {LEAST_NORM:.0e} and {1 / LEAST_NORM:.0e}"
+            )
         largest = memory.largest_bond(self.problem, settings.memory, self.vectors)
         scale = scale if scale > 0 else norm
         self.limits = Limits(

@@ -65,7 +65,8 @@ def leaving(chain: Chain, site: int) -> float:
 
 
 def two_site_residual(chain: Chain, site: int) -> tuple:
-    """Arguments of `halves` for the sites (site, site + 1) with the centre on the first."""
+    """Arguments of `halves` for the sites (site, site + 1) with the centre on the first. States between them that
+    nothing on the left reaches are dropped first (see Chain.prune)."""
     left, bond, after = chain.bonds[site : site + 3]
     local = chain.local[site : site + 2]
     reach, dims, complete = blocks.reach(*left.pair, *bond.pair, *after.pair, *local)

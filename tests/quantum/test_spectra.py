@@ -66,6 +66,17 @@ def test_eigenvectors_of_special_matrices(n):
     check(signs + signs.T)
 
 
+@pytest.mark.parametrize("power", [*range(-166, -148, 2), -200, -300])
+@pytest.mark.parametrize("kind", [float, complex])
+def test_eigenvectors_stay_orthonormal_beside_elements_whose_squares_vanish(power, kind):
+    x = graded(np.random.default_rng(1), 8, 10, 0.8, kind)
+    x[0] *= 10.0**power
+    check(x @ x.conj().T)
+    steep = np.diag(10.0 ** -np.linspace(0, 300, 8)).astype(kind)
+    steep[2, 5] = steep[5, 2] = 10.0**power
+    check(steep)
+
+
 @pytest.mark.parametrize("bad", [np.inf, np.nan])
 def test_eigenproblem_ends_with_overflowed_numbers(bad):
     matrix = np.eye(5)
@@ -107,6 +118,9 @@ def test_a_cut_of_reduced_matrices_loses_hardly_more_than_the_best(seed, limit, 
     rng = np.random.default_rng(seed)
     shapes = rng.integers(1, 50, (5, 2))
     matrices = [10.0 ** -rng.integers(0, 4) * graded(rng, m, n, decay, kind) for m, n in shapes]
+    # Charges that nothing reaches, that carry nothing, and that carry less than they could.
+    matrices += [np.zeros((0, 7), kind), np.zeros((20, 4), kind)]
+    matrices.append(1e-3 * graded(rng, 30, 3, decay, kind) @ graded(rng, 3, 40, decay, kind))
     weights = np.sort(np.concatenate([np.linalg.svd(x, compute_uv=False) ** 2 for x in matrices]))
     share = np.concatenate([[0.0], np.cumsum(weights)]) / weights.sum()
     for reduced in (False, True):
@@ -131,6 +145,12 @@ def test_reduction_finds_fewer_columns_where_weights_decay():
     assert ranks[0] < 42 and ranks[1] < 32 and ranks[2] == 5
     *_, ranks = cut([graded(rng, 40, 40, 1.0, float)], 10, 1e-6, True)
     assert ranks[0] == 40
+
+
+@pytest.mark.parametrize("bad", [0.0, np.inf, np.nan])
+def test_what_cannot_be_cut_is_told(bad):
+    with pytest.raises(FloatingPointError, match="zero or has overflowed"):
+        cut([np.full((3, 4), bad), np.zeros((30, 20))], 10, 1e-6, True)
 
 
 @settings(max_examples=30, deadline=None)

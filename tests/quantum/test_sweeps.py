@@ -222,3 +222,17 @@ def test_spin_two_chain_limit():
     stated = abs(limit - second) + (found[2].error + found[1].error) / 12
     assert abs(limit - values.value) <= stated + values.uncertainty
     assert stated < 6e-4
+
+
+@pytest.mark.parametrize("size", [1e-150, 1e150])
+def test_couplings_whose_squares_are_no_numbers_are_refused(size):
+    with pytest.raises(ValueError, match="choose a unit of energy"):
+        solve(quantize(size * couplings.exchange(6, chain(6), 1.0), 1))
+
+
+@pytest.mark.parametrize("size", [1e-90, 1e90])
+def test_results_scale_with_couplings_of_any_other_size(size):
+    function = couplings.exchange(6, chain(6), 1.0)
+    plain, found = solve(quantize(function, 1.5)), solve(quantize(size * function, 1.5))
+    assert found.converged and plain.converged
+    assert abs(found.energy / size - plain.energy) <= max(found.error / size, plain.error)
