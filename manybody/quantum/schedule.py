@@ -92,7 +92,9 @@ class Run:
         if not self.stages or self.under_way:
             return False
         done = len(self.stages) > 2 and self.error <= max(self.limits.goal, 2 * self.limits.floor)
-        return done or self.bounded or self.allowed <= LEAST_ALLOWED or self.stages[-1].variance <= self.limits.floor**2
+        last = self.stages[-1]
+        eigenstate = last.variance <= self.limits.floor**2 and last.gain <= self.limits.floor
+        return done or self.bounded or self.allowed <= LEAST_ALLOWED or eigenstate
 
     def repeat(self) -> None:
         """A stage at the truncation of the last one, after the chain was changed from outside."""
