@@ -8,7 +8,7 @@ from dataclasses import dataclass, field
 
 import numpy as np
 
-from manybody.quantum import blocks, contraction, lanczos, split
+from manybody.quantum import blocks, contraction, split
 from manybody.quantum.compiled import Scratch, shared_scratch
 from manybody.quantum.matrix_product_operator import OperatorSite, composite
 
@@ -127,34 +127,15 @@ class Chain:
         """An operator as compiled functions take it, weights in the number type of the tensors."""
         return operator.arrays(self.dtype)
 
-    def lowest(self, tensor, operator: OperatorSite, left: int, right: int, local, vectors: int, tolerance: float):
-        """(energy, tensor) of the lowest state of everything between two bonds; see lanczos.lowest."""
-        energy, tensor, _, _, needed = lanczos.lowest(
-            tensor, self.left[left], self.right[right], self.bonds[left].pair, self.bonds[right].pair, local,
-            self.arrays(operator), vectors, tolerance, self.scratch.array,
-        )  # fmt: skip
-        self.scratch.enlarge(needed)
-        return energy, tensor
-
     def advance(self, site: int) -> None:
         """Left environment of the next bond from the one of this bond and the (orthonormal) tensor of the site; the
         right one there is out of date from now on."""
         self.right[site + 1] = None
-        self.left[site + 1] = self._environment(
-            self.operators[site],
-            self.left[site],
-            self.bonds[site],
-            self.bonds[site + 1],
-            self.local[site],
-            self.tensor(site),
-        )
-
-    def _environment(self, operator: OperatorSite, before: np.ndarray, left: Bond, right: Bond, local, tensor):
-        environment, needed = contraction.environment(
-            tensor, before, left.pair, right.pair, local, self.arrays(operator), self.scratch.array
-        )
+        self.left[site + 1], needed = contraction.environment(
+            self.tensor(site), self.left[site], self.bonds[site].pair, self.bonds[site + 1].pair, self.local[site],
+            self.arrays(self.operators[site]), self.scratch.array,
+        )  # fmt: skip
         self.scratch.enlarge(needed)
-        return environment
 
     def rest(self) -> None:
         """Give the environments' memory back; `prepare` makes the chain fit for sweeps again."""

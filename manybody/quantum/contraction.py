@@ -16,6 +16,7 @@ import numpy as np
 
 from manybody.quantum.blocks import by_bra, by_ket, by_left, by_right, find, gather_into, lookup, to_ket
 from manybody.quantum.compiled import compiled, conjugate, room
+from manybody.quantum.products import PLAIN, TURNED, product
 
 FROM_T, TO_O, ASSIGN = 1, 2, 4
 NO_CHANNEL = np.int64(-1)  # typed: for a literal number, functions would be compiled once more
@@ -33,9 +34,10 @@ def plan(left_bond, right_bond, local, operator, end, skip, bra_bond):
     last move; moves (n, 8): flags (sum of FROM_T, TO_O, ASSIGN), offset and stride of the source, in A or in the T of
     this charge, and of the target, in U or in the result by left, rows, columns, place in the factors; factors (n,):
     one for a block that goes to U, one for every column of those that go to the result; second (n, 6): rows,
-    inner, columns, offsets in U, R, O; back (n, 6): offset and stride in O, the same in the result, rows, columns;
-    groups (n, 4): rows, columns, offset in U and in O per bra charge; sizes (5,): elements of A, T, U, O and of the
-    largest T of one charge; holes (n, 4): offset, stride, rows, columns of the blocks of U that no move reaches.
+    inner, columns, offsets in U, R, O; back (n, 7): offset and stride in O, the same in the result, rows, columns,
+    ASSIGN or 0; groups (n, 4): rows, columns, offset in U and in O per bra charge; sizes (5,): elements of A, T, U, O
+    and of the largest T of one charge; holes (n, 4): offset, stride, rows, columns of the blocks of U that no move
+    reaches.
     """
     left, left_dims = left_bond
     right, right_dims = right_bond
@@ -73,13 +75,14 @@ def plan(left_bond, right_bond, local, operator, end, skip, bra_bond):
     moves = np.empty((weights.size * left.size, 8), np.int64)
     factors = np.empty((weights.size - finishing) * left.size + finishing * right_dims.sum(), weights.dtype)
     written = np.zeros((delta_right.size, left.size, local.size), np.bool_)
+    begun = np.zeros((left.size, local.size), np.bool_)
     first = np.empty((left.size, 8), np.int64)
     t_size = 0
     t_largest = 0
     count = 0
     place = 0
     for i in range(left.size):
-        begun = count
+        first_move = count
         last_bra, last_source, last_goal = -1, -1, -1
         for entry in range(weights.size):
             a, b, out, into = entries[entry, 0], entries[entry, 1], entries[entry, 2], entries[entry, 3]
@@ -103,6 +106,9 @@ def plan(left_bond, right_bond, local, operator, end, skip, bra_bond):
                 # A letter that finishes an operator moves one local state after the other to the same rows: such
                 # neighbours are copied together.
                 flags += TO_O
+                if not begun[k, out]:
+                    flags += ASSIGN
+                    begun[k, out] = True
                 goal = a_start[k] + column[k, out]
                 goal_stride = width[k]
                 first_factor = place
@@ -130,7 +136,7 @@ def plan(left_bond, right_bond, local, operator, end, skip, bra_bond):
             move[0], move[1], move[2], move[3] = flags, source, width[i], goal
             move[4], move[5], move[6], move[7] = goal_stride, left_dims[k], columns, first_factor
             count += 1
-        first[i] = (l_height[i], left_dims[i], width[i], l_start[i], a_start[i], t_size, begun, count)
+        first[i] = (l_height[i], left_dims[i], width[i], l_start[i], a_start[i], t_size, first_move, count)
         t_size += l_height[i] * width[i]
         t_largest = max(t_largest, l_height[i] * width[i])
 
@@ -153,7 +159,7 @@ def plan(left_bond, right_bond, local, operator, end, skip, bra_bond):
         inner = groups[j, 1] if r_height[j] > 0 else 0
         second[j] = (groups[j, 0], inner, bra_dims[j], groups[j, 2], r_start[j], groups[j, 3])
 
-    back = np.empty((left.size * local.size, 6), np.int64)
+    back = np.empty((left.size * local.size, 7), np.int64)
     used = 0
     for i in range(left.size):
         for s in range(local.size):
@@ -163,6 +169,7 @@ def plan(left_bond, right_bond, local, operator, end, skip, bra_bond):
                 piece = back[used]
                 piece[0], piece[1], piece[2] = source, bra_dims[j], a_start[i] + column[i, s]
                 piece[3], piece[4], piece[5] = width[i], left_dims[i], bra_dims[j]
+                piece[6] = 0 if begun[i, s] else ASSIGN
                 used += 1
     sizes = np.array([a_size, t_size, u_size, o_size, t_largest])
     return first, moves[:count], factors[:place], second, back[:used], groups, sizes, holes
@@ -172,68 +179,73 @@ def plan(left_bond, right_bond, local, operator, end, skip, bra_bond):
 def multiply(tensor, environment, buffer, first):
     """The whole of T."""
     for g in range(first.shape[0]):
-        _product(tensor, environment, buffer, first[g], first[g, 5])
+        _to_part(tensor, environment, buffer, first[g, 5], first, g)
 
 
 @compiled
-def _product(tensor, environment, buffer, step, start):
-    m, k, n, e, t = step[0], step[1], step[2], step[3], step[4]
-    if m > 0 and n > 0:
-        np.dot(
-            environment[e : e + m * k].reshape(m, k),
-            tensor[t : t + k * n].reshape(k, n),
-            buffer[start : start + m * n].reshape(m, n),
-        )
+def _to_part(tensor, environment, buffer, start, first, g):
+    product(buffer, start, environment, first[g, 3], tensor, first[g, 4], first[g, 0], first[g, 1], first[g, 2])
 
 
 @compiled
 def apply(tensor, result, left, right, steps, buffers):
-    """result = H_eff tensor, both by left. buffers = (T of one charge, U, O), contents of no matter."""
+    """result = H_eff tensor, both by left. buffers = (T of one charge, U, O), U cleared, contents of no
+    matter otherwise."""
     second, back = steps[3], steps[4]
     _, stacked, grouped = buffers
-    result[:] = 0
     half(tensor, result, left, steps, buffers[:2])
     for g in range(second.shape[0]):
-        m, k, n, u, r, o = second[g]
-        if k > 0:
-            np.dot(
-                stacked[u : u + m * k].reshape(m, k),
-                right[r : r + k * n].reshape(k, n),
-                grouped[o : o + m * n].reshape(m, n),
-            )
-        else:
-            grouped[o : o + m * n] = 0
+        product(
+            grouped, second[g, 5], stacked, second[g, 3], right, second[g, 4], second[g, 0], second[g, 1], second[g, 2]
+        )
     for index in range(back.shape[0]):
-        source, source_stride, goal, goal_stride, rows, columns = back[index]
+        source, source_stride, goal = back[index, 0], back[index, 1], back[index, 2]
+        goal_stride, rows, columns = back[index, 3], back[index, 4], back[index, 5]
         for x in range(rows):
             u = grouped[source + x * source_stride : source + x * source_stride + columns]
             v = result[goal + x * goal_stride : goal + x * goal_stride + columns]
-            for y in range(columns):
-                v[y] += u[y]
+            if back[index, 6] == ASSIGN:
+                for y in range(columns):
+                    v[y] = u[y]
+            else:
+                for y in range(columns):
+                    v[y] += u[y]
+
+
+@compiled
+def clear(stacked, steps):
+    """Zero the blocks of U that no move reaches: once is enough for any number of uses of `half`."""
+    holes = steps[7]
+    for index in range(holes.shape[0]):
+        goal, stride, rows, columns = holes[index, 0], holes[index, 1], holes[index, 2], holes[index, 3]
+        for x in range(rows):
+            stacked[goal + x * stride : goal + x * stride + columns] = 0
 
 
 @compiled
 def half(tensor, result, left, steps, buffers):
-    """U in buffers[1], grouped by bra charge as in plan.groups; what goes past the right environment is added to
-    `result`, which may be any array where nothing does."""
-    first, moves, factors, _, _, _, _, holes = steps
+    """U in buffers[1], cleared before, grouped by bra charge as in plan.groups; what goes past the right environment is
+    put into `result`, which may be any array where nothing does."""
+    first, moves, factors = steps[0], steps[1], steps[2]
     part, stacked = buffers[0], buffers[1]
-    for index in range(holes.shape[0]):
-        goal, stride, rows, columns = holes[index]
-        for x in range(rows):
-            stacked[goal + x * stride : goal + x * stride + columns] = 0
     for i in range(first.shape[0]):
-        _product(tensor, left, part, first[i], 0)
+        _to_part(tensor, left, part, 0, first, i)
         for index in range(first[i, 6], first[i, 7]):
-            flags, source, source_stride, goal, goal_stride, rows, columns, place = moves[index]
+            flags, source, source_stride = moves[index, 0], moves[index, 1], moves[index, 2]
+            goal, goal_stride = moves[index, 3], moves[index, 4]
+            rows, columns, place = moves[index, 5], moves[index, 6], moves[index, 7]
             origin = part if flags & FROM_T else tensor
             if flags & TO_O:
                 scales = factors[place : place + columns]
                 for x in range(rows):
                     u = origin[source + x * source_stride : source + x * source_stride + columns]
                     v = result[goal + x * goal_stride : goal + x * goal_stride + columns]
-                    for y in range(columns):
-                        v[y] += scales[y] * u[y]
+                    if flags & ASSIGN:
+                        for y in range(columns):
+                            v[y] = scales[y] * u[y]
+                    else:
+                        for y in range(columns):
+                            v[y] += scales[y] * u[y]
                 continue
             factor = factors[place]
             if flags & ASSIGN:
@@ -261,13 +273,8 @@ def close(stacked, grouped, steps, dims):
     goal = 0
     bra = conjugate(grouped)
     for j in range(dims.size):
-        m, n, u, o = groups[j]
-        k = dims[j]
-        np.dot(
-            stacked[u : u + m * n].reshape(m, n).T,
-            bra[o : o + m * k].reshape(m, k),
-            environment[goal : goal + n * k].reshape(n, k),
-        )
+        m, n, k = groups[j, 0], groups[j, 1], dims[j]
+        product(environment, goal, stacked, groups[j, 2], bra, groups[j, 3], n, m, k, TURNED, PLAIN)
         goal += n * k
     return environment
 
@@ -283,6 +290,7 @@ def environment(tensor, before, left, right, local, operator, scratch):
     needed = c + tensor.size
     work = room(scratch, needed)
     to_ket(before, left[0], left[1], delta_left, start, work[:a])
+    clear(work[b:c], steps)
     half(tensor, tensor, work[:a], steps, (work[a:b], work[b:c]))
     gather_into(work[c:needed], tensor, left[0], left[1], right[0], right[1], local)
     return close(work[b:c], work[c:needed], steps, right[1]), needed

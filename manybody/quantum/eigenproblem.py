@@ -5,6 +5,8 @@ import numba
 import numpy as np
 from numba.extending import overload
 
+from manybody.quantum.compiled import compiled
+
 SMALL = 50
 """Rows up to which the solver below was measured to be faster than LAPACK (twice at 4 to 16 rows, by a third at 50)."""
 
@@ -21,6 +23,7 @@ def eigenvectors(matrix, values, rows):
     raise NotImplementedError
 
 
+@compiled
 def _by_library(matrix, values, rows):
     found, vectors = np.linalg.eigh(matrix)
     values[:] = found
@@ -29,9 +32,7 @@ def _by_library(matrix, values, rows):
 
 def _by_size(matrix, values, rows):
     if matrix.shape[0] > SMALL:
-        found, vectors = np.linalg.eigh(matrix)
-        values[:] = found
-        rows[:] = vectors.T
+        _by_library(matrix, values, rows)
         return
     if matrix.size == 1:
         values[0] = matrix[0, 0]
@@ -48,7 +49,9 @@ def _by_size(matrix, values, rows):
 
 @overload(eigenvectors)
 def _choose(matrix, values, rows):
-    return _by_library if isinstance(matrix.dtype, numba.types.Complex) else _by_size
+    if isinstance(matrix.dtype, numba.types.Complex):
+        return lambda matrix, values, rows: _by_library(matrix, values, rows)
+    return _by_size
 
 
 @reordering

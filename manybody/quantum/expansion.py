@@ -9,44 +9,30 @@ citations from memory.
 import numpy as np
 
 from manybody.quantum import blocks
-from manybody.quantum.chain import Bond, Chain
-from manybody.quantum.compiled import compiled, conjugate
+from manybody.quantum.compiled import compiled
 from manybody.quantum.contraction import environment
 from manybody.quantum.eigenproblem import eigenvectors
+from manybody.quantum.products import ADJOINT, PLAIN, TURNED, product
 from manybody.quantum.split import orthonormal_columns
-from manybody.quantum.variance import halves, two_site_residual
+from manybody.quantum.variance import halves, outside
 
 NEGLIGIBLE = 1e-14
 """Share of the residual's squared norm, relative to the operator's scale, below which a direction is rounding."""
 
 
-def expand(chain: Chain, site: int, fraction: float, limit: int, seed: int) -> None:
-    """Add about `fraction` of its dimension (at least 4 states) to the bond after the centre, at most up to `limit`.
-    The state itself is unchanged: the centre gets zeros. seed: of the random vectors, any integer."""
-    if limit > chain.bonds[site + 1].dimension:
-        residual = two_site_residual(chain, site)
-        chain.right[site + 1] = None  # of no use to the residual, and the new one should not lie beside it
-        centre, turned, charges, dims, outside, needed = enlarge(residual, fraction, limit, seed % 2**63)
-        del residual  # and with it the old scratch memory
-        chain.scratch.enlarge(needed)
-        chain.bonds[site + 1] = Bond(charges, dims)
-        chain.put(site, centre)
-        chain.tensors[site + 1] = turned
-        chain.turned[site + 1] = True
-        chain.right[site + 1] = outside
-
-
 @compiled
 def enlarge(residual, fraction, limit, seed):
-    """The centre with zeros and the next tensor, as seen from the far end, with its new states; charges and dims of the
-    bond between them and its right environment; scratch elements needed. residual: arguments of variance.halves."""
+    """The bond after the centre with about `fraction` more states, at least 4, up to `limit` in all: the centre with
+    zeros there, the next tensor, as seen from the far end, with its new states; charges and dims of the bond, its right
+    environment; scratch elements needed. The state itself is unchanged. residual: arguments of variance.halves; seed:
+    of the random vectors."""
     tensor, _, left, _, local, _, _, after, turned, turned_local, turned_operator, reach, total, scratch = residual
     charges, dims = reach
     near, far, own, groups, turned_groups, needed = halves(*residual)
     probes = samples(fraction, groups[:, 0], turned_groups[:, 0], dims)
     numbers = noise(seed, (probes * groups[:, 0]).sum(), tensor)
     present = dims.sum()
-    wanted = min(max(4, int(np.ceil(fraction * present))), limit - present)
+    wanted = max(min(max(4, int(np.ceil(fraction * present))), limit - present), 0)
     found, added = directions(near, far, own, groups, turned_groups, dims, probes, numbers, wanted, NEGLIGIBLE)
     stay = dims + added > 0
     bond = charges[stay], (dims + added)[stay]
@@ -110,24 +96,21 @@ def directions(near, far, own, groups, turned_groups, dims, probes, numbers, wan
     weights = np.zeros(probes.sum())
     scale = 0.0
     n_place, o_place, s_place, w_place = 0, 0, 0, 0
+    sketch = np.empty((probes * groups[:, 1]).max(), own.dtype)
     for g in range(count):
-        m, columns, u, _ = groups[g]
+        m, columns, u = groups[g, 0], groups[g, 1], groups[g, 2]
         r, v = turned_groups[g, 0], turned_groups[g, 2]
         k, d = probes[g], dims[g]
         if k > 0:
-            sketch = np.dot(
-                numbers[n_place : n_place + k * m].reshape(k, m), near[u : u + m * columns].reshape(m, columns)
-            )
-            flat = samples[s_place : s_place + r * k]
-            z = flat.reshape(r, k)
-            np.dot(far[v : v + r * columns].reshape(r, columns), np.ascontiguousarray(sketch.T), z)
-            scale += np.vdot(flat, flat).real
-            if d > 0:
-                b = own[o_place : o_place + r * d].reshape(r, d)
-                z -= np.dot(b, np.dot(conjugate(b).T, z))
-            states = np.empty((k, k), z.dtype)
-            eigenvectors(np.dot(conjugate(z).T, z), weights[w_place : w_place + k], states)
-            z[:] = np.dot(z, states.T)
+            z = np.empty(r * k, own.dtype)
+            product(sketch, 0, numbers, n_place, near, u, k, m, columns)
+            product(z, 0, far, v, sketch, 0, r, columns, k, PLAIN, TURNED)
+            scale += np.vdot(z, z).real
+            outside(z, own, o_place, r, d, k)
+            overlap, states = np.empty((k, k), own.dtype), np.empty((k, k), own.dtype)
+            product(overlap, 0, z, 0, z, 0, k, r, k, ADJOINT, PLAIN)
+            eigenvectors(overlap, weights[w_place : w_place + k], states)
+            product(samples, s_place, z, 0, states, 0, r, k, k, PLAIN, TURNED)
             weights[w_place : w_place + k] /= k
         n_place += k * m
         o_place += r * d
@@ -155,9 +138,7 @@ def directions(near, far, own, groups, turned_groups, dims, probes, numbers, wan
             z = np.ascontiguousarray(samples[s_place : s_place + r * k].reshape(r, k)[:, k - a :])
             z /= np.sqrt(k * weights[w_place + k - a : w_place + k])
             # Columns far smaller than before their projection have kept a part of what was projected out.
-            if d > 0:
-                b = own[o_place : o_place + r * d].reshape(r, d)
-                z -= np.dot(b, np.dot(conjugate(b).T, z))
+            outside(z.reshape(r * a), own, o_place, r, d, a)
             orthonormal_columns(z, found[goal : goal + r * a].reshape(r, a))
         o_place += r * d
         s_place += r * k

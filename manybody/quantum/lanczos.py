@@ -4,7 +4,7 @@ import numpy as np
 
 from manybody.quantum.blocks import to_ket
 from manybody.quantum.compiled import compiled, room
-from manybody.quantum.contraction import NO_CHANNEL, apply, plan
+from manybody.quantum.contraction import NO_CHANNEL, apply, clear, plan
 
 CHUNK = 2048
 """Elements of every vector that are worked on together: they stay in the innermost cache."""
@@ -32,6 +32,7 @@ def lowest(tensor, before, after, left, right, local, operator, vectors, toleran
     by_ket, buffers = work[:a], (work[a:b], work[b:c], work[c:d])
     basis = work[d:needed].reshape(vectors + 1, size)
     to_ket(before, left[0], left[1], delta_left, start, by_ket)
+    clear(buffers[1], steps)
 
     diagonal, beside = np.zeros(vectors), np.zeros(vectors)
     overlaps = np.zeros(vectors, tensor.dtype)

@@ -7,7 +7,7 @@ from dataclasses import dataclass, field
 
 import numpy as np
 
-from manybody.quantum import expansion, memory, one_site, two_site, variance
+from manybody.quantum import memory, one_site, two_site, variance
 from manybody.quantum.chain import Chain
 from manybody.quantum.extrapolation import Stage, energy_error
 from manybody.quantum.spectra import MISSED
@@ -161,12 +161,12 @@ class Run:
             if limits.pairs:
                 energy, lost = two_site.step(chain, site, self.ceiling, self.allowed, self.vectors, tolerance)
             else:
-                ceiling = self.ceiling + max(4, int(FRACTION * self.ceiling))
+                most = self.ceiling + max(4, int(FRACTION * self.ceiling))
                 # Not a stream of numbers: a run that is taken up again meets the same ones, though in another gauge.
                 seed = (self.seed + self.sweeps) * chain.length + site
-                expansion.expand(chain, site, FRACTION, ceiling, seed)
-                energy = one_site.solve(chain, site, self.vectors, tolerance)
-                lost = one_site.move(chain, site, self.ceiling, self.allowed)
+                energy, lost = one_site.step(
+                    chain, site, FRACTION, most, seed, self.ceiling, self.allowed, self.vectors, tolerance
+                )
             self.lost += lost
             self.cut |= bool(lost > LIMITED * self.allowed)
             self.site += 1

@@ -10,6 +10,7 @@ import numpy as np
 
 from manybody.quantum.compiled import compiled, conjugate
 from manybody.quantum.eigenproblem import eigenvectors
+from manybody.quantum.products import ADJOINT, PLAIN, product
 
 WORTHWHILE = 12
 """Sides from which on the columns of a Gram matrix are reduced; smaller eigenproblems are not worth it."""
@@ -36,12 +37,10 @@ def spectra(matrices, shapes, limit, allowed):
     for g in range(count):
         m, n = shapes[g]
         side = sides[g]
-        x = matrices[first : first + m * n].reshape(m, n)
-        gram = grams[place : place + side * side].reshape(side, side)
         if m <= n:
-            np.dot(x, conjugate(x).T, gram)
+            product(grams, place, matrices, first, matrices, first, m, n, m, PLAIN, ADJOINT)
         else:
-            np.dot(conjugate(x).T, x, gram)
+            product(grams, place, matrices, first, matrices, first, n, m, n, ADJOINT, PLAIN)
         first += m * n
         place += side * side
     norm = np.vdot(matrices, matrices).real
@@ -61,10 +60,13 @@ def spectra(matrices, shapes, limit, allowed):
         if 0 < rank == side:
             eigenvectors(grams[place : place + side * side].reshape(side, side), found, states)
         elif rank > 0:
-            factor = factors[place : place + rank * side].reshape(rank, side)
-            turn = np.empty((rank, rank), grams.dtype)
-            eigenvectors(np.dot(conjugate(factor), factor.T), found, turn)
-            np.dot(turn, factor, states)
+            overlap, turn = np.empty((rank, rank), grams.dtype), np.empty((rank, rank), grams.dtype)
+            product(overlap, 0, factors, place, factors, place, rank, side, rank, PLAIN, ADJOINT)
+            turned(overlap)  # QL wants the small elements first
+            eigenvectors(conjugate(overlap), found, turn)
+            for r in range(rank):
+                turned(turn[r : r + 1])
+            product(vectors, goal, turn, 0, factors, place, rank, rank, side)
             for r in range(rank):
                 if found[r] > 0:
                     states[r] *= 1 / np.sqrt(found[r])
@@ -73,6 +75,15 @@ def spectra(matrices, shapes, limit, allowed):
         first += rank
         goal += side * rank
     return weights, vectors, ranks, missing
+
+
+@compiled
+def turned(matrix):
+    """Reverse the order of rows and columns in place."""
+    flat = matrix.reshape(matrix.size)
+    for x in range(flat.size // 2):
+        y = flat.size - 1 - x
+        flat[x], flat[y] = flat[y], flat[x]
 
 
 @compiled
@@ -114,10 +125,18 @@ def columns(grams, sides, limit, allowed):
         factor = factors[start[g] : start[g] + side * side].reshape(side, side)
         row = factor[rank]
         row[:] = conjugate(grams[start[g] + i * side : start[g] + (i + 1) * side])
-        for r in range(rank):
+        r = 0
+        while r + 4 <= rank:  # four at a time: the row is read and written once
+            a, b, c, d = factor[r], factor[r + 1], factor[r + 2], factor[r + 3]
+            p, q, s, t = np.conj(a[i]), np.conj(b[i]), np.conj(c[i]), np.conj(d[i])
+            for x in range(side):
+                row[x] -= (p * a[x] + q * b[x]) + (s * c[x] + t * d[x])
+            r += 4
+        while r < rank:
             share, earlier = np.conj(factor[r, i]), factor[r]
             for x in range(side):
                 row[x] -= share * earlier[x]
+            r += 1
         scale = 1 / np.sqrt(largest[g])
         trace, most = 0.0, 0.0
         for x in range(side):

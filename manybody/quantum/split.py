@@ -5,6 +5,7 @@ import numpy as np
 
 from manybody.quantum import blocks
 from manybody.quantum.compiled import compiled, conjugate
+from manybody.quantum.products import ADJOINT, PLAIN, product
 from manybody.quantum.spectra import spectra
 
 
@@ -54,22 +55,23 @@ def parts(matrices, shapes, vectors, ranks, kept):
         side, rank = min(m, n), ranks[g]
         k = kept[g]
         if k > 0:
-            x = matrices[first : first + m * n].reshape(m, n)
             states = vectors[goal : goal + rank * side].reshape(rank, side)
             chosen = np.empty((side, k), matrices.dtype)
             for c in range(k):
                 chosen[:, c] = states[rank - 1 - c]
-            if rank < side:
-                raw = chosen.copy()
-                orthonormal_columns(raw, chosen)
             q_out = isometry[q_place : q_place + m * k].reshape(m, k)
-            c_out = carry[c_place : c_place + k * n].reshape(k, n)
-            if m <= n:
+            if m > n:
+                image = np.empty((m, k), matrices.dtype)
+                product(image, 0, matrices, first, chosen, 0, m, n, k)
+                r = orthonormal_columns(image, q_out)
+            elif rank == side:
                 q_out[:] = chosen
-                np.dot(conjugate(chosen).T, x, c_out)
             else:
-                r = orthonormal_columns(np.dot(x, chosen), q_out)
-                np.dot(r, conjugate(chosen).T, c_out)
+                orthonormal_columns(chosen, q_out)
+            if m > n and rank == side:
+                product(carry, c_place, r, 0, chosen, 0, k, k, n, PLAIN, ADJOINT)
+            else:
+                product(carry, c_place, isometry, q_place, matrices, first, k, m, n, ADJOINT, PLAIN)
         first += m * n
         goal += side * rank
         q_place += m * k
@@ -85,8 +87,9 @@ def orthonormal_columns(x, q):
     Comput. 23, 2165, from memory) mends them at a fraction of the cost of Householder reflections, which take over
     where the smallest columns are too far off.
     """
-    k = x.shape[1]
-    overlap = np.dot(conjugate(x).T, x)
+    m, k = x.shape
+    overlap = np.empty((k, k), x.dtype)
+    product(overlap, 0, x, 0, x, 0, k, m, k, ADJOINT, PLAIN)
     lengths = np.empty(k)
     for c in range(k):
         lengths[c] = np.sqrt(overlap[c, c].real)
@@ -102,7 +105,7 @@ def orthonormal_columns(x, q):
             for c in range(k):
                 for d in range(c + 1):
                     inverse[c, d] /= lengths[d]
-            np.dot(x, conjugate(inverse).T, q)
+            product(q, 0, x, 0, inverse, 0, m, k, k, PLAIN, ADJOINT)
             return np.ascontiguousarray(conjugate(factor).T) * lengths
     full, r = np.linalg.qr(x)
     q[:] = full
@@ -165,12 +168,7 @@ def carry_over(carry, kept, dims, tensor, widths):
     goal = 0
     for g in range(kept.size):
         k, n, w = kept[g], dims[g], widths[g]
-        if k > 0 and w > 0:
-            np.dot(
-                carry[c_place : c_place + k * n].reshape(k, n),
-                tensor[t_place : t_place + n * w].reshape(n, w),
-                result[goal : goal + k * w].reshape(k, w),
-            )
+        product(result, goal, carry, c_place, tensor, t_place, k, n, w)
         c_place += k * n
         t_place += n * w
         goal += k * w

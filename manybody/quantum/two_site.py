@@ -1,9 +1,10 @@
 """One step of a two-site sweep (White 1992): solve for a pair of sites, cut it between them, move the centre on."""
 
-import numpy as np
-
 from manybody.quantum import blocks, split
 from manybody.quantum.chain import Bond, Chain
+from manybody.quantum.compiled import compiled
+from manybody.quantum.contraction import environment
+from manybody.quantum.lanczos import lowest
 
 
 def step(chain: Chain, site: int, limit: int, allowed: float, vectors: int, tolerance: float) -> tuple[float, float]:
@@ -11,22 +12,54 @@ def step(chain: Chain, site: int, limit: int, allowed: float, vectors: int, tole
 
     limit, allowed: see split.choose. vectors, tolerance: see lanczos.lowest.
     """
-    local = chain.local[site : site + 2]
-    operator = chain.pair_operator(site)
-    energy, pair = chain.lowest(
-        join(chain, site), operator, site, site + 2, blocks.pair_charges(*local), vectors, tolerance
-    )
-    left, right = chain.bonds[site], chain.bonds[site + 2]
-    first, second, charges, dims, discarded = split.cut_pair(pair, *left.pair, *right.pair, *local, limit, allowed)
+    chain.right[site + 1] = None  # out of date, and the new left one should not lie beside it
+    energy, first, second, charges, dims, discarded, outside, needed = renew(
+        neighbours(chain, site), chain.left[site], chain.right[site + 2], chain.arrays(chain.pair_operator(site)),
+        chain.arrays(chain.operators[site]), limit, allowed, vectors, tolerance, chain.scratch.array,
+    )  # fmt: skip
+    chain.scratch.enlarge(needed)
     chain.bonds[site + 1] = Bond(charges, dims)
     chain.put(site, first)
     chain.put(site + 1, second)
-    chain.advance(site)
+    chain.left[site + 1] = outside
     return energy, discarded
 
 
-def join(chain: Chain, site: int) -> np.ndarray:
-    """The tensors of two neighbours (centre first) as one pair tensor by left."""
+def neighbours(chain: Chain, site: int) -> tuple:
+    """The tensors of a site, where the centre is, and the next one, whether that one is turned, the bonds and local
+    charges of both, the total charge: all that `join` needs."""
     left, middle, right = chain.bonds[site : site + 3]
-    local = chain.local[site : site + 2]
-    return split.join_pair(chain.tensor(site), chain.tensor(site + 1), *left.pair, *middle.pair, *right.pair, *local)
+    return (
+        chain.tensor(site), chain.tensors[site + 1], chain.turned[site + 1], left.pair, middle.pair, right.pair,
+        *chain.local[site : site + 2], chain.total,
+    )  # fmt: skip
+
+
+@compiled
+def join(pair):
+    """Two neighbouring site tensors as one pair tensor by left."""
+    first, second, turned, left, middle, right, first_local, second_local, total = pair
+    if turned:
+        second = blocks.mirror_tensor(
+            second, total - right[0], right[1], total - middle[0], middle[1], second_local, total
+        )
+    return split.join_pair(
+        first, second, left[0], left[1], middle[0], middle[1], right[0], right[1], first_local, second_local
+    )
+
+
+@compiled
+def renew(pair, before, after, both, operator, limit, allowed, vectors, tolerance, scratch):
+    """Energy, new tensors of the two sites by left, charges and dims of the bond between them, relative weight
+    discarded there, its left environment, scratch elements needed: all of a step in one call, because calls from
+    outside cost as much as small tensors do."""
+    _, _, _, left, _, right, first_local, second_local, _ = pair
+    local = blocks.pair_charges(first_local, second_local)
+    energy, tensor, _, _, needed = lowest(
+        join(pair), before, after, left, right, local, both, vectors, tolerance, scratch
+    )
+    first, second, charges, dims, discarded = split.cut_pair(
+        tensor, left[0], left[1], right[0], right[1], first_local, second_local, limit, allowed
+    )
+    outside, more = environment(first, before, left, (charges, dims), first_local, operator, scratch)
+    return energy, first, second, charges, dims, discarded, outside, max(needed, more)

@@ -9,8 +9,9 @@ import numpy as np
 
 from manybody.quantum import blocks, contraction
 from manybody.quantum.chain import Chain
-from manybody.quantum.compiled import compiled, conjugate, room
+from manybody.quantum.compiled import compiled, room
 from manybody.quantum.matrix_product_operator import OperatorSite
+from manybody.quantum.products import ADJOINT, PLAIN, TURNED, product
 
 
 def measure(chain: Chain) -> tuple[float, float]:
@@ -51,6 +52,7 @@ def _image(tensor, before, after, left, right, local, operator):
     buffers = (
         np.empty(sizes[4], tensor.dtype), np.empty(sizes[2], tensor.dtype), np.empty(sizes[3], tensor.dtype)
     )  # fmt: skip
+    contraction.clear(buffers[1], steps)
     result = np.empty_like(tensor)
     contraction.apply(tensor, result, by_ket, after, steps, buffers)
     return result
@@ -108,12 +110,26 @@ def halves(
     near, far, part = work[:near_size], work[near_size:both], work[kets:needed]
     by_ket = work[both : both + before.size]
     blocks.to_ket(before, left[0], left[1], operator[0], operator[2], by_ket)
+    contraction.clear(near, steps)
     contraction.half(tensor, tensor, by_ket, steps, (part, near))
     by_ket = work[both : both + after.size]
     blocks.to_ket(after, turned[0], turned[1], turned_operator[0], turned_operator[2], by_ket)
+    contraction.clear(far, turned_steps)
     contraction.half(turned_tensor, turned_tensor, by_ket, turned_steps, (part, far))
     own = blocks.gather_right(turned_tensor, turned[0], turned[1], turned_reach[0], turned_reach[1], turned_local)
     return near, far, own, steps[5], turned_steps[5], needed
+
+
+@compiled
+def outside(vectors, own, place, rows, states, columns):
+    """Project the columns of a (rows, columns) matrix, a flat array, to what is orthogonal to the orthonormal columns
+    of the (rows, states) matrix from own[place] on."""
+    if states > 0:
+        inside, share = np.empty(states * columns, own.dtype), np.empty(rows * columns, own.dtype)
+        product(inside, 0, own, place, vectors, 0, states, rows, columns, ADJOINT, PLAIN)
+        product(share, 0, own, place, inside, 0, rows, states, columns)
+        for x in range(share.size):
+            vectors[x] -= share[x]
 
 
 @compiled
@@ -125,11 +141,10 @@ def _outside(near, far, own, groups, turned_groups, dims):
         r, v = turned_groups[g, 0], turned_groups[g, 2]
         d = dims[g]
         if m > 0 and r > d and columns > 0:
-            x = far[v : v + r * columns].reshape(r, columns)
-            if d > 0:
-                b = own[place : place + r * d].reshape(r, d)
-                x = x - np.dot(b, np.dot(conjugate(b).T, x))
-            y = np.dot(near[u : u + m * columns].reshape(m, columns), np.ascontiguousarray(x.T))
-            total += np.sum((y * np.conj(y)).real)
+            x = far[v : v + r * columns].copy()
+            outside(x, own, place, r, d, columns)
+            y = np.empty(m * r, x.dtype)
+            product(y, 0, near, u, x, 0, m, columns, r, PLAIN, TURNED)
+            total += np.vdot(y, y).real
         place += r * d
     return total

@@ -235,24 +235,24 @@ class Products:
     steps: float = 0.0
 
     def after(self, function: Callable, shapes: Callable) -> Callable:
-        """The function, followed by products of the shapes that shapes(arguments, outcome) lists: (rows, inner,
-        columns) and how often."""
+        """The function, followed by products of the shapes (rows, inner, columns) that shapes(arguments, outcome)
+        lists."""
 
         def replaced(*arguments):
             outcome = function(*arguments)
             if self.counting:
-                self.repeat(*shapes(arguments, outcome))
+                self.repeat(shapes(arguments, outcome))
             return outcome
 
         return replaced
 
-    def repeat(self, shapes, times: int) -> None:
+    def repeat(self, shapes) -> None:
         shapes = np.asarray(shapes, np.int64).reshape(-1, 3)
         shapes = np.ascontiguousarray(shapes[shapes.min(axis=1, initial=1) > 0])
         begin = time.process_time()
-        self.multiply(shapes, times, self.source, self.target)
+        self.multiply(shapes, self.source, self.target)
         self.seconds += time.process_time() - begin
-        self.flops += 2.0 * times * float(shapes.prod(axis=1).sum())
+        self.flops += 2.0 * float(shapes.prod(axis=1).sum())
 
 
 def cut_shapes(shapes, ranks, kept) -> list[tuple[int, int, int]]:
@@ -262,8 +262,12 @@ def cut_shapes(shapes, ranks, kept) -> list[tuple[int, int, int]]:
         side = min(m, n)
         result.append((side, max(m, n), side))
         if r < side:
-            result += [(r, side, r), (r, r, side), (k, side, k), (side, k, k)]
-        result += [(k, m, n)] if m <= n else [(m, n, k), (k, m, k), (m, k, k), (k, k, n)]
+            result += [(r, side, r), (r, r, side)]
+        if m > n:
+            result.append((m, n, k))
+        if m > n or r < side:
+            result += [(k, m, k), (m, k, k)]
+        result.append((k, k, n) if m > n and r == side else (k, m, n))
     return result
 
 
@@ -280,90 +284,90 @@ def direction_shapes(groups, turned_groups, dims, probes, added) -> list[tuple[i
 def profile(names) -> None:
     """Share of matrix products in the steps of sweeps at the full bond dimension, and the other work of a step (of two
     runs the quicker, which other work of the machine disturbed less)."""
-    from manybody.quantum import blocks, contraction, expansion, lanczos, spectra, split
+    from manybody.quantum import blocks, contraction, expansion, lanczos, one_site, spectra, two_site
     from manybody.quantum.compiled import compiled
+    from manybody.quantum.products import product
     from manybody.quantum.schedule import Run
 
     @compiled
-    def multiply(shapes, times, source, target):
+    def multiply(shapes, source, target):
         place = 0
-        for _ in range(times):
-            for g in range(shapes.shape[0]):
-                m, k, n = shapes[g]
-                if place + (m + n) * k > source.size:
-                    place = 0
-                middle, end = place + m * k, place + (m + n) * k
-                np.dot(
-                    source[place:middle].reshape(m, k),
-                    source[middle:end].reshape(k, n),
-                    target[: m * n].reshape(m, n),
-                )
-                place = end
+        for g in range(shapes.shape[0]):
+            m, k, n = shapes[g, 0], shapes[g, 1], shapes[g, 2]
+            if place + (m + n) * k > source.size:
+                place = 0
+            product(target, 0, source, place, source, place + m * k, m, k, n)
+            place += (m + n) * k
 
     clock = Products(multiply, np.random.default_rng(0).standard_normal(8_000_000), np.empty(4_000_000))
 
-    def lowest(arguments, outcome):
-        _, _, _, left, right, local, operator, *_ = arguments
+    # Shapes (rows, inner, columns) of the products in the two kinds of steps. What a step does inside is done again
+    # here: its outcome does not tell all shapes.
+    def effective(left, right, local, operator):
         steps = contraction.plan(left, right, local, operator, operator[3], -1, right)
-        return np.concatenate([steps[0][:, :3], steps[3][:, :3]]), outcome[3]
+        return np.concatenate([steps[0][:, :3], steps[3][:, :3]])
 
-    def environment(arguments, outcome):
-        _, _, left, right, local, operator, _ = arguments
+    def environment(left, right, local, operator):
         steps = contraction.plan(left, right, local, operator, -1, operator[2], right)
         second = np.stack([steps[5][:, 1], steps[5][:, 0], right[1]], axis=1)
-        return np.concatenate([steps[0][:, :3], second]), 1
+        return np.concatenate([steps[0][:, :3], second])
 
-    def enlarge(arguments, outcome):
-        _, _, left, bond, local, operator, _, after, turned, turned_local, turned_operator, reach, total, _ = arguments[
-            0
-        ]
+    def enlarge(residual, fraction, bond_after):
+        _, _, left, bond, local, operator, _, _, turned, turned_local, turned_operator, reach, total, _ = residual
         near = contraction.plan(left, bond, local, operator, -1, operator[3], reach)
         turned_bond, turned_reach = (total - bond[0], bond[1]), (total - reach[0], reach[1])
         far = contraction.plan(turned, turned_bond, turned_local, turned_operator, -1, turned_operator[2], turned_reach)
         charges, dims = reach
         added = -dims
-        added[np.searchsorted(charges, outcome[2])] += outcome[3]
+        added[np.searchsorted(charges, bond_after[0])] += bond_after[1]
         added[added < 0] = 0
-        probes = expansion.samples(arguments[1], near[5][:, 0], far[5][:, 0], dims)
-        new = (None, after, turned, (total - outcome[2], outcome[3]), turned_local, turned_operator, None)
+        probes = expansion.samples(fraction, near[5][:, 0], far[5][:, 0], dims)
+        new = total - bond_after[0], bond_after[1]
         return np.concatenate(
             [
                 near[0][:, :3], far[0][:, :3], direction_shapes(near[5], far[5], dims, probes, added),
-                environment(new, None)[0],
+                environment(turned, new, turned_local, turned_operator),
             ]
-        ), 1  # fmt: skip
+        )  # fmt: skip
 
-    def cut(arguments, outcome):
-        _, left, left_dims, right, right_dims, local, *_ = arguments
-        height = blocks.by_right(left, left_dims, right, local)[1]
-        shapes = np.stack([height, right_dims], axis=1)
-        return cut_shapes(shapes, shapes.min(axis=1), outcome[2]), 1
+    def of_pairs(arguments, outcome):
+        pair, before, after, both, operator, limit, allowed, *rest = arguments
+        _, _, _, left, middle, right, first, second, _ = pair
+        around = *left, *right, first, second
+        rows, columns = blocks.by_right(*left, middle[0], first)[1], blocks.by_left(*middle, *right, second)[2]
+        local, kept = blocks.pair_charges(first, second), outcome[3:5]
+        found = lanczos.lowest(two_site.join(pair), before, after, left, right, local, both, *rest)
+        reached = blocks.reachable(left[0], right[0], first, second)
+        shapes = blocks.pair_shapes(reached, *around)
+        ranks = spectra.spectra(blocks.cut_pair(found[1], reached, *around), shapes, limit, allowed)[2]
+        dims = np.zeros_like(reached)
+        dims[np.searchsorted(reached, kept[0])] = kept[1]
+        return np.concatenate(
+            [
+                np.stack([rows, middle[1], columns], axis=1), *[effective(left, right, local, both)] * found[3],
+                cut_shapes(shapes, ranks, dims), environment(left, kept, first, operator),
+            ]
+        )  # fmt: skip
 
-    def cut_pair(arguments, outcome):
-        pair, *outer, limit, allowed = arguments
-        middle = blocks.reachable(outer[0], outer[2], *outer[4:])
-        shapes = blocks.pair_shapes(middle, *outer)
-        ranks = spectra.spectra(blocks.cut_pair(pair, middle, *outer), shapes, limit, allowed)[2]
-        kept = np.zeros_like(middle)
-        kept[np.searchsorted(middle, outcome[2])] = outcome[3]
-        return cut_shapes(shapes, ranks, kept), 1
+    def of_sites(arguments, outcome):
+        residual, fraction, most, seed, _, _, *rest = arguments
+        _, before, left, _, local, operator, _, _, turned, next_local, _, _, total, scratch = residual
+        centre, _, charges, dims, outside, _ = expansion.enlarge(residual, fraction, most, seed)
+        bond, kept, after = (charges, dims), outcome[3:5], (total - turned[0], turned[1])
+        found = lanczos.lowest(centre, before, outside, left, bond, local, operator, *rest, scratch)
+        shapes = np.stack([blocks.by_right(*left, charges, local)[1], dims], axis=1)
+        new = np.zeros_like(dims)
+        new[[charges.tolist().index(charge) for charge in kept[0]]] = kept[1]
+        return np.concatenate(
+            [
+                enlarge(residual, fraction, bond), *[effective(left, bond, local, operator)] * found[3],
+                cut_shapes(shapes, shapes.min(axis=1), new),
+                np.stack([new, dims, blocks.by_left(*bond, *after, next_local)[2]], axis=1),
+                environment(left, kept, local, operator),
+            ]
+        )  # fmt: skip
 
-    def join_pair(arguments, outcome):
-        _, _, left, left_dims, middle, middle_dims, right, right_dims, first, second = arguments
-        height = blocks.by_right(left, left_dims, middle, first)[1]
-        width = blocks.by_left(middle, middle_dims, right, right_dims, second)[2]
-        return np.stack([height, middle_dims, width], axis=1), 1
-
-    def pass_on(arguments, outcome):
-        _, _, kept, _, _, _, right, right_dims, after, after_dims, _, local = arguments
-        width = blocks.by_left(right, right_dims, after, after_dims, local)[2]
-        return np.stack([kept, right_dims, width], axis=1), 1
-
-    shapes = {
-        lanczos: (lowest,), contraction: (environment,), expansion: (enlarge,),
-        split: (cut, cut_pair, join_pair, pass_on),
-    }  # fmt: skip
-    real = [(module, f.__name__, getattr(module, f.__name__), f) for module, fs in shapes.items() for f in fs]
+    real = [(two_site, two_site.renew, of_pairs), (one_site, one_site.renew, of_sites)]
     real_sweep = Run._half_sweep
     full = 0
 
@@ -379,10 +383,10 @@ def profile(names) -> None:
         clock.counting = False
         return outcome
 
-    for module, name, function, listing in real:
-        setattr(module, name, clock.after(function, listing))
+    for module, function, listing in real:
+        module.renew = clock.after(function, listing)
     Run._half_sweep = half_sweep
-    clock.repeat([(1, 1, 1)], 1)
+    clock.repeat([(1, 1, 1)])
     try:
         print(f"dgemm peak {dgemm_peak():.1f} GFLOP/s")
         for name, case in cases().items():
@@ -408,8 +412,8 @@ def profile(names) -> None:
                     flush=True,
                 )
     finally:
-        for module, name, function, _ in real:
-            setattr(module, name, function)
+        for module, function, _ in real:
+            module.renew = function
         Run._half_sweep = real_sweep
 
 

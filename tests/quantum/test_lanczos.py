@@ -24,7 +24,7 @@ def test_energy_belongs_to_the_vector_and_falls_with_products(vectors):
         state.shift(site)
         state.advance(site)
     left, right, local = state.bonds[14], state.bonds[16], state.local[14:16]
-    pair = two_site.join(state, 14)
+    pair = two_site.join(two_site.neighbours(state, 14))
     operator = state.pair_operator(14)
     place = operator, 14, 16, blocks.pair_charges(*local)
     first = np.vdot(pair, variance.image(state, pair, *place)) / np.vdot(pair, pair)

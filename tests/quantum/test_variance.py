@@ -11,6 +11,7 @@ from spin_models import chain, complete, heisenberg
 from manybody.model import couplings
 from manybody.model.quantization import quantize
 from manybody.quantum import expansion, matrix_product_state, one_site, spin_flip, two_site, variance
+from manybody.quantum.chain import Bond
 from manybody.quantum.problem import prepare
 from manybody.quantum.sectors import start_chain
 
@@ -79,23 +80,36 @@ def test_variance_is_a_lower_estimate_for_longer_range():
     assert 0.3 * true < spread <= true * (1 + 1e-10)
 
 
+def expand(chain_, site, most, seed):
+    """Enlarge the bond after the centre by half and nothing else."""
+    residual = variance.two_site_residual(chain_, site)
+    centre, turned, charges, dims, outside, _ = expansion.enlarge(residual, 0.5, most, seed)
+    chain_.bonds[site + 1] = Bond(charges, dims)
+    chain_.put(site, centre)
+    chain_.tensors[site + 1], chain_.turned[site + 1] = turned, True
+    chain_.right[site + 1] = outside
+
+
 def test_expansion_leaves_the_state_and_helps_the_energy():
     op = heisenberg(10, chain(10), 1.0)
     problem, chain_, _ = started(op, 2, sweeps=2, bond=5)
     before = dense_state(problem, chain_)
     problem, chain_, _ = started(op, 2, sweeps=2, bond=5)
     bond = chain_.bonds[1].dimension
-    expansion.expand(chain_, 0, 0.5, 100, 3)
+    expand(chain_, 0, 100, 3)
     assert chain_.bonds[1].dimension > bond
     after = dense_state(problem, chain_)
     assert abs(abs(np.vdot(before, after)) - 1) < 1e-12
+    # No more than allowed: at the limit nothing is added, and the state still is the same.
+    bond = chain_.bonds[1].dimension
+    expand(chain_, 0, bond - 2, 4)
+    assert chain_.bonds[1].dimension == bond
+    assert abs(abs(np.vdot(before, dense_state(problem, chain_))) - 1) < 1e-12
     # One-site sweeps cannot leave the bonds they were given; with expansion they reach the ground state.
     problem, chain_, _ = started(op, 2, sweeps=2, bond=5)
     for sweep in range(10):
         for site in range(chain_.length - 1):
-            expansion.expand(chain_, site, 0.5, 200, 10 * sweep + site)
-            energy = one_site.solve(chain_, site, 4, 1e-12)
-            one_site.move(chain_, site, 150, 1e-14)
+            energy, _ = one_site.step(chain_, site, 0.5, 200, 10 * sweep + site, 150, 1e-14, 4, 1e-12)
         chain_.mirror()
     exact = -12.894560132211  # reference row A055
     assert abs(energy + problem.constant - exact) < 1e-8
@@ -114,9 +128,7 @@ def test_a_neel_state_is_left_by_both_kinds_of_step():
                 if pairs:
                     energy, _ = two_site.step(chain_, site, 60, 1e-12, 6, 1e-12)
                 else:
-                    expansion.expand(chain_, site, 0.5, 80, n * sweep + site)
-                    energy = one_site.solve(chain_, site, 6, 1e-12)
-                    one_site.move(chain_, site, 60, 1e-12)
+                    energy, _ = one_site.step(chain_, site, 0.5, 80, n * sweep + site, 60, 1e-12, 6, 1e-12)
             chain_.mirror()
         # Anderson's bound per bond lies below, the Neel energy -S^2 (n - 1) far above.
         assert energy < -1.13 * spin**2 * (n - 1)
@@ -144,7 +156,7 @@ def test_expansion_returns_the_environment_of_the_larger_bond(seed, conserved):
     op = random_operator(np.random.default_rng(seed), conserved)
     _, chain_, _ = started(op, seed, bond=3)
     for site in range(chain_.length - 1):
-        expansion.expand(chain_, site, 0.5, 30, site)
+        expand(chain_, site, 30, site)
         found = chain_.right[site + 1]
         # Advancing from the other end computes it from the tensors alone.
         chain_.mirror()
@@ -154,5 +166,4 @@ def test_expansion_returns_the_environment_of_the_larger_bond(seed, conserved):
         chain_.mirror()
         chain_.right[site + 1] = found
         np.testing.assert_allclose(found, own, atol=1e-12 * max(1.0, np.abs(own).max()))
-        one_site.solve(chain_, site, 3, 0.0)
-        one_site.move(chain_, site, 20, 1e-12)
+        one_site.step(chain_, site, 0.5, 30, site, 20, 1e-12, 3, 0.0)
