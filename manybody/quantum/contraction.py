@@ -189,8 +189,8 @@ def _to_part(tensor, environment, buffer, start, first, g):
 
 @compiled
 def apply(tensor, result, left, right, steps, buffers):
-    """result = H_eff tensor, both by left. buffers = (T of one charge, U, O), U cleared, contents of no
-    matter otherwise."""
+    """result = H_eff tensor, both by left. buffers = (T of one charge, U, O), U cleared before, contents of no matter
+    otherwise."""
     second, back = steps[3], steps[4]
     _, stacked, grouped = buffers
     half(tensor, result, left, steps, buffers[:2])

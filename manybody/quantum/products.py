@@ -25,9 +25,10 @@ def product(target, goal, left, source, right, origin, m, k, n, left_form=PLAIN,
     """target (m, n) = left (m, k) times right (k, n), each row-major from an element of a contiguous array on; a matrix
     that is not PLAIN lies there with its rows and columns exchanged. One number type, float64 or complex128."""
     if m > 0 and n > 0:
+        inner = max(k, 1)  # as a distance between columns, which the BLAS wants positive
         _gemm(
-            right_form, left_form, n, m, k, right, origin, n if right_form == PLAIN else k, left, source,
-            k if left_form == PLAIN else m, target, goal, n,
+            right_form, left_form, n, m, k, right, origin, n if right_form == PLAIN else inner, left, source,
+            inner if left_form == PLAIN else m, target, goal, n,
         )  # fmt: skip
 
 

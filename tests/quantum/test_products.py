@@ -34,13 +34,15 @@ def test_arrays_with_more_axes_count_as_flat():
     np.testing.assert_array_equal(target, a @ b)
 
 
-def test_nothing_to_add_up_gives_zeros():
-    target, empty = np.ones(7), np.empty(0)
-    product(target, 1, empty, 0, empty, 0, 2, 0, 2)
-    np.testing.assert_array_equal(target, [1, 0, 0, 0, 0, 1, 1])
-    product(target, 1, empty, 0, empty, 0, 0, 3, 2)
-    product(target, 1, empty, 0, empty, 0, 2, 3, 0)
-    np.testing.assert_array_equal(target, [1, 0, 0, 0, 0, 1, 1])
+@pytest.mark.parametrize("form", FORMS)
+def test_nothing_to_add_up_gives_zeros(form):
+    target, empty = np.array([1, np.nan, np.nan, np.nan, np.nan, 1]), np.empty(0)
+    product(target, 1, empty, 0, empty, 0, 2, 0, 2, form, form)
+    np.testing.assert_array_equal(target, [1, 0, 0, 0, 0, 1])
+    full = np.arange(6.0)
+    product(target, 0, empty, 0, full, 0, 0, 3, 2, form, form)
+    product(target, 0, full, 0, empty, 0, 2, 3, 0, form, form)
+    np.testing.assert_array_equal(target, [1, 0, 0, 0, 0, 1])
 
 
 @pytest.mark.parametrize(
