@@ -139,7 +139,8 @@ def _trusted_lines(view, name, verdict, size, tolerance):
         log_ticks(axis.yaxis, spin_text)
     axis.set_xlabel(name)
     axis.set_ylabel("smallest trustworthy spin")
-    axis.legend()
+    handles, names = axis.get_legend_handles_labels()
+    below(axis, dict(zip(names, handles, strict=True)))
     caption = (
         f"Smallest spin from which on the classical energy is within {tolerance:.0%} of the energy scale, {size} "
         "sites; open symbols are extrapolated beyond the largest spin computed. Bars: what the errors allow."
