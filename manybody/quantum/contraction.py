@@ -24,7 +24,7 @@ NO_CHANNEL = np.int64(-1)  # typed: for a literal number, functions would be com
 
 @compiled
 def plan(left_bond, right_bond, local, operator, end, skip, bra_bond):
-    """Everything `apply`, `half` and `close` need to know.
+    """Everything `apply`, `clear`, `half` and `close` need to know.
 
     Bonds: tuples (charges, dims). operator: OperatorSite.arrays in the number type of the tensors. The right channel
     `skip` is left out of U altogether, `end` goes to the result (-1: none). bra_bond: right bond of the result, the ket
@@ -224,8 +224,8 @@ def clear(stacked, steps):
 
 @compiled
 def half(tensor, result, left, steps, buffers):
-    """U in buffers[1], cleared before, grouped by bra charge as in plan.groups; what goes past the right environment is
-    put into `result`, which may be any array where nothing does."""
+    """U in buffers[1], cleared before, grouped by bra charge as in plan.groups. What goes past the right environment is
+    put into `result`, where blocks that nothing reaches stay as they are; any array will do where nothing goes past."""
     first, moves, factors = steps[0], steps[1], steps[2]
     part, stacked = buffers[0], buffers[1]
     for i in range(first.shape[0]):

@@ -1,9 +1,11 @@
 """One step of a one-site sweep: enlarge the bond ahead (see expansion), solve for one site, cut it, move the centre
 on."""
 
+import numpy as np
+
 from manybody.quantum import blocks, split
 from manybody.quantum.chain import Bond, Chain
-from manybody.quantum.compiled import compiled
+from manybody.quantum.compiled import compiled, sound
 from manybody.quantum.contraction import environment
 from manybody.quantum.expansion import enlarge
 from manybody.quantum.lanczos import lowest
@@ -17,7 +19,8 @@ def step(
     """Energy of the site and relative weight discarded at the bond after it; the centre moves to the next site.
 
     The bond grows by about `fraction` of its dimension, by at least 4 states and up to `most`; seed: of the random
-    vectors behind them, any integer. limit, allowed: see split.choose. vectors, tolerance: see lanczos.lowest.
+    vectors behind them, any integer. limit, allowed: see split.choose. vectors, tolerance: see lanczos.lowest. Raises
+    FloatingPointError where the state is zero or something is no number; the chain then is of no more use.
     """
     residual = two_site_residual(chain, site)
     chain.right[site + 1] = None  # of no use to the residual, and the new one should not lie beside it
@@ -25,6 +28,8 @@ def step(
         residual, fraction, most, seed % 2**63, limit, allowed, vectors, tolerance
     )
     del residual  # and with it the old scratch memory
+    if np.isnan(energy):
+        raise FloatingPointError(f"the tensors at sites {site} and {site + 1} are zero or have overflowed")
     chain.scratch.enlarge(needed)
     chain.bonds[site + 1] = Bond(charges, dims)
     chain.put(site, first)
@@ -37,13 +42,18 @@ def step(
 def renew(residual, fraction, most, seed, limit, allowed, vectors, tolerance):
     """Energy, new tensors of the site and the next by left, charges and dims of the bond between them, relative weight
     discarded there, its left environment, scratch elements needed: all of a step in one call, because calls from
-    outside cost as much as small tensors do."""
-    _, before, left, _, local, operator, _, _, turned, next_local, _, _, total, scratch = residual
+    outside cost as much as small tensors do. The energy is nan, and nothing else means anything, where numbers
+    failed."""
+    tensor, before, left, _, local, operator, following, _, turned, next_local, _, _, total, scratch = residual
+    if not (sound(tensor) and sound(following)):
+        return np.nan, tensor, tensor, left[0], left[1], 0.0, tensor, 0
     centre, further, charges, dims, outside, needed = enlarge(residual, fraction, most, seed)
     right, after = (charges, dims), (total - turned[0], turned[1])
     energy, centre, _, _, more = lowest(
         centre, before, outside, left, right, local, operator, vectors, tolerance, scratch
     )
+    if not (np.isfinite(energy) and sound(centre)):
+        return np.nan, tensor, tensor, left[0], left[1], 0.0, tensor, needed
     isometry, carry, kept, discarded = split.cut(centre, left[0], left[1], charges, dims, local, limit, allowed)
     following = blocks.mirror_tensor(further, turned[0], turned[1], total - charges, dims, next_local, total)
     first, second, charges, dims = split.pass_on(

@@ -24,12 +24,13 @@ for _name in _NAMES.values():
 def product(target, goal, left, source, right, origin, m, k, n, left_form=PLAIN, right_form=PLAIN):
     """target (m, n) = left (m, k) times right (k, n), each row-major from an element of a contiguous array on; a matrix
     that is not PLAIN lies there with its rows and columns exchanged. One number type, float64 or complex128."""
-    if m > 0 and n > 0:
-        inner = max(k, 1)  # as a distance between columns, which the BLAS wants positive
+    if m > 0 and n > 0 and k > 0:
         _gemm(
-            right_form, left_form, n, m, k, right, origin, n if right_form == PLAIN else inner, left, source,
-            inner if left_form == PLAIN else m, target, goal, n,
+            right_form, left_form, n, m, k, right, origin, n if right_form == PLAIN else k, left, source,
+            k if left_form == PLAIN else m, target, goal, n,
         )  # fmt: skip
+    elif k == 0:
+        target.reshape(target.size)[goal : goal + m * n] = 0
 
 
 @intrinsic
@@ -38,8 +39,10 @@ def _gemm(typing, first_form, second_form, m, n, k, first, a, first_step, second
     adding to the target."""
     arrays = first, second, target
     fits = all(isinstance(x, types.Array) and x.layout == "C" and x.dtype == target.dtype for x in arrays)
-    if not fits or target.dtype not in _NAMES:
-        raise numba.TypingError(f"no product of {arrays}: contiguous arrays of float64 or of complex128 are needed")
+    if not fits or not target.mutable or target.dtype not in _NAMES:
+        raise numba.TypingError(
+            f"no product of {arrays}: contiguous arrays of float64 or of complex128 are needed, to write to"
+        )
     name = f"manybody_{_NAMES[target.dtype]}"
     given = first_form, second_form, m, n, k, first, a, first_step, second, b, second_step, target, c, step
 
@@ -51,7 +54,7 @@ def _gemm(typing, first_form, second_form, m, n, k, first, a, first_step, second
             return place
 
         def integer(index):
-            # 64 bits: a library with shorter integers reads the lower half.
+            # 64 bits: a library with shorter integers reads the lower half, which comes first.
             return stored(context.cast(builder, values[index], signature.args[index], types.int64))
 
         def matrix(array, offset):

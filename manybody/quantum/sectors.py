@@ -121,8 +121,8 @@ class SectorSearch:
     def search(self, first: int) -> int:
         """The total charge of lowest energy: downhill from `first`, then from any probe that lies lower.
 
-        Probes are all charges where they are few, else the ends and the charges half way to them, since energies need
-        not be convex in the charge.
+        Probes are all charges where they are few, else the opposite one (an easy axis makes both signs of a moment
+        minima), the ends and the charges half way to them, since energies need not be convex in the charge.
         """
         best = self._downhill(int(np.clip(first, self.lowest, self.highest)))
         if self.multiplets:
@@ -130,7 +130,8 @@ class SectorSearch:
         elif self.highest - self.lowest <= FEW:
             probes = list(range(self.lowest, self.highest + 1))
         else:
-            probes = [self.lowest, self.highest, (self.lowest + best) // 2, (best + self.highest) // 2]
+            probes = [self.lowest + self.highest - best, self.lowest, self.highest]
+            probes += [(self.lowest + best) // 2, (best + self.highest) // 2]
         for total in probes:
             if total != best and self._better(total, best):
                 best = self._downhill(total)

@@ -8,29 +8,47 @@ from manybody.quantum.compiled import compiled, conjugate
 from manybody.quantum.products import ADJOINT, PLAIN, product
 from manybody.quantum.spectra import spectra
 
+FEW = 16
+"""States of a bond up to which no charge is cut away for its weight: of many, one that matters comes back."""
+
 
 @compiled
 def choose(weights, ranks, missing, limit, allowed):
     """How many states to keep per group, and the relative weight discarded: the smallest go first while at most `limit`
     states stay or the discarded share stays below `allowed`. At least one stays; weights at rounding level never stay.
-    For the first three arguments see spectra."""
+    For the first three arguments see spectra.
+
+    Where FEW states or less stay, the heaviest of a charge goes only if the limit asks for it: steps of two sites do
+    not bring back a charge that is lost if spins are flipped beyond neighbours.
+    """
     order = np.argsort(weights)
     total = weights.sum() + missing
     least = 1e-16 * total
-    discarded = missing
-    dropped = 0
-    while dropped < weights.size - 1:
-        weight = weights[order[dropped]]
-        if weight > least and weights.size - dropped <= limit and discarded + weight > allowed * total:
-            break
-        discarded += weight
-        dropped += 1
-    kept = np.zeros(ranks.size, np.int64)
-    cut = np.ones(weights.size, np.bool_)
-    cut[order[:dropped]] = False
+    heaviest = np.zeros(weights.size, np.bool_)
     place = 0
     for g in range(ranks.size):
-        kept[g] = cut[place : place + ranks[g]].sum()
+        place += ranks[g]
+        if ranks[g] > 0:
+            heaviest[place - 1] = True
+    chosen = np.ones(weights.size, np.bool_)
+    discarded = missing
+    stay = weights.size
+    for index in order:
+        weight = weights[index]
+        if stay == 1:
+            break
+        if weight > least and stay <= limit:
+            if discarded + weight > allowed * total:
+                break
+            if heaviest[index] and stay <= FEW:
+                continue
+        discarded += weight
+        chosen[index] = False
+        stay -= 1
+    kept = np.zeros(ranks.size, np.int64)
+    place = 0
+    for g in range(ranks.size):
+        kept[g] = chosen[place : place + ranks[g]].sum()
         place += ranks[g]
     return kept, discarded / total
 

@@ -26,7 +26,7 @@ from manybody.workflow.document import Document, Settings
 from manybody.workflow.entries import RESERVED
 from manybody.workflow.problems import DocumentError, Fault, Problem
 
-RESULTS_VERSION = 2
+RESULTS_VERSION = 3
 """Raised by hand whenever the same point would give other numbers than before: old results then count as missing."""
 
 

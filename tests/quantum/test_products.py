@@ -36,9 +36,11 @@ def test_arrays_with_more_axes_count_as_flat():
 
 @pytest.mark.parametrize("form", FORMS)
 def test_nothing_to_add_up_gives_zeros(form):
-    target, empty = np.array([1, np.nan, np.nan, np.nan, np.nan, 1]), np.empty(0)
-    product(target, 1, empty, 0, empty, 0, 2, 0, 2, form, form)
-    np.testing.assert_array_equal(target, [1, 0, 0, 0, 0, 1])
+    empty = np.empty(0)
+    for m, n in [(2, 2), (1, 4), (4, 1)]:
+        target = np.array([1, np.nan, np.nan, np.nan, np.nan, 1])
+        product(target, 1, empty, 0, empty, 0, m, 0, n, form, form)
+        np.testing.assert_array_equal(target, [1, 0, 0, 0, 0, 1])
     full = np.arange(6.0)
     product(target, 0, empty, 0, full, 0, 0, 3, 2, form, form)
     product(target, 0, full, 0, empty, 0, 2, 3, 0, form, form)
@@ -51,9 +53,10 @@ def test_nothing_to_add_up_gives_zeros(form):
         (np.zeros(4), np.zeros(4, complex), np.zeros(4)),
         (np.zeros(4, np.float32), np.zeros(4, np.float32), np.zeros(4, np.float32)),
         (np.zeros((2, 4))[:, :2], np.zeros(4), np.zeros(4)),
+        (np.frombuffer(bytes(32)), np.zeros(4), np.zeros(4)),
     ],
 )
-def test_other_number_types_and_strides_are_refused(arrays):
+def test_arrays_of_other_kinds_are_refused(arrays):
     target, left, right = arrays
     with pytest.raises(numba.TypingError, match="contiguous arrays of float64 or of complex128"):
         product(target, 0, left, 0, right, 0, 2, 2, 2)

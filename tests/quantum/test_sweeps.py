@@ -155,6 +155,30 @@ def test_sectors_of_ferromagnets_fields_and_ferrimagnets():
         np.testing.assert_allclose(np.abs(found.sector_axis), [0, 0.6, 0.8], atol=1e-9)
 
 
+@pytest.mark.parametrize("sign", [1.0, -1.0])
+def test_the_other_sign_of_a_moment_is_found_from_the_wrong_one(sign):
+    # A ferrimagnet with an easy axis has a minimum at either sign of its moment; a weak field decides.
+    n, spins = 8, [1.5, 0.5] * 4
+    f = couplings.exchange(n, chain(n), [1.0, 1.0, 1.8]) + couplings.field(n, range(n), [0, 0, 0.05 * sign])
+    op = quantize(f, spins)
+    start = np.eye(3)[np.full(n, 2)] * (-sign * (-1.0) ** np.arange(n))[:, None]
+    found, exact = solve(op, start=start, accuracy=1e-8), exact_ground_state(op)
+    assert found.sector == exact.sector == 4 * sign
+    assert abs(found.energy - exact.energy) <= found.error + exact.error
+
+
+def test_a_single_flip_that_hops_beyond_neighbours_reaches_every_site():
+    # The weight on the last three sites is 1e-6, less than the first stage may lose, and once they are lost no pair of
+    # neighbours could win them back.
+    pairs = [(0, 4), (3, 4), (1, 4), (1, 5), (2, 5), (2, 6)]
+    across, along = [-0.62, -1.06, -0.24, 0.16, 2.33, -0.43], [-0.58, -1.14, -0.34, 0.12, 2.41, -0.72]
+    matrices = np.array([np.diag([x, x, z]) for x, z in zip(across, along, strict=True)])
+    op = quantize(couplings.exchange(7, pairs, matrices) + couplings.field(7, range(7), [0, 0, 0.9]), 0.5)
+    found, exact = solve(op, accuracy=1e-8), exact_ground_state(op)
+    assert found.sector == exact.sector == 2.5
+    assert abs(found.energy - exact.energy) <= found.error + exact.error
+
+
 def test_free_end_spins_of_a_spin_one_chain_do_not_pass_for_the_ground_state():
     # The lowest state of S^z = 1 is the triplet; from 24 to 36 sites its distance falls exponentially (Kennedy 1990,
     # from memory:

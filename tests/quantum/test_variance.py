@@ -1,5 +1,7 @@
 """Energies, variances and single steps of the sweeps against dense linear algebra."""
 
+import sys
+
 import numpy as np
 import pytest
 from dense import dense_operator, seeds
@@ -167,3 +169,21 @@ def test_expansion_returns_the_environment_of_the_larger_bond(seed, conserved):
         chain_.right[site + 1] = found
         np.testing.assert_allclose(found, own, atol=1e-12 * max(1.0, np.abs(own).max()))
         one_site.step(chain_, site, 0.5, 30, site, 20, 1e-12, 3, 0.0)
+
+
+@pytest.mark.parametrize("kind", [two_site, one_site])
+def test_a_step_on_what_is_no_number_says_so_and_gives_its_memory_back(kind):
+    _, chain_, _ = started(heisenberg(6, chain(6), 1.0), 3)
+    chain_.scratch.array = np.empty(100_000)
+    chain_.put(0, np.full_like(chain_.tensor(0), np.nan))
+    given = (0.5, 20, 1) if kind is one_site else ()
+    references = sys.getrefcount(chain_.scratch.array)
+    told = []
+    for _ in range(3):
+        try:
+            kind.step(chain_, 0, *given, 20, 1e-12, 3, 0.0)
+        except FloatingPointError as error:
+            told.append(str(error))
+    # An assertion would keep the array itself: hence the number.
+    left_over = sys.getrefcount(chain_.scratch.array) - references
+    assert len(told) == 3 and all("sites 0 and 1" in text for text in told) and left_over == 0
