@@ -14,7 +14,7 @@ from manybody.quantum.spectra import MISSED
 
 FIRST_ALLOWED = 1e-6
 LEAST_ALLOWED = 1e-15
-SWEEPS, MOST_SWEEPS = 8, 24
+SWEEPS, MOST_SWEEPS, MOST_STAGES = 8, 24, 40
 CRAWL = 0.8
 FRACTION = 0.3
 GROWTH, FIRST_BOND = 2, 64
@@ -94,7 +94,10 @@ class Run:
         done = len(self.stages) > 2 and self.error <= max(self.limits.goal, 2 * self.limits.floor)
         last = self.stages[-1]
         eigenstate = last.variance <= self.limits.floor**2 and last.gain <= self.limits.floor
-        return done or self.bounded or self.allowed <= LEAST_ALLOWED or eigenstate
+        # Slow sweeps of a few sites fall on when nothing is cut any more.
+        falls = len(self.stages) in range(2, MOST_STAGES) and self.stages[-2].energy - last.energy > self.limits.goal
+        exhausted = self.allowed <= LEAST_ALLOWED and not falls
+        return done or self.bounded or exhausted or eigenstate
 
     def repeat(self) -> None:
         """A stage at the truncation of the last one, after the chain was changed from outside."""
