@@ -137,6 +137,19 @@ class Chain:
         )  # fmt: skip
         self.scratch.enlarge(needed)
 
+    def renewed(self, site: int, outcome: tuple) -> tuple[float, float]:
+        """Take over what a step has made of two sites (outcome of two_site.renew, one_site.renew) and move the centre
+        to the second; energy and relative weight discarded. Raises FloatingPointError where numbers failed."""
+        energy, first, second, charges, dims, discarded, outside, needed = outcome
+        if np.isnan(energy):
+            raise FloatingPointError(f"the tensors at sites {site} and {site + 1} are zero or have overflowed")
+        self.scratch.enlarge(needed)
+        self.bonds[site + 1] = Bond(charges, dims)
+        self.put(site, first)
+        self.put(site + 1, second)
+        self.left[site + 1] = outside
+        return energy, discarded
+
     def rest(self) -> None:
         """Give the environments' memory back; `prepare` makes the chain fit for sweeps again."""
         self.left[1:] = [None] * self.length

@@ -4,7 +4,7 @@ on."""
 import numpy as np
 
 from manybody.quantum import blocks, split
-from manybody.quantum.chain import Bond, Chain
+from manybody.quantum.chain import Chain
 from manybody.quantum.compiled import compiled, sound
 from manybody.quantum.contraction import environment
 from manybody.quantum.expansion import enlarge
@@ -24,18 +24,9 @@ def step(
     """
     residual = two_site_residual(chain, site)
     chain.right[site + 1] = None  # of no use to the residual, and the new one should not lie beside it
-    energy, first, second, charges, dims, discarded, outside, needed = renew(
-        residual, fraction, most, seed % 2**63, limit, allowed, vectors, tolerance
-    )
+    outcome = renew(residual, fraction, most, seed % 2**63, limit, allowed, vectors, tolerance)
     del residual  # and with it the old scratch memory
-    if np.isnan(energy):
-        raise FloatingPointError(f"the tensors at sites {site} and {site + 1} are zero or have overflowed")
-    chain.scratch.enlarge(needed)
-    chain.bonds[site + 1] = Bond(charges, dims)
-    chain.put(site, first)
-    chain.put(site + 1, second)
-    chain.left[site + 1] = outside
-    return energy, discarded
+    return chain.renewed(site, outcome)
 
 
 @compiled

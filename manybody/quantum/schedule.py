@@ -95,7 +95,7 @@ class Run:
         last = self.stages[-1]
         eigenstate = last.variance <= self.limits.floor**2 and last.gain <= self.limits.floor
         # Slow sweeps of a few sites fall on when nothing is cut any more.
-        falls = len(self.stages) in range(2, MOST_STAGES) and self.stages[-2].energy - last.energy > self.limits.goal
+        falls = 2 <= len(self.stages) < MOST_STAGES and self.stages[-2].energy - last.energy > self.limits.goal
         exhausted = self.allowed <= LEAST_ALLOWED and not falls
         return done or self.bounded or exhausted or eigenstate
 

@@ -272,17 +272,15 @@ class _Solver:
         return True
 
     def _guard(self, run: Run, other: Run | None) -> Run:
-        """A cheap second run from random directions in the same sector, coarser than the first, but not where that
-        passes for an eigenstate: the variance may miss terms beyond neighbours, which a state of few local states that
-        can move at all never meets. `other`: if it is begun already."""
+        """A cheap second run from random directions in the same sector, coarser than the first; `other`, if it is begun
+        already."""
         if other is None:
             random = self.rng.standard_normal((self.op.sites, 3))
             random /= np.linalg.norm(random, axis=1, keepdims=True)
             chain = start_chain(self.problem, self.problem.directions(random), run.chain.total)
             other = self._kept("guard", self._run(chain))
         run.chain.rest()
-        exact = run.stages[-1].variance <= self.limits.floor**2
-        other.pursue(lambda: exact or 2 * other.chain.bond_dimension <= run.chain.bond_dimension)
+        other.pursue(lambda: 2 * other.chain.bond_dimension <= run.chain.bond_dimension)
         return other
 
     def _result(self, run: Run, other: Run) -> GroundState:

@@ -3,7 +3,7 @@
 import numpy as np
 
 from manybody.quantum import blocks, split
-from manybody.quantum.chain import Bond, Chain
+from manybody.quantum.chain import Chain
 from manybody.quantum.compiled import compiled, sound
 from manybody.quantum.contraction import environment
 from manybody.quantum.lanczos import lowest
@@ -16,18 +16,11 @@ def step(chain: Chain, site: int, limit: int, allowed: float, vectors: int, tole
     is zero or something is no number; the chain then is of no more use.
     """
     chain.right[site + 1] = None  # out of date, and the new left one should not lie beside it
-    energy, first, second, charges, dims, discarded, outside, needed = renew(
+    outcome = renew(
         neighbours(chain, site), chain.left[site], chain.right[site + 2], chain.arrays(chain.pair_operator(site)),
         chain.arrays(chain.operators[site]), limit, allowed, vectors, tolerance, chain.scratch.array,
     )  # fmt: skip
-    if np.isnan(energy):
-        raise FloatingPointError(f"the tensors at sites {site} and {site + 1} are zero or have overflowed")
-    chain.scratch.enlarge(needed)
-    chain.bonds[site + 1] = Bond(charges, dims)
-    chain.put(site, first)
-    chain.put(site + 1, second)
-    chain.left[site + 1] = outside
-    return energy, discarded
+    return chain.renewed(site, outcome)
 
 
 def neighbours(chain: Chain, site: int) -> tuple:

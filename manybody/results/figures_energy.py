@@ -123,7 +123,7 @@ def convergence(view):
     axis.set_xlabel("bond dimension")
     axis.set_ylabel(f"energy per site above the\nlower end of its error\n({unit_text(view.unit)})")
     handles, names = axis.get_legend_handles_labels()
-    below(axes[0, 0], dict(zip(names, handles, strict=True)))
+    below(axis, dict(zip(names, handles, strict=True)))
     more = f" The first {len(shown)} of {len(curves)} points." if len(curves) > len(shown) else ""
     caption = (
         "Convergence of the quantum energy with bond dimension, measured from the lower end of the final 95 % error: "
